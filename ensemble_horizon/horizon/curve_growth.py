@@ -1,0 +1,122 @@
+"""The fitted law of single curves, with intervals from the sampling of members."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import special
+
+from ensemble_horizon.growth.law import Law
+from ensemble_horizon.growth.laws import LAWS
+from ensemble_horizon.growth.selection import select_law
+from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
+from ensemble_horizon.spread.sampling import LeadNoise
+
+LN2 = float(np.log(2.0))
+QUANTITIES = ("growth_rate", "initial_error", "saturation")
+
+
+@dataclass(frozen=True)
+class Growth:
+    """The fitted law of one curve.
+
+    Parameters
+    ----------
+    law : str
+        Name of the law, "none" where there is no fit.
+    fitted : (L,) values of the law at the leads
+    values : mapping
+        ``growth_rate``, ``doubling_time``, ``initial_error``, ``saturation``, each also with
+        ``_low`` and ``_high``, ``doubling_time_at_start``, and the parameters of all laws; NaN
+        where the law has none, infinite where errors never double.
+    parameters : (P,) of the law
+    saturation_pull : (L,) or None
+        Derivative of ln(saturation) with respect to ln(curve) at each lead.
+    """
+
+    law: str
+    fitted: np.ndarray
+    values: dict[str, float]
+    parameters: np.ndarray
+    saturation_pull: np.ndarray | None
+
+
+def growth_of_curves(
+    lead: np.ndarray,
+    spreads: np.ndarray,
+    noises: list[LeadNoise],
+    law: str,
+    scale: str,
+    confidence: float,
+) -> list[Growth]:
+    """Fit N curves (N, L) and give what they say its interval.
+
+    The interval is first order: the noise of ln(spread) between leads carried through the
+    derivative of the fit. It is conditional on the law.
+    """
+    selection = select_law(lead, spreads, None if law == "auto" else [law], scale=scale)
+    found = [_nothing(lead) for _ in noises]
+    for record, rows, parameters in chosen_groups(selection):
+        for row, own in zip(rows, parameters, strict=True):
+            found[row] = _growth_of(
+                lead, spreads[row], noises[row], record, own[np.newaxis], scale, confidence
+            )
+    return found
+
+
+def _growth_of(
+    lead: np.ndarray,
+    spread: np.ndarray,
+    noise: LeadNoise,
+    law: Law,
+    parameters: np.ndarray,
+    scale: str,
+    confidence: float,
+) -> Growth:
+    covariance = noise.log_spread_covariance()
+    quantile = noise.inflation * float(special.ndtri(1 - (1 - confidence) / 2))
+    usable = np.isfinite(spread)[np.newaxis] & (spread > 0)
+    values = _empty_values()
+    values.update(zip(law.parameters, map(float, parameters[0]), strict=True))
+    pull = None
+    for quantity in QUANTITIES:
+        value = float(getattr(law, quantity)(parameters)[0])
+        weight = quantity_sensitivity(law, quantity, parameters, lead, usable, scale)[0]
+        error = float(np.sqrt(max(weight @ covariance @ weight, 0.0)))
+        low, high = _interval(quantity, value, quantile * error)
+        values.update({quantity: value, f"{quantity}_low": low, f"{quantity}_high": high})
+        if quantity == "saturation" and np.isfinite(value):
+            pull = weight / value
+    for end, rate in (("", ""), ("_low", "_high"), ("_high", "_low")):
+        values[f"doubling_time{end}"] = _doubling(values[f"growth_rate{rate}"])
+    initial = law.initial_error(parameters)
+    values["doubling_time_at_start"] = float(law.doubling_time(parameters, initial)[0])
+    return Growth(law.name, law.value(parameters, lead)[0], values, parameters[0], pull)
+
+
+def _nothing(lead: np.ndarray) -> Growth:
+    return Growth("none", np.full(lead.size, np.nan), _empty_values(), np.empty(0), None)
+
+
+def _interval(quantity: str, value: float, reach: float) -> tuple[float, float]:
+    if quantity == "growth_rate":
+        return value - reach, value + reach
+    if not value > 0:
+        return float("nan"), float("nan")
+    factor = float(np.exp(reach / value))  # sizes are positive: symmetric in the logarithm
+    return value / factor, value * factor
+
+
+def _doubling(rate: float) -> float:
+    if np.isnan(rate):
+        return rate
+    return LN2 / rate if rate > 0 else float("inf")
+
+
+def _empty_values() -> dict[str, float]:
+    names = [
+        f"{name}{end}" for name in (*QUANTITIES, "doubling_time") for end in ("", "_low", "_high")
+    ]
+    shape = [name for law in LAWS.values() for name in law.parameters]
+    return dict.fromkeys([*names, "doubling_time_at_start", *shape], float("nan"))

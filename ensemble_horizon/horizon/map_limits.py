@@ -1,0 +1,241 @@
+"""Limits at many points at once: a batch of grid points through fit, criteria and intervals."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from itertools import pairwise
+
+import numpy as np
+from scipy import special
+
+from ensemble_horizon.growth.laws import LAWS
+from ensemble_horizon.growth.selection import Selection, select_law
+from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
+from ensemble_horizon.horizon.criteria import Chance, Criterion, Levels
+from ensemble_horizon.horizon.horizon import judge
+from ensemble_horizon.horizon.interval import (
+    Moves,
+    MoveTable,
+    share_bounds,
+    spread_bounds,
+)
+from ensemble_horizon.horizon.trend import grows
+from ensemble_horizon.spread.sampling import LeadNoise
+from ensemble_horizon.vocabulary import Status
+
+LAW_NAMES = (*LAWS, "none")
+
+
+@dataclass(frozen=True)
+class MapOptions:
+    """What is asked at every point.
+
+    Parameters
+    ----------
+    criteria : sequence of Criterion
+    hold : float, in lead units
+    law, scale : str
+        As `select_law` takes them; law "auto" for a choice by AICc.
+    confidence : float or None
+        None leaves the intervals out.
+    members : int
+        Members that shares rest on.
+    """
+
+    criteria: tuple[Criterion, ...]
+    hold: float
+    law: str
+    scale: str
+    confidence: float | None
+    members: int
+
+
+@dataclass(frozen=True)
+class PointBatch:
+    """N grid points.
+
+    Parameters
+    ----------
+    lead : (L,)
+    variance : (L, N) spread variance
+    shares : mapping of distance to (L, N)
+    climatology : (N,) or None
+    block : (N,) int, position in ``noises``
+    noises : LeadNoise of each block of the map
+    noise : LeadNoise of the whole map, or None without intervals
+    table : MoveTable that goes with it, or None without intervals
+    """
+
+    lead: np.ndarray
+    variance: np.ndarray
+    shares: Mapping[float, np.ndarray] = field(default_factory=dict)
+    climatology: np.ndarray | None = None
+    block: np.ndarray = field(default_factory=lambda: np.empty(0, dtype=int))
+    noises: tuple[LeadNoise, ...] = ()
+    noise: LeadNoise | None = None
+    table: MoveTable | None = None
+
+
+def limits_of_points(batch: PointBatch, options: MapOptions) -> dict[str, np.ndarray]:
+    """Fits and horizons of a batch.
+
+    Returns
+    -------
+    dict
+        ``growth_rate``, ``doubling_time``, ``initial_error``, ``saturation`` (N,) float32,
+        ``law`` (N,) int8 position in `LAW_NAMES`; ``horizon``, ``threshold`` and with intervals
+        ``low``, ``high`` (C, N) float32, ``status`` (C, N) int8. With intervals also
+        ``growth_rate_low`` and so on, (N,) float32.
+    """
+    with np.errstate(invalid="ignore"):
+        spread = np.sqrt(batch.variance.astype(np.float64))
+    names = None if options.law == "auto" else [options.law]
+    selection = select_law(batch.lead, spread.T, names, scale=options.scale)
+    result = _growth_values(selection)
+    covariance = None if batch.noise is None else batch.noise.log_spread_covariance()
+    growing = grows(batch.lead, spread, covariance)
+    if options.confidence is not None:
+        result |= _rate_intervals(batch, spread, selection, options)
+    widening = _widening(batch, spread, selection, options)
+    rows = [
+        _limit(batch, options, criterion, spread, growing, result, selection, widening)
+        for criterion in options.criteria
+    ]
+    result.pop("exact_saturation")
+    for name in rows[0]:
+        result[name] = np.stack([row[name] for row in rows])
+    return result
+
+
+def _growth_values(selection: Selection) -> dict[str, np.ndarray]:
+    number = selection.chosen.size
+    values = {
+        name: np.full(number, np.nan)
+        for name in ("growth_rate", "doubling_time", "initial_error", "saturation")
+    }
+    code = np.full(number, LAW_NAMES.index("none"), dtype=np.int8)
+    for law, rows, parameters in chosen_groups(selection):
+        code[rows] = LAW_NAMES.index(law.name)
+        for quantity, column in values.items():
+            column[rows] = getattr(law, quantity)(parameters)
+    exact = values["saturation"]
+    result = {name: column.astype(np.float32) for name, column in values.items()}
+    return {**result, "law": code, "exact_saturation": exact}
+
+
+def _limit(
+    batch: PointBatch,
+    options: MapOptions,
+    criterion: Criterion,
+    spread: np.ndarray,
+    growing: np.ndarray,
+    growth: dict[str, np.ndarray],
+    selection: Selection,
+    widening: np.ndarray | None,
+) -> dict[str, np.ndarray]:
+    number = spread.shape[1]
+    levels = Levels(saturation=growth["exact_saturation"], climatology=batch.climatology)
+    threshold = np.broadcast_to(np.asarray(criterion.threshold(levels), float), (number,))
+    curves = spread
+    if isinstance(criterion, Chance):
+        curves = batch.shares[criterion.beyond].astype(np.float64)
+    time, status = judge(batch.lead, curves, threshold, options.hold, growing)
+    row = {
+        "horizon": time.astype(np.float32),
+        "status": status,
+        "threshold": threshold.astype(np.float32),
+    }
+    if options.confidence is None:
+        return row
+    if isinstance(criterion, Chance):
+        low, high = share_bounds(
+            batch.lead, curves, options.members, criterion.probability,
+            options.confidence, options.hold,
+        )  # fmt: skip
+    else:
+        assert batch.noise is not None
+        moves = _moves(batch, threshold, time, selection)
+        if criterion.kind == "saturation_fraction" and widening is not None:
+            moves = Moves(moves.up * widening, moves.down * widening)
+        dof = batch.noise.dof
+        low, high = spread_bounds(batch.lead, spread, threshold, dof, moves, options.hold)
+    silent = (status == Status.no_data) | (status == Status.no_growth)
+    row["low"] = np.where(silent, np.nan, low).astype(np.float32)
+    row["high"] = np.where(silent, np.nan, high).astype(np.float32)
+    return row
+
+
+def _moves(
+    batch: PointBatch, threshold: np.ndarray, time: np.ndarray, selection: Selection
+) -> Moves:
+    """Moves by the steepness of the fitted law where it reaches the threshold."""
+    assert batch.table is not None
+    assert batch.noise is not None
+    lead = batch.lead
+    crossing = np.where(np.isfinite(time), time, lead[-1])
+    before = np.clip(np.searchsorted(lead, crossing) - 1, 0, lead.size - 2)
+    rate = np.full(threshold.size, np.nan)
+    for law, rows, parameters in chosen_groups(selection):
+        rate[rows] = law.growth_rate(parameters, threshold[rows])
+    step = np.diff(lead)[before]
+    noise = np.sqrt(special.polygamma(1, batch.noise.dof / 2) / 4)[before]
+    steepness = np.where(np.isfinite(rate) & (rate > 0), rate * step / noise, 1.0)
+    return batch.table.look_up(before, steepness)
+
+
+def _widening(
+    batch: PointBatch, spread: np.ndarray, selection: Selection, options: MapOptions
+) -> np.ndarray | None:
+    """Factor by which moves widen because the saturation level is itself estimated, or None."""
+    wanted = any(item.kind == "saturation_fraction" for item in options.criteria)
+    if options.confidence is None or not wanted or batch.noise is None:
+        return None
+    error = _errors("saturation", batch, spread, selection, options)
+    level = np.full(error.size, np.nan)
+    for law, rows, parameters in chosen_groups(selection):
+        level[rows] = law.saturation(parameters)
+    typical = np.median(np.diag(batch.noise.log_spread_covariance()))
+    return np.sqrt(1 + np.nan_to_num((error / level) ** 2) / typical)
+
+
+def _rate_intervals(
+    batch: PointBatch, spread: np.ndarray, selection: Selection, options: MapOptions
+) -> dict[str, np.ndarray]:
+    assert options.confidence is not None
+    assert batch.noise is not None
+    rate = np.full(selection.chosen.size, np.nan)
+    for law, rows, parameters in chosen_groups(selection):
+        rate[rows] = law.growth_rate(parameters)
+    quantile = batch.noise.inflation * float(special.ndtri(1 - (1 - options.confidence) / 2))
+    reach = quantile * _errors("growth_rate", batch, spread, selection, options)
+    return {
+        "growth_rate_low": (rate - reach).astype(np.float32),
+        "growth_rate_high": (rate + reach).astype(np.float32),
+    }
+
+
+def _errors(
+    quantity: str,
+    batch: PointBatch,
+    spread: np.ndarray,
+    selection: Selection,
+    options: MapOptions,
+) -> np.ndarray:
+    """Standard error (N,) of a quantity of the law, from the noise of each point's block."""
+    error = np.full(selection.chosen.size, np.nan)
+    for law, rows, parameters in chosen_groups(selection):
+        usable = (spread[:, rows] > 0).T
+        weight = quantity_sensitivity(law, quantity, parameters, batch.lead, usable, options.scale)
+        for block in np.unique(batch.block[rows]):
+            here = batch.block[rows] == block
+            covariance = batch.noises[block].log_spread_covariance()
+            variance = ((weight[here] @ covariance) * weight[here]).sum(axis=1)
+            error[rows[here]] = np.sqrt(np.maximum(variance, 0.0))
+    return error
+
+
+def split_points(size: int, parts: int) -> Sequence[slice]:
+    """Cut N points into about ``parts`` equal slices."""
+    edges = np.linspace(0, size, max(1, parts) + 1).astype(int)
+    return [slice(int(a), int(b)) for a, b in pairwise(edges) if b > a]

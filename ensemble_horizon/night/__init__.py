@@ -1,0 +1,1 @@
+"""The stages of a night strung together: survey, estimate, products."""

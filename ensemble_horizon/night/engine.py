@@ -1,0 +1,141 @@
+"""Where the work is done: in this process, or in worker processes on this machine.
+
+Results come back one by one, as they are ready, and only a few tasks are under way at a time, so
+that memory stays flat however many tasks there are. Workers are processes because the NetCDF
+library lets one thread in at a time.
+"""
+
+from __future__ import annotations
+
+import multiprocessing
+import os
+from collections.abc import Callable, Iterator, Sequence
+from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from concurrent.futures.process import BrokenProcessPool
+from types import TracebackType
+from typing import Any, TypeVar
+
+from ensemble_horizon.errors import EnsembleHorizonError
+
+T = TypeVar("T")
+R = TypeVar("R")
+
+_PRELOAD = ["ensemble_horizon.night.reading", "ensemble_horizon.horizon.map_limits"]
+_THREAD_KEYS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
+
+_shared: Any = None
+
+
+def usable_cores() -> int:
+    """Cores that this process may use."""
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
+def shared() -> Any:
+    """What the engine was given for all its tasks."""
+    return _shared
+
+
+class Engine:
+    """Runs a function over tasks; a context manager.
+
+    Parameters
+    ----------
+    workers : int
+        Processes; with one, the work is done in this process.
+    common : any picklable object
+        Sent to every worker once; a task function gets it from `shared`.
+    """
+
+    def __init__(self, workers: int, common: Any = None) -> None:
+        self.workers = workers
+        self._common = common
+        self._pool: ProcessPoolExecutor | None = None
+
+    def __enter__(self) -> Engine:
+        _install(self._common)
+        if self.workers > 1:
+            self._pool = _start_pool(self.workers, self._common)
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        _install(None)
+        if self._pool is not None:
+            self._pool.shutdown(wait=kind is None, cancel_futures=True)
+            self._pool = None
+
+    def run(self, function: Callable[[T], R], tasks: Sequence[T]) -> Iterator[tuple[int, R]]:
+        """Yield ``(position of the task, result)`` as results come in.
+
+        Raises
+        ------
+        EnsembleHorizonError
+            what a task raised, or a message of its own if a worker was killed.
+        """
+        if self._pool is None or len(tasks) < 2:
+            for number, task in enumerate(tasks):
+                yield number, function(task)
+            return
+        try:
+            yield from self._run_in_pool(self._pool, function, tasks)
+        except BrokenProcessPool as error:
+            raise EnsembleHorizonError(
+                "a worker process",
+                expected="it to finish its task",
+                found="that it was killed, most often for want of memory",
+                remedy="lower engine.block_memory_mib or engine.workers and run again",
+            ) from error
+
+    def _run_in_pool(
+        self, pool: ProcessPoolExecutor, function: Callable[[T], R], tasks: Sequence[T]
+    ) -> Iterator[tuple[int, R]]:
+        waiting = iter(enumerate(tasks))
+        under_way: dict[Future[R], int] = {}
+
+        def submit_next() -> None:
+            for number, task in waiting:
+                under_way[pool.submit(function, task)] = number
+                return
+
+        for _ in range(2 * self.workers):
+            submit_next()
+        while under_way:
+            done, _ = wait(under_way, return_when=FIRST_COMPLETED)
+            for future in done:
+                number = under_way.pop(future)
+                submit_next()
+                yield number, future.result()
+
+
+def _install(common: Any) -> None:
+    global _shared
+    _shared = common
+
+
+def _start_pool(workers: int, common: Any) -> ProcessPoolExecutor:
+    methods = multiprocessing.get_all_start_methods()
+    context = multiprocessing.get_context("forkserver" if "forkserver" in methods else "spawn")
+    if "forkserver" in methods:
+        context.set_forkserver_preload(_PRELOAD)
+    saved = {key: os.environ.get(key) for key in _THREAD_KEYS}
+    try:
+        # One linear-algebra thread a worker: the workers are the parallelism.
+        os.environ.update(dict.fromkeys(_THREAD_KEYS, "1"))
+        pool = ProcessPoolExecutor(
+            workers, mp_context=context, initializer=_install, initargs=(common,)
+        )
+        pool.submit(os.getpid)  # starts the server now, while this process goes on
+    finally:
+        for key, value in saved.items():
+            if value is None:
+                os.environ.pop(key, None)
+            else:
+                os.environ[key] = value
+    return pool

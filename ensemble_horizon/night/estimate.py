@@ -1,0 +1,319 @@
+"""Estimate: from the files of the settings to curves, fits, limits and maps."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from time import monotonic
+
+import numpy as np
+
+from ensemble_horizon.errors import InputError
+from ensemble_horizon.horizon.curve_growth import growth_of_curves
+from ensemble_horizon.horizon.curve_limits import Curve, limits_of_curve
+from ensemble_horizon.horizon.map_limits import MapOptions
+from ensemble_horizon.night.curves import curves_of_start, members_of_start, pool_starts
+from ensemble_horizon.night.engine import Engine, usable_cores
+from ensemble_horizon.night.health import faults_of
+from ensemble_horizon.night.input import Input, open_input
+from ensemble_horizon.night.mapping import Fields, PooledFields, map_fields, noise_of_start
+from ensemble_horizon.night.reading import ReadingContext, read_start
+from ensemble_horizon.night.results import (
+    CurveRow,
+    Frame,
+    VariableResult,
+    curves_dataset,
+    maps_dataset,
+)
+from ensemble_horizon.night.variables import (
+    Places,
+    Variable,
+    layout_of,
+    resolve_places,
+    resolve_variable,
+)
+from ensemble_horizon.runs import Catalogue, Fault
+from ensemble_horizon.runs.faults import Effect
+from ensemble_horizon.runs.report import name_members
+from ensemble_horizon.settings import Settings
+from ensemble_horizon.spread.reduction import Summary
+from ensemble_horizon.spread.sample import SampleLayout
+
+ALL_STARTS = "all"
+_SMALL = 48 * 2**20  # bytes below which worker processes take longer to start than they save
+
+log = logging.getLogger(__name__)
+Progress = Callable[[str, float, float], None]
+
+
+def silent(stage: str, done: float, total: float) -> None:
+    """A progress callback that shows nothing."""
+
+
+@dataclass
+class Estimate:
+    """What an estimate found.
+
+    results : one per variable, in the order of the settings
+    places : regions and sites on the grid
+    catalogue : the files used
+    faults : what was wrong with the input, headers and values
+    """
+
+    results: list[VariableResult]
+    places: Places
+    catalogue: Catalogue
+    faults: list[Fault] = field(default_factory=list)
+
+
+def estimate(settings: Settings, progress: Progress = silent) -> Estimate:
+    """Read the runs, measure spread, fit growth, and place the limits.
+
+    Parameters
+    ----------
+    settings : Settings
+    progress : callable
+        Called with the name of a stage, what is done of it, and its total.
+
+    Raises
+    ------
+    InputError
+        if the files cannot be used, and why.
+    SettingsError
+        if the settings ask for what the files do not hold.
+    """
+    with _timed("headers"):
+        found = open_input(settings, lambda done, total: progress("headers", done, total))
+    catalogue = found.catalogue
+    places = resolve_places(settings, catalogue)
+    layout = layout_of(catalogue)
+    variables = [resolve_variable(settings, catalogue, name) for name in settings.variables]
+    size = int(np.prod(catalogue.grid.shape, dtype=int))
+    mapped = _map_mode(settings, catalogue) != "none"
+    context = ReadingContext(
+        catalogue, tuple(item.source(places, layout, size, mapped) for item in variables)
+    )
+    job = _Job(settings, found, context, places, layout, progress)
+    with Engine(_workers(settings, context), context) as engine:
+        results = [job.variable(engine, number, item) for number, item in enumerate(variables)]
+    return Estimate(results, places, catalogue, [*found.faults, *job.faults])
+
+
+class _Job:
+    """One estimate under way: what every step needs."""
+
+    def __init__(
+        self,
+        settings: Settings,
+        found: Input,
+        context: ReadingContext,
+        places: Places,
+        layout: SampleLayout,
+        progress: Progress,
+    ) -> None:
+        self.settings = settings
+        self.context = context
+        self.catalogue = found.catalogue
+        self.places = places
+        self.layout = layout
+        self.progress = progress
+        self.faults: list[Fault] = []
+        self.mode = _map_mode(settings, self.catalogue)
+        self._total = (
+            len(settings.variables) * self.catalogue.starts.size * self.catalogue.leads.size
+        )
+        self._done = 0
+
+    def variable(self, engine: Engine, number: int, variable: Variable) -> VariableResult:
+        """All starts of one variable."""
+        settings, catalogue = self.settings, self.catalogue
+        starts = catalogue.starts.size
+        lines: list[list[Curve]] = []
+        members: list[int] = []
+        maps: list[dict[str, np.ndarray]] = []
+        map_confidence = settings.growth.confidence if settings.products.map_intervals else None
+        pooled = PooledFields(self.layout, map_confidence is not None)
+        for start in range(starts):
+            summary = self._read(engine, number, variable, start)
+            lines.append(curves_of_start(summary, variable, self.places))
+            members.append(members_of_start(summary))
+            if self.mode == "none":
+                continue
+            noise = noise_of_start(summary, self.layout) if map_confidence else None
+            if self.mode == "pooled":
+                pooled.add(summary, noise)
+            else:
+                assert summary.variance is not None
+                fields = Fields(summary.variance, summary.share, noise)
+                maps.append(self._map(engine, fields, variable, members[-1], map_confidence))
+        if self.mode == "pooled":
+            fields = pooled.fields(map_confidence)
+            maps.append(self._map(engine, fields, variable, sum(members), map_confidence))
+        return self._result(variable, lines, members, maps)
+
+    def _read(self, engine: Engine, number: int, variable: Variable, start: int) -> Summary:
+        without: set[int] = set()
+        block_bytes = self.settings.engine.block_memory_mib * 2**20 // 3
+        while True:
+            with _timed(f"reading {variable.name} {self.catalogue.start_label(start)}"):
+                summary = read_start(
+                    engine, self.context, number, start, block_bytes, self._advance,
+                    tuple(sorted(without)),
+                )  # fmt: skip
+            faults = faults_of(summary, self.catalogue, variable.name, start, variable.plausible)
+            if not without:
+                self.faults += faults
+            bad = self._unusable(faults) - without
+            if not bad:
+                self._require_enough(summary, variable, start)
+                return summary
+            without |= bad
+            self._total += self.catalogue.leads.size
+            log.warning("%s: reading again without %s", variable.name, self._names(without))
+
+    def _unusable(self, faults: list[Fault]) -> set[int]:
+        policy = self.settings.runs.incomplete
+        serious = [item for item in faults if item.effect is not Effect.note]
+        for item in serious:
+            log.warning("member %s, %s: %s", item.member, item.variable, item.message)
+        if serious and policy == "stop":
+            first = serious[0]
+            raise InputError(
+                f"member {first.member} at {first.start}",
+                expected="members without faults, as runs.incomplete = 'stop' asks",
+                found=f"{first.variable}: {first.message}"
+                + (f", and {len(serious) - 1} more faults" if len(serious) > 1 else ""),
+                remedy="mend the files, or set runs.incomplete to 'drop' or 'use'",
+            )
+        drop = [i for i in serious if policy == "drop" or i.effect is Effect.wrong]
+        return {
+            self.catalogue.members.index(item.member) for item in drop if item.member is not None
+        }
+
+    def _require_enough(self, summary: Summary, variable: Variable, start: int) -> None:
+        left, least = members_of_start(summary), self.settings.runs.minimum_members
+        if left < least:
+            raise InputError(
+                f"{variable.name} at {self.catalogue.start_label(start)}",
+                expected=f"at least {least} usable members (runs.minimum_members)",
+                found=f"{left}",
+                remedy="mend the files named by the survey, or lower runs.minimum_members",
+            )
+
+    def _names(self, positions: set[int]) -> str:
+        return name_members([self.catalogue.members[i] for i in sorted(positions)])
+
+    def _advance(self, leads: int) -> None:
+        self._done += leads
+        self.progress("reading", self._done, self._total)
+
+    def _map(
+        self,
+        engine: Engine,
+        fields: Fields,
+        variable: Variable,
+        members: int,
+        confidence: float | None,
+    ) -> dict[str, np.ndarray]:
+        growth = self.settings.growth
+        options = MapOptions(
+            criteria=tuple(variable.criteria.values()),
+            hold=variable.hold,
+            law=growth.law,
+            scale=growth.scale,
+            confidence=confidence,
+            members=members,
+        )
+        with _timed(f"mapping {variable.name}"):
+            return map_fields(engine, self.catalogue.leads, fields, variable, self.layout, options)
+
+    def _result(
+        self,
+        variable: Variable,
+        lines: list[list[Curve]],
+        members: list[int],
+        maps: list[dict[str, np.ndarray]],
+    ) -> VariableResult:
+        catalogue, growth = self.catalogue, self.settings.growth
+        frame = Frame(
+            variable=variable.name,
+            long_name=variable.long_name,
+            units=variable.units,
+            lead=catalogue.leads,
+            lead_units=catalogue.lead_units,
+            criteria=variable.criteria,
+            confidence=growth.confidence,
+            hold=variable.hold,
+        )
+        labels = [catalogue.start_label(start) for start in range(catalogue.starts.size)]
+        starts = catalogue.starts
+        if len(lines) > 1:
+            lines = [
+                *lines,
+                [pool_starts(same, growth.confidence) for same in zip(*lines, strict=True)],
+            ]
+            members = [*members, max(members)]
+        rows = [
+            self._rows(line, variable, count) for line, count in zip(lines, members, strict=True)
+        ]
+        curve_labels, curve_starts = labels, starts
+        if len(lines) > len(labels):
+            curve_labels = [*labels, ALL_STARTS]
+            curve_starts = np.concatenate([starts, _no_start(starts)])
+        curves = curves_dataset(frame, curve_starts, curve_labels, self.places.names, rows)
+        grid = catalogue.grid
+        space = (grid.dims, grid.shape, dict(grid.coords))
+        if not maps:
+            return VariableResult(curves, None)
+        if self.mode == "pooled":
+            starts, labels = curve_starts[-1:], [ALL_STARTS]
+        return VariableResult(curves, maps_dataset(frame, starts, labels, space, maps))
+
+    def _rows(self, line: list[Curve], variable: Variable, members: int) -> list[CurveRow]:
+        lead, growth = self.catalogue.leads, self.settings.growth
+        spreads = np.stack([curve.spread for curve in line])
+        fits = growth_of_curves(
+            lead, spreads, [c.noise for c in line], growth.law, growth.scale, growth.confidence
+        )
+        criteria = list(variable.criteria.values())
+        return [
+            CurveRow(
+                curve,
+                fit,
+                limits_of_curve(lead, curve, fit, criteria, variable.hold, growth.confidence),
+                members,
+            )
+            for curve, fit in zip(line, fits, strict=True)
+        ]
+
+
+def _no_start(starts: np.ndarray) -> np.ndarray:
+    empty = np.datetime64("NaT", "ns") if starts.dtype.kind == "M" else None
+    return np.array([empty], dtype=starts.dtype)
+
+
+def _map_mode(settings: Settings, catalogue: Catalogue) -> str:
+    if not catalogue.grid.shape:
+        return "none"
+    if settings.products.maps is not None:
+        return settings.products.maps
+    return "each" if catalogue.starts.size == 1 else "pooled"
+
+
+def _workers(settings: Settings, context: ReadingContext) -> int:
+    catalogue = context.catalogue
+    wanted = settings.engine.workers
+    if wanted is not None:
+        return wanted
+    size = int(np.prod(catalogue.grid.shape, dtype=int)) * len(catalogue.members)
+    size *= 4 * catalogue.leads.size * catalogue.starts.size * len(context.variables)
+    return 1 if size < _SMALL else usable_cores()
+
+
+@contextmanager
+def _timed(stage: str) -> Iterator[None]:
+    begun = monotonic()
+    yield
+    log.info("%s: %.2f s", stage, monotonic() - begun)

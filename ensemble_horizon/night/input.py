@@ -1,0 +1,131 @@
+"""The input of a night: headers read, starts chosen, faulty members left out."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from ensemble_horizon.errors import InputError, SettingsError
+from ensemble_horizon.night.variables import levels_of, source_names
+from ensemble_horizon.runs import Catalogue, Fault, SurveyReport, read_catalogue, survey_runs
+from ensemble_horizon.runs.units import converter
+from ensemble_horizon.settings import Settings
+
+
+@dataclass(frozen=True)
+class Input:
+    """Files that can be used, and what was wrong with the rest."""
+
+    catalogue: Catalogue
+    report: SurveyReport
+
+    @property
+    def faults(self) -> tuple[Fault, ...]:
+        """What the headers brought to light."""
+        return self.report.faults
+
+
+def open_input(settings: Settings, progress: Callable[[int, int], None] | None = None) -> Input:
+    """Read headers and leave out what the settings do not want used.
+
+    Raises
+    ------
+    InputError
+        if the survey of the headers says that the runs are not usable.
+    """
+    catalogue = choose_starts(settings, find_runs(settings, progress))
+    report = survey(settings, catalogue, content=False)
+    if not report.usable:
+        raise InputError(
+            f"runs {settings.runs.files!r}",
+            expected="usable runs",
+            found="; ".join(report.reasons) or report.summary(),
+            remedy="run the survey command to see every fault",
+        )
+    kept = catalogue.without(report.drop, report.drop_at)
+    short = set(report.short_starts)
+    if short:
+        labels = [kept.start_label(number) for number in range(kept.starts.size)]
+        kept = kept.subset(starts=[n for n, label in enumerate(labels) if label not in short])
+    return Input(kept, report)
+
+
+def find_runs(settings: Settings, progress: Callable[[int, int], None] | None = None) -> Catalogue:
+    """The catalogue of all files that the settings name."""
+    catalogue = read_catalogue(
+        settings.run_files(),
+        variables=source_names(settings),
+        level=levels_of(settings) or None,
+        lagged=settings.runs.lagged,
+        progress=progress,
+    )
+    control = settings.runs.control
+    if control is not None and control not in catalogue.members:
+        raise SettingsError(
+            "runs.control",
+            expected=f"a member of the runs: {', '.join(map(str, catalogue.members))}",
+            found=repr(control),
+            remedy="name the unperturbed member as the files do, or take the key out",
+        )
+    return catalogue
+
+
+def survey(
+    settings: Settings,
+    catalogue: Catalogue,
+    *,
+    content: bool,
+    progress: Callable[[int, int], None] | None = None,
+) -> SurveyReport:
+    """Survey a catalogue by the settings."""
+    runs = settings.runs
+    return survey_runs(
+        catalogue,
+        expected_members=runs.members,
+        plausible=_plausible(settings, catalogue),
+        minimum_members=runs.minimum_members,
+        incomplete=runs.incomplete,
+        content=content,
+        progress=progress,
+    )
+
+
+def choose_starts(settings: Settings, catalogue: Catalogue) -> Catalogue:
+    """The starts that the settings ask for."""
+    wanted = settings.runs.starts
+    if wanted == "all":
+        return catalogue
+    if wanted == "latest":
+        return catalogue.subset(starts=[catalogue.starts.size - 1])
+    labels = [catalogue.start_label(number) for number in range(catalogue.starts.size)]
+    chosen = []
+    for text in wanted:
+        found = [number for number, label in enumerate(labels) if label.startswith(text)]
+        if not found:
+            raise SettingsError(
+                "runs.starts",
+                expected=f"starts that are there: {', '.join(labels[:6])}"
+                + (" and more" if len(labels) > 6 else ""),
+                found=repr(text),
+                remedy="write starts as ISO 8601, for instance 2031-02-14T00",
+            )
+        chosen += found
+    return catalogue.subset(starts=np.unique(chosen))
+
+
+def _plausible(settings: Settings, catalogue: Catalogue) -> dict[str, tuple[float, float]]:
+    """Plausible ranges by source name; magnitudes of vectors bound both components."""
+    ranges: dict[str, tuple[float, float]] = {}
+    for name, table in settings.variables.items():
+        if table.plausible is None:
+            continue
+        for part in table.speed or (table.source or name,):
+            units = catalogue.variables[part].units or ""
+            factor, offset = (1.0, 0.0)
+            if table.units is not None:
+                factor, offset = converter(units, table.units, f"variables.{name}.units")
+            low, high = sorted((value - offset) / factor for value in table.plausible)
+            ranges[part] = (-high, high) if table.speed else (low, high)
+    return ranges

@@ -1,0 +1,183 @@
+"""Maps of one variable: batches of grid points through the engine."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from ensemble_horizon.horizon.interval import MoveTable, move_table
+from ensemble_horizon.horizon.map_limits import (
+    MapOptions,
+    PointBatch,
+    limits_of_points,
+    split_points,
+)
+from ensemble_horizon.night.engine import Engine
+from ensemble_horizon.night.variables import Variable
+from ensemble_horizon.spread.moments import member_variance
+from ensemble_horizon.spread.reduction import Summary
+from ensemble_horizon.spread.sample import SampleLayout
+from ensemble_horizon.spread.sampling import (
+    LeadNoise,
+    mean_over_starts,
+    noise_from_points,
+    pooled_kurtosis,
+    pooled_noise,
+)
+
+_BATCH = 32768
+
+
+@dataclass(frozen=True)
+class FieldNoise:
+    """Sampling noise of a field: pooled over each block, and over the whole."""
+
+    blocks: tuple[LeadNoise, ...]
+    whole: LeadNoise
+
+
+@dataclass
+class Fields:
+    """Spread variance and shares at every point, in the units of the files.
+
+    variance : (L, P); share : (A, L, P) or None; noise : FieldNoise or None
+    """
+
+    variance: np.ndarray
+    share: np.ndarray | None
+    noise: FieldNoise | None
+
+
+def noise_of_start(summary: Summary, layout: SampleLayout) -> FieldNoise:
+    """Noise of the maps of one start, from its sample points."""
+    kurtosis = pooled_kurtosis(summary.sample_values)
+    blocks = tuple(
+        noise_from_points(summary.sample_values[:, :, layout.block_of_sample == block], kurtosis)
+        for block in range(layout.blocks)
+    )
+    return FieldNoise(blocks, _typical(blocks))
+
+
+class PooledFields:
+    """Fields averaged over starts as they come in; memory does not grow with the fields."""
+
+    def __init__(self, layout: SampleLayout, intervals: bool) -> None:
+        self._layout = layout
+        self._intervals = intervals
+        self._total: np.ndarray | None = None
+        self._share: np.ndarray | None = None
+        self._count: np.ndarray | None = None
+        self._samples: list[np.ndarray] = []
+        self._noises: list[FieldNoise] = []
+
+    def add(self, summary: Summary, noise: FieldNoise | None) -> None:
+        """Take in one start."""
+        assert summary.variance is not None
+        if self._total is None:
+            self._total = np.zeros_like(summary.variance)
+            self._count = np.zeros(summary.variance.shape, dtype=np.int16)
+            if summary.share is not None:
+                self._share = np.zeros_like(summary.share)
+        known = np.isfinite(summary.variance)
+        self._total += np.where(known, summary.variance, 0)
+        self._count += known
+        if self._share is not None and summary.share is not None:
+            self._share += np.where(known, summary.share, 0)
+        if self._intervals and noise is not None:
+            leads, members, points = summary.sample_values.shape
+            flat = summary.sample_values.transpose(1, 0, 2).reshape(members, -1)
+            self._samples.append(member_variance(flat)[0].reshape(leads, points))
+            self._noises.append(noise)
+
+    def fields(self, confidence: float | None) -> Fields:
+        """What all starts together say."""
+        assert self._total is not None
+        assert self._count is not None
+        with np.errstate(invalid="ignore", divide="ignore"):
+            variance = self._total / self._count
+            share = None if self._share is None else self._share / self._count
+        noise = None
+        if confidence is not None and self._samples:
+            noise = self._noise(confidence)
+        return Fields(variance, share, noise)
+
+    def _noise(self, confidence: float) -> FieldNoise:
+        samples = np.stack(self._samples)
+        known = np.isfinite(mean_over_starts(samples)).all(axis=0)
+        blocks = []
+        for block in range(self._layout.blocks):
+            chosen = (self._layout.block_of_sample == block) & known
+            members = [noise.blocks[block] for noise in self._noises]
+            blocks.append(
+                pooled_noise(samples[:, :, chosen], members, confidence)
+                if chosen.any()
+                else members[0]
+            )
+        return FieldNoise(tuple(blocks), _typical(blocks))
+
+
+def map_fields(
+    engine: Engine,
+    lead: np.ndarray,
+    fields: Fields,
+    variable: Variable,
+    layout: SampleLayout,
+    options: MapOptions,
+) -> dict[str, np.ndarray]:
+    """Fits and horizons at every point: (P,) or (C, P) arrays by name."""
+    size = fields.variance.shape[1]
+    table = None
+    if options.confidence is not None and fields.noise is not None:
+        table = move_table(lead, fields.noise.whole, options.confidence, hold=options.hold)
+    parts = split_points(size, max(engine.workers, -(-size // _BATCH)))
+    tasks = [(_batch(lead, fields, variable, layout, part, table), options) for part in parts]
+    result: dict[str, np.ndarray] = {}
+    for number, found in engine.run(_limits, tasks):
+        for name, values in found.items():
+            if name not in result:
+                result[name] = np.empty((*values.shape[:-1], size), dtype=values.dtype)
+            result[name][..., parts[number]] = values
+    return result
+
+
+def _batch(
+    lead: np.ndarray,
+    fields: Fields,
+    variable: Variable,
+    layout: SampleLayout,
+    part: slice,
+    table: MoveTable | None,
+) -> PointBatch:
+    noise = fields.noise
+    shares = {}
+    if fields.share is not None:
+        shares = {
+            distance: fields.share[number][:, part]
+            for number, distance in enumerate(variable.distances)
+        }
+    climatology = None if variable.climatology is None else variable.climatology[part]
+    return PointBatch(
+        lead=lead,
+        variance=fields.variance[:, part] * np.float32(variable.factor**2),
+        shares=shares,
+        climatology=climatology,
+        block=layout.block_of_point[part],
+        noises=() if noise is None else noise.blocks,
+        noise=None if noise is None else noise.whole,
+        table=table,
+    )
+
+
+def _limits(task: tuple[PointBatch, MapOptions]) -> dict[str, np.ndarray]:
+    return limits_of_points(*task)
+
+
+def _typical(blocks: Sequence[LeadNoise]) -> LeadNoise:
+    """The mean of the noise of blocks."""
+    return LeadNoise(
+        np.mean([noise.dof for noise in blocks], axis=0),
+        np.mean([noise.correlation for noise in blocks], axis=0),
+        float(np.mean([noise.inflation for noise in blocks])),
+    )

@@ -1,0 +1,130 @@
+"""Reading one start of one variable: blocks reduced where they are read, and gathered here."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
+from itertools import product
+
+import numpy as np
+
+from ensemble_horizon.night.engine import Engine, shared
+from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.spread.reduction import Reduction, Summary, empty_summary, reduce_block
+
+
+@dataclass(frozen=True)
+class SourceVariable:
+    """A variable of the settings as it lies in the files.
+
+    Parameters
+    ----------
+    name : str
+        Name in the settings.
+    parts : tuple of str
+        One source name, or the two components of a vector whose magnitude is meant.
+    reduction : Reduction
+    """
+
+    name: str
+    parts: tuple[str, ...]
+    reduction: Reduction
+
+
+@dataclass(frozen=True)
+class ReadingContext:
+    """What every reading task needs: sent to each worker once."""
+
+    catalogue: Catalogue
+    variables: tuple[SourceVariable, ...]
+
+
+@dataclass(frozen=True)
+class Block:
+    """One task: variable and start by position, a range of leads, a window of the grid."""
+
+    variable: int
+    start: int
+    leads: tuple[int, int]
+    window: tuple[tuple[int, int], ...]
+    without: tuple[int, ...] = ()  # members not to be used, by position
+
+
+def read_block(block: Block) -> Summary:
+    """Read one block of all members and reduce it: runs in a worker."""
+    context: ReadingContext = shared()
+    variable = context.variables[block.variable]
+    catalogue = context.catalogue
+    leads = range(*block.leads)
+    window = tuple(slice(*bounds) for bounds in block.window)
+    parts = [
+        catalogue.read(name, block.start, list(leads), slice(None), window)
+        for name in variable.parts
+    ]
+    values = parts[0] if len(parts) == 1 else np.hypot(parts[0], parts[1], out=parts[0])
+    values = values.reshape(*values.shape[:2], -1)
+    if block.without:
+        values[list(block.without)] = np.nan
+    return reduce_block(
+        values, variable.reduction, window_points(catalogue.grid.shape, block.window)
+    )
+
+
+def read_start(
+    engine: Engine,
+    context: ReadingContext,
+    variable: int,
+    start: int,
+    block_bytes: int,
+    advance: Callable[[int], None],
+    without: tuple[int, ...] = (),
+) -> Summary:
+    """Read one start of one variable through the engine.
+
+    Parameters
+    ----------
+    advance : callable
+        Called with the number of leads that each finished block adds.
+    without : tuple of int
+        Positions of members that must not be used at this start.
+    """
+    blocks = [
+        replace(block, without=without)
+        for block in plan_blocks(context, variable, start, block_bytes)
+    ]
+    catalogue = context.catalogue
+    reduction = context.variables[variable].reduction
+    members, leads = len(catalogue.members), catalogue.leads.size
+    summary = empty_summary(reduction, members, leads, reduction.size)
+    for number, part in engine.run(read_block, blocks):
+        block = blocks[number]
+        points = window_points(catalogue.grid.shape, block.window)
+        summary.add(part, slice(*block.leads), points)
+        advance(block.leads[1] - block.leads[0])
+    return summary
+
+
+def plan_blocks(
+    context: ReadingContext, variable: int, start: int, block_bytes: int
+) -> Iterator[Block]:
+    """Blocks of one start that follow the files' own chunks."""
+    catalogue = context.catalogue
+    parts = context.variables[variable].parts
+    step, shape = catalogue.natural_block(parts[0], block_bytes // len(parts))
+    total = catalogue.leads.size
+    windows = [_pieces(size, part) for size, part in zip(catalogue.grid.shape, shape, strict=True)]
+    for first in range(0, total, step):
+        for window in product(*windows):
+            yield Block(variable, start, (first, min(first + step, total)), window)
+
+
+def window_points(shape: tuple[int, ...], window: tuple[tuple[int, int], ...]) -> np.ndarray | None:
+    """Positions of a window in the flattened grid; None for the whole grid."""
+    if all(first == 0 and stop == size for (first, stop), size in zip(window, shape, strict=True)):
+        return None
+    index = np.arange(int(np.prod(shape))).reshape(shape)
+    return index[tuple(slice(*bounds) for bounds in window)].ravel()
+
+
+def _pieces(size: int, step: int) -> list[tuple[int, int]]:
+    return [(first, min(first + step, size)) for first in range(0, size, max(step, 1))]

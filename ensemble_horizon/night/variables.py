@@ -1,0 +1,223 @@
+"""Settings held against the files: what each variable is read from, and where its places lie."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ensemble_horizon.errors import ArgumentError, SettingsError
+from ensemble_horizon.horizon.criteria import Chance, Criterion
+from ensemble_horizon.night.reading import SourceVariable
+from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.runs.fields import open_field
+from ensemble_horizon.runs.units import converter, difference_scale, same_units
+from ensemble_horizon.settings import Settings
+from ensemble_horizon.spread.places import (
+    Region,
+    Site,
+    grid_points,
+    nearest_point,
+    region_weights,
+)
+from ensemble_horizon.spread.reduction import Reduction, RegionWeights
+from ensemble_horizon.spread.sample import SampleLayout, sample_layout
+
+SERIES = "series"
+
+
+@dataclass(frozen=True)
+class Places:
+    """Regions and sites on the grid of the runs.
+
+    Parameters
+    ----------
+    regions : tuple of RegionWeights
+    sites : tuple of str, names
+    site_index : (S,) int into the flattened grid
+    site_distance_km : (S,) float
+    """
+
+    regions: tuple[RegionWeights, ...]
+    sites: tuple[str, ...]
+    site_index: np.ndarray
+    site_distance_km: np.ndarray
+
+    @property
+    def names(self) -> list[tuple[str, str]]:
+        """Name and kind of every place, regions first."""
+        return [(item.name, "region") for item in self.regions] + [
+            (name, "site") for name in self.sites
+        ]
+
+
+@dataclass(frozen=True)
+class Variable:
+    """One variable of the settings, resolved.
+
+    Parameters
+    ----------
+    name, long_name, units : str
+        ``units`` are those of the results.
+    parts : tuple of str
+        Source names.
+    factor : float
+        Turns a difference in the units of the files into one in ``units``.
+    plausible : (lowest, highest) in the units of the files, or None
+    criteria : dict of label to Criterion, in ``units``
+    climatology : (P,) climatological standard deviation in ``units``, or None
+    """
+
+    name: str
+    long_name: str
+    units: str
+    parts: tuple[str, ...]
+    factor: float
+    plausible: tuple[float, float] | None
+    hold: float
+    criteria: dict[str, Criterion]
+    climatology: np.ndarray | None
+
+    @property
+    def distances(self) -> tuple[float, ...]:
+        """Distances of the chance criteria, in the units of the results, each once."""
+        found = [item.beyond for item in self.criteria.values() if isinstance(item, Chance)]
+        return tuple(dict.fromkeys(found))
+
+    def source(
+        self, places: Places, sample: SampleLayout, size: int, fields: bool
+    ) -> SourceVariable:
+        """What the reading needs to know of this variable."""
+        beyond = tuple(distance / self.factor for distance in self.distances)
+        reduction = Reduction(size, places.regions, places.site_index, sample.index, beyond, fields)
+        return SourceVariable(self.name, self.parts, reduction)
+
+
+def source_names(settings: Settings) -> list[str]:
+    """Source names that the settings ask for, each once."""
+    names: list[str] = []
+    for name, table in settings.variables.items():
+        names += list(table.speed) if table.speed else [table.source or name]
+    return list(dict.fromkeys(names))
+
+
+def levels_of(settings: Settings) -> dict[str, float]:
+    """Vertical level by source name, where the settings choose one."""
+    found: dict[str, float] = {}
+    for name, table in settings.variables.items():
+        if table.level is not None:
+            for part in table.speed or (table.source or name,):
+                if found.setdefault(part, table.level) != table.level:
+                    raise SettingsError(
+                        f"variables.{name}.level",
+                        expected=f"one level for {part!r} in one settings file",
+                        found=f"{found[part]:g} and {table.level:g}",
+                        remedy="use a settings file for each level",
+                    )
+    return found
+
+
+def resolve_variable(settings: Settings, catalogue: Catalogue, name: str) -> Variable:
+    """Hold one ``[variables.NAME]`` against the files.
+
+    Raises
+    ------
+    SettingsError, InputError
+        if units do not convert, or the climatology is not on the grid.
+    """
+    table = settings.variables[name]
+    parts = table.speed or (table.source or name,)
+    headers = [catalogue.variables[part] for part in parts]
+    file_units = headers[0].units or ""
+    if len(headers) == 2 and not same_units(file_units, headers[1].units or ""):
+        raise SettingsError(
+            f"variables.{name}.speed",
+            expected="two components in the same units",
+            found=f"{file_units!r} and {headers[1].units!r}",
+            remedy="name the two components of one vector",
+        )
+    units = table.units or file_units or "1"
+    factor, offset = (1.0, 0.0)
+    if table.units is not None:
+        factor, offset = converter(file_units, units, f"variables.{name}.units")
+    plausible = None
+    if table.plausible is not None:
+        low, high = ((value - offset) / factor for value in table.plausible)
+        plausible = (min(low, high), max(low, high))
+    default = str(headers[0].attrs.get("long_name") or name.replace("_", " "))
+    return Variable(
+        name=name,
+        long_name=table.label or (name.replace("_", " ") if len(parts) == 2 else default),
+        units=units,
+        parts=tuple(parts),
+        factor=abs(factor),
+        plausible=plausible,
+        hold=table.hold,
+        criteria=settings.criteria(name, units),
+        climatology=_climatology(settings, catalogue, name, units),
+    )
+
+
+def _climatology(
+    settings: Settings, catalogue: Catalogue, name: str, units: str
+) -> np.ndarray | None:
+    table = settings.climatology
+    if table is None or not any(
+        item.climatology_fraction for item in settings.variables[name].criteria
+    ):
+        return None
+    source = table.names.get(name, name)
+    field = open_field(settings.path(table.file), source, catalogue.grid)
+    own = str(field.attrs.get("units", units))
+    scale = abs(difference_scale(own, units, f"climatology {source!r} in {table.file}"))
+    size = int(np.prod(catalogue.grid.shape, dtype=int))
+    return np.broadcast_to(field.values.ravel() * scale, (size,)).astype(float)
+
+
+def resolve_places(settings: Settings, catalogue: Catalogue) -> Places:
+    """Hold regions and sites against the grid.
+
+    Raises
+    ------
+    SettingsError
+        if a region holds no grid point, a site lies off the grid, or the runs have no space.
+    """
+    regions, sites = settings.places()
+    if not catalogue.grid.shape:
+        if settings.regions or settings.sites:
+            raise SettingsError(
+                "regions and sites",
+                expected="none, because the runs are series without space",
+                found=", ".join([*settings.regions, *settings.sites]),
+                remedy="take [regions] and [sites] out of the settings",
+            )
+        return Places((), (SERIES,), np.zeros(1, dtype=int), np.zeros(1))
+    latitude, longitude = grid_points(catalogue.grid.coords)
+    try:
+        weights = tuple(_region(region, latitude, longitude) for region in regions)
+        nearest = [_site(site, latitude, longitude) for site in sites]
+    except ArgumentError as error:
+        raise SettingsError(
+            error.culprit, expected=error.expected, found=error.found, remedy=error.remedy
+        ) from error
+    return Places(
+        weights,
+        tuple(site.name for site in sites),
+        np.array([index for index, _ in nearest], dtype=int),
+        np.array([distance for _, distance in nearest], dtype=float),
+    )
+
+
+def layout_of(catalogue: Catalogue) -> SampleLayout:
+    """The sample of the grid of a catalogue."""
+    return sample_layout(catalogue.grid.shape, len(catalogue.members), catalogue.leads.size)
+
+
+def _region(region: Region, latitude: np.ndarray, longitude: np.ndarray) -> RegionWeights:
+    weights = region_weights(region, latitude, longitude)
+    index = np.flatnonzero(weights)
+    return RegionWeights(region.name, index, weights[index])
+
+
+def _site(site: Site, latitude: np.ndarray, longitude: np.ndarray) -> tuple[int, float]:
+    return nearest_point(site, latitude, longitude)

@@ -1,0 +1,232 @@
+"""The folder of products: everything is written aside first and moved in together."""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import secrets
+import shutil
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+
+from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.products.curve_file import write_horizon_file
+from ensemble_horizon.products.limits import VariableResult, start_labels
+from ensemble_horizon.products.map_file import write_map_file
+from ensemble_horizon.products.netcdf import valid_name
+from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.tables import COLUMN_NOTES, write_horizon_table
+from ensemble_horizon.products.wording import iso_start
+from ensemble_horizon.products.writing import disk_errors, refuse_folder
+from ensemble_horizon.vocabulary import CAUTION, CRITERION, PLACE, START, STATUS_MEANING
+
+FIGURES = "figures"
+
+
+def write_products(
+    folder: str | os.PathLike[str],
+    results: Iterable[VariableResult],
+    provenance: Mapping[str, Any],
+    *,
+    figures: bool = True,
+    places: Sequence[PlaceMark] = (),
+) -> list[Path]:
+    """Write all products of an estimate into ``folder``.
+
+    ``horizons.csv``, ``horizons.nc``, ``README.txt``, and where there are maps ``horizon_maps.nc``;
+    with ``figures`` a map per variable, criterion and start and the growth curves per variable and
+    start in ``figures/``. The files are written to a hidden folder inside ``folder`` and moved into
+    place together at the end; if anything fails, what stood there before is put back.
+
+    Parameters
+    ----------
+    folder : path
+        Made if need be. Other files in it are left alone.
+    results : iterable of objects with ``curves`` and ``maps``
+        One per variable, in the order of the settings; ``maps`` may be None.
+    provenance : mapping
+        See `netcdf.global_attributes`.
+    figures : bool
+        Whether to draw.
+    places : sequence of PlaceMark
+        Regions and sites to show on the maps.
+
+    Returns
+    -------
+    list of pathlib.Path
+        The files, in the order written.
+
+    Raises
+    ------
+    ArgumentError
+        If there is no result.
+    ProductError
+        If the folder cannot be written.
+    """
+    found = list(results)
+    if not found:
+        raise ArgumentError(
+            "results",
+            expected="at least one variable",
+            found="none",
+            remedy="name a variable in the settings",
+        )
+    with moved_together(folder) as aside:
+        write_horizon_table(aside / "horizons.csv", found)
+        write_horizon_file(aside / "horizons.nc", found, provenance)
+        maps = [result.maps for result in found if result.maps is not None]
+        if maps:
+            write_map_file(aside / "horizon_maps.nc", maps, provenance)
+        if figures:
+            _draw(aside / FIGURES, found, places)
+        names = [path.relative_to(aside) for path in written_files(aside)]
+        (aside / "README.txt").write_text(_readme(names), encoding="utf-8")
+        names.append(Path("README.txt"))
+    return [Path(folder) / name for name in names]
+
+
+@contextlib.contextmanager
+def moved_together(folder: str | os.PathLike[str]) -> Iterator[Path]:
+    """Give a hidden folder inside ``folder``; move its files out if the block succeeds.
+
+    Files of the same names are replaced. If a move fails, the moves before it are undone, and the
+    files that stood there before are put back.
+
+    Raises
+    ------
+    ProductError
+        If ``folder`` cannot be made or written.
+    """
+    target = Path(folder)
+    made = [parent for parent in (target, *target.parents) if not parent.exists()]
+    aside = target / f".{secrets.token_hex(4)}.part"
+    done = False
+    try:
+        with disk_errors(target):
+            aside.mkdir(parents=True)
+        yield aside
+        with disk_errors(target):
+            _move_in(aside, target)
+        done = True
+    finally:
+        shutil.rmtree(aside, ignore_errors=True)
+        if not done:
+            for parent in made:
+                # Only what was made here, and only if nobody has put anything there since.
+                with contextlib.suppress(OSError):
+                    parent.rmdir()
+
+
+def written_files(folder: Path) -> list[Path]:
+    """Return the files below ``folder``, tables and data before figures."""
+    files = [path for path in folder.rglob("*") if path.is_file()]
+    return sorted(files, key=lambda path: (len(path.relative_to(folder).parts), path.name))
+
+
+def _move_in(aside: Path, target: Path) -> None:
+    files = [path.relative_to(aside) for path in written_files(aside)]
+    before = aside / ".before"
+    moved: list[Path] = []
+    made: list[Path] = []
+    try:
+        for name in files:
+            place = target / name
+            refuse_folder(place)
+            if not place.parent.exists():
+                place.parent.mkdir(parents=True)
+                made.append(place.parent)
+            if place.exists():
+                (before / name).parent.mkdir(parents=True, exist_ok=True)
+                # A second link keeps the old file while the new one takes its name at one stroke.
+                _keep(place, before / name)
+            moved.append(name)
+            (aside / name).replace(place)
+    except BaseException:
+        for name in reversed(moved):
+            with contextlib.suppress(OSError):
+                if (before / name).exists():
+                    (before / name).replace(target / name)
+                elif not (aside / name).exists():
+                    (target / name).unlink()
+        for place in made:
+            with contextlib.suppress(OSError):
+                place.rmdir()
+        raise
+
+
+def _keep(old: Path, copy: Path) -> None:
+    try:
+        copy.hardlink_to(old)
+    except OSError:
+        shutil.copy2(old, copy)
+
+
+def _draw(folder: Path, results: Sequence[VariableResult], places: Sequence[PlaceMark]) -> None:
+    # The plotting library is slow to load and not needed by those who only want numbers.
+    from ensemble_horizon.products.curve_figures import draw_growth_curves  # noqa: PLC0415
+    from ensemble_horizon.products.maps import draw_horizon_map  # noqa: PLC0415
+    from ensemble_horizon.products.view import map_view  # noqa: PLC0415
+
+    taken: set[str] = set()
+    for result in results:
+        curves, maps = result.curves, result.maps
+        variable = valid_name(str(curves.attrs.get("variable", "variable")), taken)
+        if curves.sizes[PLACE] and curves.sizes[CRITERION]:
+            for position, stamp in enumerate(_stamps(curves)):
+                draw_growth_curves(
+                    curves, folder / f"{variable}_curves_{stamp}.png", start=position
+                )
+        if maps is None:
+            continue
+        names: set[str] = set()
+        criteria = [valid_name(str(label), names) for label in maps[CRITERION].values]
+        view = map_view(maps["horizon"].isel({START: 0, CRITERION: 0}))
+        members = int(curves["members"].max()) if "members" in curves else None
+        for position, stamp in enumerate(_stamps(maps)):
+            for column, criterion in enumerate(criteria):
+                draw_horizon_map(
+                    maps,
+                    folder / f"{variable}_map_{criterion}_{stamp}.png",
+                    start=position,
+                    criterion=column,
+                    places=places,
+                    members=maps.attrs.get("members", members),
+                    last_lead=float(curves["lead"].values[-1]),
+                    view=view,
+                )
+
+
+def _stamps(data: xr.Dataset) -> list[str]:
+    """Return the starts as parts of file names: ``20310105T00``, or the label where pooled."""
+    labels = start_labels(data)
+    starts: np.ndarray = data[START].values
+    stamps = []
+    for start, label in zip(starts, labels, strict=True):
+        text = iso_start(start, label)
+        short = text.replace("-", "").replace(":", "")
+        while short.endswith("00") and "T" in short and len(short) > len("20310105T00"):
+            short = short[:-2]
+        stamps.append(valid_name(short).removeprefix("v_"))
+    return stamps
+
+
+def _readme(names: Sequence[Path]) -> str:
+    notes = {
+        "horizons.csv": "one row per start, variable, place and criterion",
+        "horizons.nc": "curves, fits and limits of regions and sites (CF-1.11)",
+        "horizon_maps.nc": "limits and fits per grid point (CF-1.11)",
+    }
+    lines = ["Products of Ensemble Horizon", "", CAUTION, "", "Files"]
+    lines += [
+        f"  {name.as_posix()}" + (f": {notes[str(name)]}" if str(name) in notes else "")
+        for name in names
+    ]
+    lines += ["", "Columns of horizons.csv"]
+    lines += [f"  {column}: {note}" for column, note in COLUMN_NOTES.items()]
+    lines += ["", "Statuses"]
+    lines += [f"  {status.name}: {meaning}" for status, meaning in STATUS_MEANING.items()]
+    return "\n".join(lines) + "\n"

@@ -1,0 +1,293 @@
+"""Horizon maps: how far ahead the criterion holds, at every grid point, as a picture."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Sequence
+from pathlib import Path
+
+import numpy as np
+import xarray as xr
+from matplotlib.axes import Axes
+from matplotlib.collections import LineCollection
+from matplotlib.patheffects import withStroke
+
+from ensemble_horizon.checks import require_dimension
+from ensemble_horizon.products.coast import coastlines
+from ensemble_horizon.products.hour_scale import HourScale, hour_scale, status_colours
+from ensemble_horizon.products.isolines import contour_lines, label_places
+from ensemble_horizon.products.map_legend import (
+    STATUS_WORDS,
+    MapField,
+    draw_colour_bar,
+    draw_legend,
+    legend_entries,
+    legend_rows,
+    map_notes,
+    status_shares,
+)
+from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.sheet import INK, SOFT_INK, Sheet, line_height, wrapped
+from ensemble_horizon.products.view import MapView, map_view
+from ensemble_horizon.products.wording import lead_number, number, start_text
+from ensemble_horizon.vocabulary import CRITERION, LEAD, START, Status
+
+SOFTWARE = "Ensemble Horizon"
+_WIDEST, _HIGHEST, _NARROWEST = 1020, 690, 620
+_LEFT, _RIGHT = 64, 118
+_PLACE_INK = "#8a2517"
+
+
+def draw_horizon_map(
+    maps: xr.Dataset,
+    path: str | os.PathLike[str],
+    *,
+    start: int = 0,
+    criterion: int = 0,
+    places: Sequence[PlaceMark] = (),
+    members: int | None = None,
+    last_lead: float | None = None,
+    view: MapView | None = None,
+) -> Path:
+    """Draw the map of one start and criterion as PNG.
+
+    Parameters
+    ----------
+    maps : xarray.Dataset
+        Maps of one variable, dimensions (start, criterion, *space).
+    path : path
+        The picture to write.
+    start, criterion : int
+        Positions to draw.
+    places : sequence of PlaceMark
+        Outlines of regions and marks of sites.
+    members : int, optional
+        Number of members, for the title; ``maps.attrs["members"]`` otherwise.
+    last_lead : float, optional
+        End of the run, for the legend; the last ``lead`` of the maps otherwise.
+    view : MapView, optional
+        View of the same grid from an earlier picture, which saves finding it again.
+
+    Raises
+    ------
+    ArgumentError
+        If the maps lack a dimension, or their grid cannot be drawn.
+    ProductError
+        If the picture cannot be written.
+    """
+    for dimension in (START, CRITERION):
+        require_dimension(maps, dimension, "maps")
+    one = maps.isel({START: start, CRITERION: criterion}).compute()
+    view = view or map_view(one["horizon"])
+    content = _field(one, members, last_lead)
+    width, height = view.pixel_size(_WIDEST, _HIGHEST)
+    body = max(width, _NARROWEST)
+    total = body + _LEFT + _RIGHT
+    title = wrapped(content.title, total - 40, 13.5, most=2, bold=True)
+    subtitle = wrapped(content.subtitle, total - 40, 9.5, most=3)
+    top = 18 + len(title) * line_height(13.5) + len(subtitle) * line_height(9.5) + 14
+    entries = legend_entries(content, status_shares(view, content, width, height))
+    rows = legend_rows(entries, total - 40)
+    notes = map_notes(content, total - 40)
+    legend = top + height + 36
+    below = len(rows) * 24 + 10 + len(notes) * line_height(7.5) + 14
+    sheet = Sheet(int(total), int(legend + below))
+    sheet.text(20, 16, "\n".join(title), size=13.5, weight="bold")
+    lower = 16 + len(title) * line_height(13.5) + 2
+    sheet.text(20, lower, "\n".join(subtitle), size=9.5, colour=SOFT_INK)
+    left = _LEFT + (body - width) // 2
+    axes = sheet.axes(left, top, width, height)
+    values = np.where(content.status == Status.reached, content.horizon, np.nan)
+    scale = hour_scale(values, content.units)
+    _paint(axes, view, values, content.status, scale, (width, height))
+    _shore(axes, view, width)
+    named = _places(axes, view, places, width)
+    _contours(axes, view, values, scale, (width, height), content.units, named)
+    _graticule(axes, view, (width, height))
+    if np.isfinite(values).any():
+        draw_colour_bar(sheet, scale, left + width + 22, top, height, content.units)
+    draw_legend(sheet, rows, legend)
+    caution_top = legend + len(rows) * 24 + 8
+    sheet.text(20, caution_top, "\n".join(notes), size=7.5, colour=SOFT_INK)
+    return sheet.save(Path(path), software=SOFTWARE)
+
+
+def _field(one: xr.Dataset, members: int | None, last_lead: float | None) -> MapField:
+    """Gather the fields and write the title and the line below it."""
+    units = "hours"
+    if LEAD in one.coords:
+        units = str(one[LEAD].attrs.get("units", "hours"))
+        last_lead = float(one[LEAD].values[-1]) if last_lead is None else last_lead
+    members = one.attrs.get("members") if members is None else members
+    label = str(one["start_label"].values) if "start_label" in one else ""
+    threshold = ""
+    if "threshold" in one and one["threshold"].ndim == 0 and np.isfinite(one["threshold"]):
+        unit = str(one["threshold_units"].values) if "threshold_units" in one else ""
+        threshold = f" ({number(float(one['threshold']))}{'' if unit in ('', '1') else ' ' + unit})"
+    parts = [f"Criterion: {one[CRITERION].values}{threshold}"]
+    parts.append(f"start {start_text(one[START].values[()], label)}")
+    if members is not None:
+        parts.append(f"{int(members)} members")
+    fields = {
+        name: one[name].values.ravel().astype(float) if name in one else None
+        for name in ("low", "high")
+    }
+    return MapField(
+        horizon=one["horizon"].values.ravel().astype(float),
+        status=one["status"].values.ravel(),
+        low=fields["low"],
+        high=fields["high"],
+        units=units,
+        last_lead=last_lead,
+        title=f"How far ahead the forecast holds: {one.attrs.get('long_name', 'variable')}",
+        subtitle="   ·   ".join(parts),
+    )
+
+
+def _paint(
+    axes: Axes,
+    view: MapView,
+    values: np.ndarray,
+    status: np.ndarray,
+    scale: HourScale,
+    size: tuple[int, int],
+) -> None:
+    """Lay the colours and hatches down, one pixel of the picture at a time."""
+    width, height = size
+    points = view.grid_points(width, height)
+    colours = np.full((values.size + 1, 3), 255, dtype=np.uint8)
+    colours[:-1] = scale.paint(np.where(np.isfinite(values), values, scale.bounds[0]))
+    image = colours[points]
+    states = np.append(status, -1)[points]
+    for code in STATUS_WORDS:
+        here = states == code
+        if here.any():
+            image[here] = status_colours(code, *np.nonzero(here))
+    axes.imshow(
+        image,
+        extent=(view.west, view.east, view.south, view.north),
+        aspect="auto",
+        interpolation="nearest",
+        zorder=0,
+    )
+
+
+def _contours(
+    axes: Axes,
+    view: MapView,
+    values: np.ndarray,
+    scale: HourScale,
+    size: tuple[int, int],
+    units: str,
+    taken: list[tuple[float, float]],
+) -> None:
+    points = view.grid_points(*size)
+    painted = np.append(values, np.nan)[points]
+    lines = contour_lines(view, values.reshape(view.shape), painted, scale.contours)
+    for found in lines.values():
+        if found:
+            # Light lines in a dark case: not to be taken for coasts, which are dark.
+            case = withStroke(linewidth=2.1, foreground=INK, alpha=0.75)
+            axes.add_collection(
+                LineCollection(
+                    found, colors="#fffdf2", linewidths=1.0, zorder=2.5, path_effects=[case]
+                ),
+                autolim=False,
+            )
+    for level, x, y in label_places(lines, view, clear_of=taken):
+        axes.text(
+            x,
+            y,
+            lead_number(level, units),
+            fontsize=8,
+            color=INK,
+            ha="center",
+            va="center",
+            zorder=5,
+            bbox={"boxstyle": "round,pad=0.16", "fc": "#ffffffdd", "ec": "none"},
+        )
+
+
+def _shore(axes: Axes, view: MapView, width: int) -> None:
+    """Draw the coastlines."""
+    if not view.geographic:
+        return
+    wide = view.east - view.west
+    shore = coastlines(view.west, view.east, view.south, view.north, smallest=2 * wide / width)
+    line = 0.45 if wide > 120 else 0.65
+    for colour, extra, faint in (("#ffffff", 0.8, 0.5), ("#14191d", 0.0, 1.0)):
+        axes.add_collection(
+            LineCollection(shore, colors=colour, linewidths=line + extra, alpha=faint, zorder=2),
+            autolim=False,
+        )
+
+
+def _places(
+    axes: Axes, view: MapView, places: Sequence[PlaceMark], width: int
+) -> list[tuple[float, float]]:
+    """Draw outlines and sites with their names, inside the map; return where the names stand."""
+    pixel = (view.east - view.west) / width
+    glow = [withStroke(linewidth=2.4, foreground="white")]
+    named: list[tuple[float, float]] = []
+    for place in places:
+        for x, y in place.shifted(view.west, view.east):
+            outline = len(x) > 1
+            if outline:
+                axes.plot(x, y, color="white", linewidth=2.8, zorder=4, alpha=0.85)
+                axes.plot(x, y, color=_PLACE_INK, linewidth=1.3, zorder=4)
+            else:
+                axes.plot(
+                    x, y, "o", markersize=5.5, color=_PLACE_INK, markeredgecolor="white", zorder=5
+                )
+            left, right = max(float(x.min()), view.west), min(float(x.max()), view.east)
+            top = min(float(y.max()), view.north)
+            leftward = left + (len(place.name) * 8.6 + 14) * pixel > view.east
+            axes.annotate(
+                place.name,
+                (right if leftward else left, top),
+                xytext=(-5 if leftward else 5, -4 if outline else 4),
+                textcoords="offset points",
+                fontsize=8,
+                color=_PLACE_INK,
+                fontweight="bold",
+                ha="right" if leftward else "left",
+                va="top" if outline else "center",
+                path_effects=glow,
+                zorder=6,
+                parse_math=False,
+            )
+            half = (len(place.name) * 4.3 + 6) * pixel
+            named += [(right - half if leftward else left + half, top), (left, top)]
+    return named
+
+
+def _graticule(axes: Axes, view: MapView, size: tuple[int, int]) -> None:
+    axes.set(xlim=(view.west, view.east), ylim=(view.south, view.north))
+    if not view.geographic:
+        axes.set_yticks([] if len(view.shape) == 1 else axes.get_yticks()[1:-1])
+        return
+    columns = _ticks(view.west, view.east, max(size[0] // 80, 2))
+    rows = _ticks(view.south, view.north, max(size[1] // 75, 2))
+    axes.set_xticks(columns, [_meridian(value) for value in columns])
+    axes.set_yticks(rows, [_parallel(value) for value in rows])
+    axes.grid(color="#000000", alpha=0.14, linewidth=0.5, zorder=1.5)
+
+
+def _ticks(low: float, high: float, most: int) -> np.ndarray:
+    steps = (0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5, 10, 15, 20, 30, 45, 60, 90)
+    fitting = [step for step in steps if (high - low) / step <= most]
+    step = fitting[0] if fitting else steps[-1]
+    first, last = np.ceil(low / step - 1e-6), np.floor(high / step + 1e-6)
+    return np.asarray(np.arange(first, last + 1) * step)
+
+
+def _meridian(value: float) -> str:
+    turned = round((value + 180) % 360 - 180, 4)
+    if abs(turned) in (0, 180):
+        return f"{abs(turned):.0f}°"
+    return f"{abs(turned):g}°{'E' if turned > 0 else 'W'}"
+
+
+def _parallel(value: float) -> str:
+    rounded = round(value, 4)
+    return f"{abs(rounded):g}°{'N' if rounded > 0 else 'S' if rounded < 0 else ''}"

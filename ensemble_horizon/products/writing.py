@@ -1,0 +1,138 @@
+"""Files that appear whole or not at all.
+
+A product is written to a neighbour of its target, in the same folder and therefore on the same file
+system, flushed to the disk and then renamed: readers see the old file or the new one, never a part.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import errno
+import os
+import secrets
+import shutil
+from collections.abc import Iterator
+from pathlib import Path
+
+from ensemble_horizon.errors import ProductError
+
+_ROOM_NEEDED = 65_536
+
+
+@contextlib.contextmanager
+def written_whole(target: str | os.PathLike[str]) -> Iterator[Path]:
+    """Give a temporary path beside ``target``; move it into place if the block succeeds.
+
+    Parameters
+    ----------
+    target : path
+        Where the file shall stand. Its folder is made if need be.
+
+    Yields
+    ------
+    pathlib.Path
+        The neighbour to write to; it ends in the same suffix and its name begins with a dot.
+
+    Raises
+    ------
+    ProductError
+        If the folder cannot be made or written, the disk is full, or the file system is read-only.
+        Any other exception passes through; the neighbour is removed in every case.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> folder = Path(tempfile.mkdtemp())
+    >>> with written_whole(folder / "note.txt") as neighbour:
+    ...     _ = neighbour.write_text("whole")
+    >>> [path.name for path in folder.iterdir()]
+    ['note.txt']
+    """
+    place = Path(target)
+    neighbour = place.with_name(f".{place.stem}.{secrets.token_hex(4)}.part{place.suffix}")
+    try:
+        with disk_errors(place):
+            place.parent.mkdir(parents=True, exist_ok=True)
+            refuse_folder(place)
+            yield neighbour
+            flush_to_disk(neighbour)
+            neighbour.replace(place)
+            flush_to_disk(place.parent)
+    finally:
+        with contextlib.suppress(OSError):
+            neighbour.unlink(missing_ok=True)
+
+
+@contextlib.contextmanager
+def disk_errors(target: Path) -> Iterator[None]:
+    """Turn what the disk refuses inside the block into a `ProductError` that names ``target``."""
+    try:
+        yield
+    except ProductError:
+        raise
+    except OSError as error:
+        raise product_error(target, error) from error
+    except RuntimeError as error:
+        # The HDF5 library reports a failed write as a bare RuntimeError.
+        if "HDF error" not in str(error) and "NetCDF" not in str(error):
+            raise
+        raise product_error(target, error) from error
+
+
+def product_error(target: Path, error: Exception) -> ProductError:
+    """Say in plain words why ``target`` could not be written, and what helps."""
+    code = error.errno if isinstance(error, OSError) else None
+    folder = nearest_folder(target)
+    if code in (errno.ENOSPC, errno.EDQUOT) or (code is None and not _has_room(folder)):
+        expected, found = "room on the disk for the file", f"the disk of {folder} is full"
+        remedy = "free some space there, or name a folder on another disk"
+    elif code == errno.EROFS:
+        expected, found = "a folder that can be written", f"{folder} is on a read-only file system"
+        remedy = "name a folder on a disk that can be written"
+    elif code in (errno.EACCES, errno.EPERM):
+        expected, found = "a folder that can be written", f"no permission to write in {folder}"
+        remedy = "ask for write permission there, or name another folder"
+    elif code in (errno.ENOTDIR, errno.EEXIST):
+        expected, found = "a folder", f"a file stands in the way ({error})"
+        remedy = "move that file away, or name another folder"
+    elif code == errno.EISDIR:
+        expected, found = "a file name", "a folder of that name"
+        remedy = "move that folder away, or name another file"
+    else:
+        expected, found = "a place that can be written", str(error) or type(error).__name__
+        remedy = "look at the disk and the folder, or name another folder"
+    return ProductError(str(target), expected=expected, found=found, remedy=remedy)
+
+
+def refuse_folder(place: Path) -> None:
+    """Raise if a folder stands where a file shall go: a rename would fail only at the very end."""
+    if place.is_dir():
+        raise IsADirectoryError(errno.EISDIR, os.strerror(errno.EISDIR), str(place))
+
+
+def flush_to_disk(path: Path) -> None:
+    """Ask the system to put ``path`` (file or folder) on the disk now."""
+    descriptor = os.open(path, os.O_RDONLY)
+    try:
+        os.fsync(descriptor)
+    except OSError as error:
+        # Some network file systems know no fsync of folders; the rename itself has succeeded.
+        if not (path.is_dir() and error.errno in (errno.EINVAL, errno.ENOTSUP)):
+            raise
+    finally:
+        os.close(descriptor)
+
+
+def nearest_folder(target: Path) -> Path:
+    """Return the closest folder above ``target`` that exists."""
+    for parent in target.absolute().parents:
+        if parent.is_dir():
+            return parent
+    return Path.cwd()
+
+
+def _has_room(folder: Path) -> bool:
+    try:
+        return shutil.disk_usage(folder).free >= _ROOM_NEEDED
+    except OSError:
+        return True

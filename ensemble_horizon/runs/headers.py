@@ -1,0 +1,306 @@
+"""What one file says about itself: variables, dimensions, starts, leads, members, grid."""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+
+import netCDF4
+import numpy as np
+
+from ensemble_horizon.errors import InputError
+from ensemble_horizon.runs.decoding import StoredVariable
+from ensemble_horizon.runs.files import FoundFile
+from ensemble_horizon.runs.grids import Grid, read_grid, space_roles
+from ensemble_horizon.runs.handles import LOCK, border, open_raw
+from ensemble_horizon.runs.levels import select_level
+from ensemble_horizon.runs.moments import Moments, Wanted, read_moments
+from ensemble_horizon.runs.recognition import LEVEL, X, Y, recognise, recognise_name
+from ensemble_horizon.runs.times import Ticks
+from ensemble_horizon.vocabulary import LATITUDE, LEAD, LONGITUDE, MEMBER, START, VALID
+
+_RUN_ROLES = (LEAD, VALID, MEMBER, START)
+_REFERENCES = (
+    "coordinates", "bounds", "climatology", "grid_mapping", "cell_measures",
+    "ancillary_variables", "formula_terms",
+)  # fmt: skip
+
+
+@dataclass(frozen=True)
+class VariableHeader:
+    """A data variable as its file describes it.
+
+    ``chunks`` is (lead, *space) in the file's own chunk sizes, None where it is contiguous.
+    """
+
+    name: str
+    units: str
+    dtype: np.dtype
+    attrs: Mapping[str, object]
+    chunks: tuple[int, ...] | None
+
+
+@dataclass(frozen=True)
+class Source:
+    """Where the values of some variables lie in one file.
+
+    ``run_axes`` are the raw axes of start, lead and member (in file order, of sizes
+    ``run_shape``); ``space_axes`` those of the grid's dimensions; ``fixed`` pairs of raw axis and
+    index for everything else, such as the chosen level.
+    """
+
+    path: str
+    run_axes: tuple[int, ...]
+    run_shape: tuple[int, ...]
+    space_axes: tuple[int, ...]
+    fixed: tuple[tuple[int, int], ...]
+
+
+@dataclass(frozen=True)
+class Layout:
+    """Variables of one file that share dimensions; the arrays have the shape of ``run_shape``."""
+
+    source: Source
+    variables: tuple[VariableHeader, ...]
+    start: Ticks
+    lead: Ticks
+    member: np.ndarray | None
+    grid: Grid
+    calendar: str
+    mismatch: str | None
+
+
+@dataclass(frozen=True)
+class FileHeader:
+    """All layouts of one file, its global attributes, and the variables that were asked in vain."""
+
+    file: FoundFile
+    layouts: tuple[Layout, ...]
+    attrs: Mapping[str, object]
+    absent: tuple[str, ...]
+
+
+def read_header(file: FoundFile, wanted: Wanted) -> FileHeader:
+    """Read the header of one file, and close it again.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be opened, holds none of the variables, or has no reference time.
+    """
+    with LOCK:
+        dataset = open_raw(file.path)
+        try:
+            with border(file.path, "the header"):
+                return HeaderReading(dataset, file, wanted).header()
+        finally:
+            dataset.close()
+
+
+class HeaderReading:
+    """The steps of reading one header, with what they share."""
+
+    def __init__(self, dataset: netCDF4.Dataset, file: FoundFile, wanted: Wanted) -> None:
+        self.dataset = dataset
+        self.file = file
+        self.wanted = wanted
+        self.variables: dict[str, StoredVariable] = dict(dataset.variables)
+        self.attributes = {
+            name: {key: variable.getncattr(key) for key in variable.ncattrs()}
+            for name, variable in self.variables.items()
+        }
+        self.sizes = {name: len(dim) for name, dim in dataset.dimensions.items()}
+        self.roles = self._coordinate_roles()
+
+    def header(self) -> FileHeader:
+        """The whole header."""
+        names = self._data_names()
+        chosen = names
+        absent: tuple[str, ...] = ()
+        if self.wanted.variables is not None:
+            chosen = [name for name in self.wanted.variables if name in self.variables]
+            absent = tuple(name for name in self.wanted.variables if name not in self.variables)
+        if not chosen:
+            raise self._no_variable(names)
+        groups: dict[tuple[tuple[str, ...], object], list[str]] = {}
+        for name in chosen:
+            dims = tuple(self.variables[name].dimensions)
+            level = self.wanted.level
+            key = level.get(name) if isinstance(level, Mapping) else level
+            extra = str(self.attributes[name].get("coordinates", ""))
+            groups.setdefault((dims, (key, extra)), []).append(name)
+        layouts = tuple(self._layout(dims, group) for (dims, _), group in groups.items())
+        attrs = {key: self.dataset.getncattr(key) for key in self.dataset.ncattrs()}
+        return FileHeader(self.file, layouts, attrs, absent)
+
+    def _coordinate_roles(self) -> dict[str, str]:
+        """Role of each variable that can be a coordinate."""
+        referred = set(self._referred("coordinates"))
+        roles = {}
+        for name, variable in self.variables.items():
+            attributes = self.attributes[name]
+            role = recognise(name, attributes)
+            own = name in variable.dimensions or name in referred or variable.ndim == 0
+            flat = variable.ndim <= 2 and (
+                role in (LATITUDE, LONGITUDE)
+                or (role in _RUN_ROLES and "standard_name" in attributes)
+            )
+            if role is not None and (own or flat):
+                roles[name] = role
+        return roles
+
+    def _referred(self, *keys: str) -> Iterable[str]:
+        for attributes in self.attributes.values():
+            for key in keys:
+                yield from str(attributes.get(key, "")).replace(":", " ").split()
+
+    def _data_names(self) -> list[str]:
+        aside = set(self._referred(*_REFERENCES)) | set(self.roles) | set(self.sizes)
+        names = [
+            name
+            for name, variable in self.variables.items()
+            if name not in aside and _is_numeric(variable) and variable.ndim
+        ]
+        moving = [name for name in names if self._moves(name)]
+        return moving or names
+
+    def _moves(self, name: str) -> bool:
+        return any(
+            self.dim_role(dim) in _RUN_ROLES for dim in self.variables[name].dimensions
+        )
+
+    @property
+    def path(self) -> str:
+        """The file's path."""
+        return self.file.path
+
+    def require(self, name: str) -> StoredVariable:
+        """The variable ``name``, or an `InputError` that lists the others."""
+        if name not in self.variables:
+            raise self._no_variable(self._data_names())
+        return self.variables[name]
+
+    def dim_role(self, dim: str) -> str | None:
+        """The role of a dimension: of its own coordinate, of one along it, or of its name."""
+        if dim in self.roles:
+            return self.roles[dim]
+        along = {
+            role
+            for name, role in self.roles.items()
+            if tuple(self.variables[name].dimensions) == (dim,)
+        }
+        for role in (*_RUN_ROLES, LEVEL):
+            if role in along:
+                return role
+        return recognise_name(dim) if dim not in self.variables else None
+
+    def _layout(self, dims: tuple[str, ...], names: Sequence[str]) -> Layout:
+        dim_roles = {dim: self.dim_role(dim) for dim in dims}
+        places = self.places(dims, names[0])
+        space = space_roles(dims, dim_roles, places)
+        fixed: list[tuple[int, int]] = []
+        run_axes: list[int] = []
+        for axis, dim in enumerate(dims):
+            if dim in space:
+                continue
+            if dim_roles[dim] in _RUN_ROLES:
+                run_axes.append(axis)
+            elif dim_roles[dim] == LEVEL:
+                values = self.variables.get(dim)
+                fixed.append((axis, select_level(self.file.path, names, dim, self.sizes[dim],
+                                                 values, self.wanted.level)))  # fmt: skip
+            elif self.sizes[dim] == 1:
+                fixed.append((axis, 0))
+            else:
+                raise self._unknown_dimension(names[0], dim)
+        space_dims = tuple(dim for dim in dims if dim in space)
+        source = Source(
+            self.file.path,
+            tuple(run_axes),
+            tuple(self.sizes[dims[axis]] for axis in run_axes),
+            tuple(axis for axis, dim in enumerate(dims) if dim in space),
+            tuple(fixed),
+        )
+        run_dims = tuple(dims[axis] for axis in run_axes)
+        moments = self._moments(run_dims, names[0])
+        grid = read_grid(space_dims, space, self.sizes, places)
+        headers = tuple(self._variable(name, source, moments) for name in names)
+        return Layout(source, headers, moments.start, moments.lead, moments.member, grid,
+                      moments.calendar, moments.mismatch)  # fmt: skip
+
+    def _moments(self, run_dims: tuple[str, ...], name: str) -> Moments:
+        listed = str(self.attributes[name].get("coordinates", "")).split()
+        candidates: dict[str, list[str]] = {}
+        for coordinate, role in self.roles.items():
+            over = tuple(self.variables[coordinate].dimensions)
+            if role in _RUN_ROLES and set(over) <= set(run_dims):
+                candidates.setdefault(role, []).append(coordinate)
+        chosen = {
+            role: self.variables[min(found, key=lambda c: (c not in run_dims, c not in listed))]
+            for role, found in candidates.items()
+        }
+        sizes = tuple(self.sizes[dim] for dim in run_dims)
+        roles = {dim: self.dim_role(dim) for dim in run_dims}
+        return read_moments(self.file, chosen, run_dims, sizes, roles, self.wanted)
+
+    def places(self, dims: tuple[str, ...], name: str) -> dict[str, StoredVariable]:
+        """Latitude, longitude, y and x of the variable ``name``, as far as the file has them."""
+        listed = str(self.attributes[name].get("coordinates", "")).split()
+        found: dict[str, list[str]] = {}
+        for coordinate, role in self.roles.items():
+            if role in (LATITUDE, LONGITUDE, Y, X) and set(
+                self.variables[coordinate].dimensions
+            ) <= set(dims):
+                found.setdefault(role, []).append(coordinate)
+        return {
+            role: self.variables[min(names, key=lambda c: (c not in listed, c not in dims))]
+            for role, names in found.items()
+        }
+
+    def _variable(self, name: str, source: Source, moments: Moments) -> VariableHeader:
+        variable, attributes = self.variables[name], self.attributes[name]
+        chunking = variable.chunking()
+        chunks = None
+        if chunking is not None and chunking != "contiguous":
+            lead_axis = moments.lead_axis
+            lead = 1 if lead_axis is None else int(chunking[source.run_axes[lead_axis]])
+            chunks = (lead, *(int(chunking[axis]) for axis in source.space_axes))
+        units = str(attributes.get("units", ""))
+        return VariableHeader(name, units, variable.dtype, attributes, chunks)
+
+    def _no_variable(self, names: list[str]) -> InputError:
+        offered = ", ".join(names) or "none"
+        wanted = self.wanted.variables
+        if not wanted:
+            return InputError(
+                self.file.path,
+                expected="a data variable",
+                found=f"only {', '.join(self.variables) or 'an empty file'}",
+                remedy="name the variable, or leave this file out",
+            )
+        near = [
+            match
+            for name in wanted
+            for match in difflib.get_close_matches(name, names, n=2, cutoff=0.4)
+        ]
+        hint = f"did you mean {' or '.join(dict.fromkeys(near))}? " if near else ""
+        return InputError(
+            self.file.path,
+            expected=f"the variable {' or '.join(map(repr, wanted))}",
+            found=f"the variables {offered}",
+            remedy=f"{hint}Take one of those named" if not near else hint.strip(),
+        )
+
+    def _unknown_dimension(self, name: str, dim: str) -> InputError:
+        return InputError(
+            self.file.path,
+            expected=f"to recognise every dimension of {name!r}",
+            found=f"the dimension {dim!r} of size {self.sizes[dim]} without a telling coordinate",
+            remedy=f"give {dim!r} a coordinate variable with a CF standard_name, units or axis",
+        )
+
+
+def _is_numeric(variable: StoredVariable) -> bool:
+    dtype = variable.dtype
+    return isinstance(dtype, np.dtype) and dtype.kind in "iuf"

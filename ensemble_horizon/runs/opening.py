@@ -1,0 +1,151 @@
+"""Opening runs and analyses as lazy datasets in the canonical layout."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+
+import dask.array as da
+import numpy as np
+import xarray as xr
+
+from ensemble_horizon.runs.assembly import Start, read_catalogue
+from ensemble_horizon.runs.catalogue import BLOCK_BYTES, Catalogue
+from ensemble_horizon.runs.decoding import PACKING
+from ensemble_horizon.runs.files import Files
+from ensemble_horizon.runs.levels import Level
+from ensemble_horizon.vocabulary import COORDINATE_ATTRIBUTES, LEAD, MEMBER, START, VALID
+
+_NOT_KEPT = (*PACKING, "coordinates", "grid_mapping", "cell_measures", "ancillary_variables")
+
+
+def open_runs(
+    files: Files,
+    *,
+    variables: str | Sequence[str] | None = None,
+    level: Level = None,
+    lagged: bool = False,
+    start: Start | None = None,
+    drop: Sequence[int | str] = (),
+    strict: bool = False,
+) -> xr.Dataset:
+    """Open ensemble runs lazily.
+
+    Parameters
+    ----------
+    files, variables, level, lagged, start, strict
+        As for `ensemble_horizon.runs.read_catalogue`.
+    drop : sequence of labels
+        Members to leave out; labels that do not occur are ignored.
+
+    Returns
+    -------
+    Dataset, dimensions (start, lead, member, *space)
+        dask arrays of float32 or float64 with NaN where missing or absent; one chunk holds one
+        start, a block of leads and all members. Coordinates ``start``, ``lead`` (hours),
+        ``member``, ``valid`` (start, lead) and those of the grid, in the order of the source.
+
+    Raises
+    ------
+    InputError
+        As for `ensemble_horizon.runs.read_catalogue`; a file that breaks later raises it when
+        values are computed.
+    """
+    catalogue = read_catalogue(
+        files, variables=variables, level=level, lagged=lagged, start=start, strict=strict
+    )
+    return to_dataset(catalogue.without(drop) if drop else catalogue)
+
+
+def open_analyses(
+    files: Files,
+    *,
+    variables: str | Sequence[str] | None = None,
+    level: Level = None,
+    strict: bool = False,
+) -> xr.Dataset:
+    """Open verifying analyses lazily.
+
+    Every valid time of the files is one analysis; a reference time is not needed, and is not
+    looked at.
+
+    Returns
+    -------
+    Dataset, dimensions (valid, *space)
+
+    Raises
+    ------
+    InputError
+        As for `ensemble_horizon.runs.read_catalogue`.
+    """
+    catalogue = read_catalogue(
+        files, variables=variables, level=level, strict=strict, analysis=True
+    )
+    data = to_dataset(catalogue).drop_vars(VALID).isel({LEAD: 0, MEMBER: 0}, drop=True)
+    data = data.rename({START: VALID})
+    data[VALID].attrs = dict(COORDINATE_ATTRIBUTES[VALID])
+    return data
+
+
+def to_dataset(catalogue: Catalogue, budget: int = BLOCK_BYTES) -> xr.Dataset:
+    """The lazy dataset of a catalogue; ``budget`` is the size of a chunk in bytes."""
+    dims = (START, LEAD, MEMBER, *catalogue.grid.dims)
+    data = {
+        name: (dims, _lazy(catalogue, name, budget), _kept(header.attrs))
+        for name, header in catalogue.variables.items()
+    }
+    lead_attributes = COORDINATE_ATTRIBUTES[LEAD] | {"units": catalogue.lead_units}
+    coords = {
+        START: (START, catalogue.starts, dict(COORDINATE_ATTRIBUTES[START])),
+        LEAD: (LEAD, catalogue.leads, lead_attributes),
+        MEMBER: (MEMBER, np.asarray(catalogue.members), dict(COORDINATE_ATTRIBUTES[MEMBER])),
+        VALID: ((START, LEAD), catalogue.valid, dict(COORDINATE_ATTRIBUTES[VALID])),
+        **catalogue.grid.coords,
+    }
+    return xr.Dataset(data, coords=coords, attrs=dict(catalogue.attrs))
+
+
+def _lazy(catalogue: Catalogue, name: str, budget: int) -> da.Array:
+    block, window = catalogue.natural_block(name, budget)
+    dtype = catalogue.dtype(name)
+    shape = (len(catalogue.starts), catalogue.leads.size, len(catalogue.members))
+    steps = (1, block, max(1, shape[2]), *window)
+    chunks = tuple(
+        _split(length, step)
+        for length, step in zip((*shape, *catalogue.grid.shape), steps, strict=True)
+    )
+    made: da.Array = da.map_blocks(  # type: ignore[no-untyped-call]
+        _load,
+        chunks=chunks,
+        dtype=dtype,
+        meta=np.empty((0,) * len(chunks), dtype=dtype),
+        name=f"runs-{name}-{catalogue.token}",
+        catalogue=catalogue,
+        variable=name,
+        spans=chunks,
+    )
+    return made
+
+
+def _split(length: int, step: int) -> tuple[int, ...]:
+    whole, rest = divmod(length, max(1, step))
+    return (step,) * whole + ((rest,) if rest or not whole else ())
+
+
+def _load(
+    *,
+    catalogue: Catalogue,
+    variable: str,
+    spans: tuple[tuple[int, ...], ...],
+    block_id: tuple[int, ...],
+) -> np.ndarray:
+    """Read one chunk: one start, a block of leads, all members, a window of the grid."""
+    parts = [
+        slice(sum(sizes[:index]), sum(sizes[: index + 1]))
+        for sizes, index in zip(spans, block_id, strict=True)
+    ]
+    values = catalogue.read(variable, block_id[0], parts[1], parts[2], tuple(parts[3:]))
+    return values.swapaxes(0, 1)[np.newaxis]
+
+
+def _kept(attributes: Mapping[str, object]) -> dict[str, object]:
+    return {key: value for key, value in attributes.items() if key not in _NOT_KEPT}

@@ -1,0 +1,177 @@
+"""Reading a settings file: every mistake at once, each with its key."""
+
+from __future__ import annotations
+
+import difflib
+import tomllib
+from pathlib import Path
+from typing import Any
+
+from pydantic import ValidationError
+
+from ensemble_horizon.errors import EnsembleHorizonError, SettingsError
+from ensemble_horizon.settings.criteria import (
+    ChanceTable,
+    CriterionTable,
+    Table,
+    criterion_of,
+    has_text,
+)
+from ensemble_horizon.settings.tables import (
+    ClimatologyTable,
+    EngineTable,
+    GrowthTable,
+    ProductsTable,
+    RegionTable,
+    RunsTable,
+    Settings,
+    SiteTable,
+    VariableTable,
+)
+from ensemble_horizon.spread import Region, Site
+
+
+def read_settings(path: str | Path) -> Settings:
+    """Read and check a settings file.
+
+    Raises
+    ------
+    SettingsError
+        if the file cannot be read, is no TOML, or holds mistakes; all mistakes in one message.
+    """
+    source = Path(path)
+    try:
+        text = source.read_text(encoding="utf-8")
+    except (OSError, UnicodeDecodeError) as error:
+        raise SettingsError(
+            str(path),
+            expected="a readable settings file",
+            found=getattr(error, "strerror", None) or str(error),
+            remedy="check the path; a sample stands in configs/",
+        ) from error
+    try:
+        table = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise SettingsError(
+            str(path), expected="TOML", found=str(error), remedy="correct that line"
+        ) from error
+    return settings_from(table, base=source.resolve().parent, text=text, name=str(path))
+
+
+def settings_from(
+    table: dict[str, Any], *, base: Path | None = None, text: str = "", name: str = "settings"
+) -> Settings:
+    """Check a settings table that is already in memory.
+
+    Raises
+    ------
+    SettingsError
+        listing every mistake with its key.
+
+    Examples
+    --------
+    >>> settings_from({"runs": {"files": "a.nc"}, "variables": {}, "products": {"folder": "out"}})
+    Traceback (most recent call last):
+    ...
+    ensemble_horizon.errors.SettingsError: settings: expected settings without mistakes; found 1:
+      variables: at least 1 item after validation, not 0. Next: correct it and run again.
+    """
+    hidden = {key: "unknown key" for key in ("base", "text") if key in table}
+    try:
+        settings = Settings.model_validate(
+            {
+                **{k: v for k, v in table.items() if k not in hidden},
+                "base": base or Path(),
+                "text": text,
+            }
+        )
+        mistakes: list[str] = []
+    except ValidationError as error:
+        mistakes = [_mistake(item) for item in error.errors(include_url=False)]
+    mistakes += [f"{key}: {what}" for key, what in hidden.items()]
+    if not mistakes:
+        mistakes += _cross_checks(settings)
+    if mistakes:
+        listing = "\n  ".join(dict.fromkeys(mistakes))
+        raise SettingsError(
+            name,
+            expected="settings without mistakes",
+            found=f"{len(mistakes)}:\n  {listing}",
+            remedy="correct it and run again"
+            if len(mistakes) == 1
+            else "correct them and run again",
+        )
+    return settings
+
+
+def _cross_checks(settings: Settings) -> list[str]:
+    """Mistakes that show only when tables are held against one another."""
+    found = []
+    doubled = set(settings.regions) & set(settings.sites)
+    found += [f"sites.{name}: a region has the same name" for name in sorted(doubled)]
+    for kind, tables in (("regions", settings.regions), ("sites", settings.sites)):
+        for name, table in tables.items():
+            try:
+                (Region if kind == "regions" else Site)(name, **table.model_dump())
+            except EnsembleHorizonError as error:
+                found.append(f"{kind}.{name}: expected {error.expected}, found {error.found}")
+    for name, variable in settings.variables.items():
+        for number, item in enumerate(variable.criteria):
+            key = f"variables.{name}.criteria[{number}]"
+            if item.climatology_fraction is not None and settings.climatology is None:
+                found.append(f"{key}.climatology_fraction: needs a [climatology] file")
+            if variable.units is not None or not has_text(item):
+                try:
+                    criterion_of(item, variable.units or "1", key)
+                except EnsembleHorizonError as error:
+                    found.append(f"{error.culprit}: expected {error.expected}, found {error.found}")
+    return found
+
+
+def _mistake(item: Any) -> str:
+    key = _key(item["loc"])
+    if item["type"] == "extra_forbidden":
+        known = _known_keys(item["loc"])
+        near = difflib.get_close_matches(str(item["loc"][-1]), known, n=1)
+        hint = f"did you mean {near[0]!r}?" if near else f"known here: {', '.join(sorted(known))}"
+        return f"{key}: unknown key; {hint}"
+    if item["type"] == "missing":
+        return f"{key}: missing"
+    message = item["msg"].removeprefix("Value error, ")
+    for phrase in ("Dictionary should have ", "Input should be ", "Tuple should have "):
+        message = message.removeprefix(phrase)
+    found = item["input"]
+    if isinstance(found, str | int | float | bool):
+        message += f"; found {found!r}"
+    return f"{key}: {message}"
+
+
+def _key(loc: tuple[int | str, ...]) -> str:
+    text = ""
+    for part in loc:
+        if isinstance(part, int):
+            text += f"[{part}]"
+        elif part not in ("str", "int", "float", "tuple[str, ...]") and not part.startswith(
+            ("literal[", "tuple[", "constrained-", "function-")
+        ):
+            text += f".{part}" if text else part
+    return text
+
+
+def _known_keys(loc: tuple[int | str, ...]) -> list[str]:
+    tables: dict[str, type[Table]] = {
+        "runs": RunsTable,
+        "variables": VariableTable,
+        "regions": RegionTable,
+        "sites": SiteTable,
+        "growth": GrowthTable,
+        "climatology": ClimatologyTable,
+        "engine": EngineTable,
+        "products": ProductsTable,
+    }
+    if len(loc) == 1:
+        return [name for name in Settings.model_fields if name not in ("base", "text")]
+    table = tables[str(loc[0])]
+    if "criteria" in loc:
+        table = ChanceTable if "chance" in loc[:-1] else CriterionTable
+    return list(table.model_fields)

@@ -1,0 +1,169 @@
+"""The tables of a settings file as frozen records."""
+
+from __future__ import annotations
+
+import difflib
+from pathlib import Path
+from typing import Annotated, Literal
+
+from pydantic import Field, field_validator, model_validator
+
+from ensemble_horizon.errors import SettingsError
+from ensemble_horizon.growth.laws import LAWS
+from ensemble_horizon.horizon.criteria import Criterion
+from ensemble_horizon.settings.criteria import (
+    CriterionTable,
+    Fraction,
+    Positive,
+    Table,
+    criterion_of,
+)
+from ensemble_horizon.spread import Region, Site
+
+
+class RunsTable(Table):
+    """``[runs]``: which files, which members, and what to do with a faulty member."""
+
+    files: str | tuple[str, ...]
+    members: int | tuple[int | str, ...] | None = None
+    control: int | str | None = None
+    minimum_members: Annotated[int, Field(ge=2)] = 5
+    incomplete: Literal["drop", "use", "stop"] = "drop"
+    lagged: bool = False
+    starts: Literal["all", "latest"] | tuple[str, ...] = "all"
+
+
+class VariableTable(Table):
+    """``[variables.NAME]``: where the variable comes from and what it must meet."""
+
+    source: str | None = None
+    speed: tuple[str, str] | None = None
+    label: str | None = None
+    units: str | None = None
+    plausible: tuple[float, float] | None = None
+    level: float | None = None
+    hold: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 0.0
+    criteria: Annotated[tuple[CriterionTable, ...], Field(min_length=1)]
+
+    @model_validator(mode="after")
+    def _one_source(self) -> VariableTable:
+        if self.source is not None and self.speed is not None:
+            raise ValueError("either source or speed, not both")
+        if self.plausible is not None and self.plausible[0] >= self.plausible[1]:
+            raise ValueError("plausible = [lowest, highest] with lowest below highest")
+        return self
+
+
+class RegionTable(Table):
+    """``[regions.NAME]``: a box; west may lie east of east, across the date line."""
+
+    south: float = -90.0
+    north: float = 90.0
+    west: float = -180.0
+    east: float = 180.0
+
+
+class SiteTable(Table):
+    """``[sites.NAME]``: a point, and how far its grid point may lie away."""
+
+    latitude: float
+    longitude: float
+    reach_km: Positive | None = None
+
+
+class GrowthTable(Table):
+    """``[growth]``: the law, the scale of the fit, and the confidence of all intervals."""
+
+    law: str = "auto"
+    scale: Literal["log", "linear"] = "log"
+    confidence: Fraction = 0.9
+
+    @field_validator("law")
+    @classmethod
+    def _known(cls, value: str) -> str:
+        known = ["auto", *LAWS]
+        if value not in known:
+            near = difflib.get_close_matches(value, known, n=1)
+            hint = f"; did you mean {near[0]!r}?" if near else ""
+            raise ValueError(f"one of {', '.join(known)}{hint}")
+        return value
+
+
+class ClimatologyTable(Table):
+    """``[climatology]``: a file of climatological standard deviations, and names in it."""
+
+    file: str
+    names: dict[str, str] = Field(default_factory=dict)
+
+
+class EngineTable(Table):
+    """``[engine]``: where the reading is done."""
+
+    workers: Annotated[int, Field(ge=1, le=1024)] | None = None
+    block_memory_mib: Annotated[int, Field(ge=8)] = 192
+
+
+class ProductsTable(Table):
+    """``[products]``: what is written, and where."""
+
+    folder: str
+    maps: Literal["each", "pooled", "none"] | None = None
+    map_intervals: bool = True
+    figures: bool = True
+
+
+class Settings(Table):
+    """A whole settings file. Relative paths count from the folder of the file."""
+
+    title: str = "Ensemble horizons"
+    runs: RunsTable
+    variables: Annotated[dict[str, VariableTable], Field(min_length=1)]
+    regions: dict[str, RegionTable] = Field(default_factory=dict)
+    sites: dict[str, SiteTable] = Field(default_factory=dict)
+    growth: GrowthTable = Field(default_factory=GrowthTable)
+    climatology: ClimatologyTable | None = None
+    engine: EngineTable = Field(default_factory=EngineTable)
+    products: ProductsTable
+
+    base: Path = Field(default=Path(), exclude=True)
+    text: str = Field(default="", exclude=True)
+
+    def path(self, name: str) -> Path:
+        """A path of the settings, counted from the folder of the settings file."""
+        return self.base / name
+
+    def run_files(self) -> str | list[str]:
+        """The ``files`` of ``[runs]``, counted from the folder of the settings file."""
+        if isinstance(self.runs.files, str):
+            return str(self.path(self.runs.files))
+        return [str(self.path(name)) for name in self.runs.files]
+
+    def places(self) -> tuple[tuple[Region, ...], tuple[Site, ...]]:
+        """Regions and sites; the whole domain where neither is named."""
+        regions = tuple(Region(name, **table.model_dump()) for name, table in self.regions.items())
+        sites = tuple(Site(name, **table.model_dump()) for name, table in self.sites.items())
+        return (regions or (Region("domain"),) if not sites else regions), sites
+
+    def criteria(self, variable: str, units: str) -> dict[str, Criterion]:
+        """Criteria of a variable by label, in its units.
+
+        Raises
+        ------
+        SettingsError
+            if a tolerance has a unit that is no difference of the variable, or two criteria
+            share a label.
+        """
+        found: dict[str, Criterion] = {}
+        for number, table in enumerate(self.variables[variable].criteria):
+            key = f"variables.{variable}.criteria[{number}]"
+            criterion = criterion_of(table, units, key)
+            label = table.name or criterion.label
+            if label in found:
+                raise SettingsError(
+                    f"{key}.name",
+                    expected="a name of its own for every criterion",
+                    found=f"a second {label!r}",
+                    remedy="rename one of them",
+                )
+            found[label] = criterion
+        return found

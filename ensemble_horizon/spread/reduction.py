@@ -1,0 +1,214 @@
+"""One block of members reduced where it was read.
+
+A block is one start, a few leads and all members over one window of the grid. Nothing of the size
+of the ensemble leaves `reduce_block`: fields of spread variance, weighted sums for regions, the
+members' values at sites and at a thin sample of points.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from ensemble_horizon.spread.moments import beyond_median, member_deviations, member_variance
+
+_SLAB = 8192
+
+
+@dataclass(frozen=True)
+class RegionWeights:
+    """Weights over the flattened grid, kept as the points that count.
+
+    index : (P,) int, increasing; weight : (P,) float summing to one
+    """
+
+    name: str
+    index: np.ndarray
+    weight: np.ndarray
+
+
+@dataclass(frozen=True)
+class Reduction:
+    """What to keep of every block.
+
+    Parameters
+    ----------
+    size : int
+        Points of the flattened grid.
+    regions : tuple of RegionWeights
+    sites, sample : (S,) and (K,) int indices into the flattened grid
+    beyond : tuple of float
+        Distances from the median, for chance criteria.
+    fields : bool
+        Whether fields at every point are wanted.
+    """
+
+    size: int
+    regions: tuple[RegionWeights, ...] = ()
+    sites: np.ndarray = field(default_factory=lambda: np.empty(0, dtype=int))
+    sample: np.ndarray = field(default_factory=lambda: np.empty(0, dtype=int))
+    beyond: tuple[float, ...] = ()
+    fields: bool = True
+
+
+@dataclass
+class Summary:
+    """What is left of T leads, M members, P points; R regions, A distances, S sites, K samples."""
+
+    variance: np.ndarray | None  # (T, P)
+    share: np.ndarray | None  # (A, T, P) share of members beyond the distance
+    region_sum: np.ndarray  # (T, R) sum of weight x variance over points with a value
+    region_weight: np.ndarray  # (T, R) sum of those weights
+    gram: np.ndarray  # (T, R, M, M) weighted inner products of member deviations
+    region_beyond: np.ndarray  # (A, T, R, M) weighted share of points where the member is beyond
+    site_values: np.ndarray  # (T, M, S)
+    sample_values: np.ndarray  # (T, M, K)
+    gaps: np.ndarray  # (T, M) points without a value
+    common_gaps: np.ndarray  # (T,) points without a value in any member
+    low: np.ndarray  # (T, M) smallest value
+    high: np.ndarray  # (T, M) largest value
+
+    def add(self, part: Summary, leads: slice, points: np.ndarray | None) -> None:
+        """Put the summary of a block into its place in the summary of a whole start."""
+        where = slice(None) if points is None else points
+        if self.variance is not None and part.variance is not None:
+            self.variance[leads, where] = part.variance
+        if self.share is not None and part.share is not None:
+            self.share[:, leads, where] = part.share
+        self.region_sum[leads] += part.region_sum
+        self.region_weight[leads] += part.region_weight
+        self.gram[leads] += part.gram
+        self.region_beyond[:, leads] += part.region_beyond
+        for kept, found in (
+            (self.site_values[leads], part.site_values),
+            (self.sample_values[leads], part.sample_values),
+        ):
+            np.copyto(kept, found, where=np.isfinite(found))
+        self.gaps[leads] += part.gaps
+        self.common_gaps[leads] += part.common_gaps
+        self.low[leads] = np.fmin(self.low[leads], part.low)
+        self.high[leads] = np.fmax(self.high[leads], part.high)
+
+
+def reduce_block(values: np.ndarray, reduction: Reduction, points: np.ndarray | None) -> Summary:
+    """Reduce the members of a block.
+
+    Parameters
+    ----------
+    values : (M, T, P) floats, NaN where there is no value
+    reduction : Reduction
+    points : (P,) int, increasing, or None
+        Which points of the flattened grid these are; None means all of them.
+    """
+    members, leads, size = values.shape
+    summary = empty_summary(reduction, members, leads, size)
+    site_from, site_to = _locate(reduction.sites, points)
+    sample_from, sample_to = _locate(reduction.sample, points)
+    located = [(*_locate(region.index, points), region.weight) for region in reduction.regions]
+    for lead in range(leads):
+        field_values = values[:, lead]
+        summary.site_values[lead][:, site_to] = field_values[:, site_from]
+        summary.sample_values[lead][:, sample_to] = field_values[:, sample_from]
+        present = _note_health(summary, lead, field_values)
+        if present.sum() < 2:
+            continue
+        kept = field_values if present.all() else field_values[present]
+        variance, _ = member_variance(kept)
+        if summary.variance is not None:
+            summary.variance[lead] = variance
+        beyond = [beyond_median(kept, distance) for distance in reduction.beyond]
+        if summary.share is not None:
+            for number, far in enumerate(beyond):
+                count = np.isfinite(kept).sum(axis=0)
+                with np.errstate(invalid="ignore", divide="ignore"):
+                    summary.share[number, lead] = np.where(
+                        count > 0, far.sum(axis=0) / count, np.nan
+                    )
+        for place, (source, target, weight) in enumerate(located):
+            _reduce_region(
+                summary, lead, place, present, kept, variance, beyond, source, weight[target]
+            )
+    return summary
+
+
+def empty_summary(reduction: Reduction, members: int, leads: int, size: int) -> Summary:
+    """A summary with nothing in it yet."""
+    regions, distances = len(reduction.regions), len(reduction.beyond)
+    fields = reduction.fields
+    return Summary(
+        variance=np.full((leads, size), np.nan, dtype=np.float32) if fields else None,
+        share=np.full((distances, leads, size), np.nan, np.float32)
+        if fields and distances
+        else None,
+        region_sum=np.zeros((leads, regions)),
+        region_weight=np.zeros((leads, regions)),
+        gram=np.zeros((leads, regions, members, members)),
+        region_beyond=np.zeros((distances, leads, regions, members)),
+        site_values=np.full((leads, members, reduction.sites.size), np.nan),
+        sample_values=np.full((leads, members, reduction.sample.size), np.nan, dtype=np.float32),
+        gaps=np.zeros((leads, members), dtype=np.int64),
+        common_gaps=np.zeros(leads, dtype=np.int64),
+        low=np.full((leads, members), np.nan),
+        high=np.full((leads, members), np.nan),
+    )
+
+
+def _note_health(summary: Summary, lead: int, values: np.ndarray) -> np.ndarray:
+    low, high = values.min(axis=1), values.max(axis=1)  # NaN where a member has any gap
+    broken = ~np.isfinite(low + high)
+    if broken.any():
+        gaps = np.zeros(values.shape, dtype=bool)
+        gaps[broken] = ~np.isfinite(values[broken])
+        summary.gaps[lead] = gaps.sum(axis=1)
+        summary.common_gaps[lead] = gaps.all(axis=0).sum() if broken.all() else 0
+        for member in np.flatnonzero(broken):
+            finite = values[member][~gaps[member]]
+            low[member], high[member] = (
+                (finite.min(), finite.max()) if finite.size else (np.nan,) * 2
+            )
+    summary.low[lead], summary.high[lead] = low, high
+    return np.asarray(np.isfinite(low))
+
+
+def _reduce_region(
+    summary: Summary,
+    lead: int,
+    place: int,
+    present: np.ndarray,
+    values: np.ndarray,
+    variance: np.ndarray,
+    beyond: list[np.ndarray],
+    source: np.ndarray | slice,
+    weight: np.ndarray,
+) -> None:
+    local = variance[source].astype(float)
+    known = np.isfinite(local)
+    weight = weight if known.all() else np.where(known, weight, 0.0)
+    summary.region_sum[lead, place] += weight @ np.where(known, local, 0.0)
+    summary.region_weight[lead, place] += weight.sum()
+    rows = np.flatnonzero(present)
+    gram = np.zeros((rows.size, rows.size))
+    chosen = values[:, source]
+    for first in range(0, weight.size, _SLAB):
+        piece = slice(first, first + _SLAB)
+        deviation, _ = member_deviations(chosen[:, piece])
+        deviation = deviation * np.sqrt(weight[piece]).astype(deviation.dtype)
+        gram += deviation @ deviation.T
+    summary.gram[lead, place][np.ix_(rows, rows)] += gram
+    for number, far in enumerate(beyond):
+        summary.region_beyond[number, lead, place, rows] += far[:, source] @ weight
+
+
+def _locate(
+    index: np.ndarray, points: np.ndarray | None
+) -> tuple[np.ndarray | slice, np.ndarray | slice]:
+    """Positions of wanted points within a window, and which of the wanted they are."""
+    if points is None:
+        whole = index.size > 0 and index[-1] - index[0] + 1 == index.size
+        if whole and np.all(np.diff(index) == 1):
+            return slice(int(index[0]), int(index[-1]) + 1), slice(None)
+        return index, slice(None)
+    position = np.minimum(np.searchsorted(points, index), points.size - 1)
+    target = np.flatnonzero(points[position] == index)
+    return position[target], target
