@@ -9,8 +9,8 @@ the numbers were chosen is told in the README beside this script.
 from __future__ import annotations
 
 import argparse
-import os
-import shutil
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 import netCDF4
@@ -26,8 +26,8 @@ NIGHT = "night_20310214T00"
 CLIMATOLOGY = "climatology.nc"
 MEMBERS = 20
 LEAD_HOURS = 6 * np.arange(41)
-LATITUDE = 28.0 + 1.35 * np.arange(24)
-LONGITUDE = -179.0 + 1.5 * np.arange(36)
+LATITUDE: Array = np.round(28.0 + 1.35 * np.arange(24), 2)
+LONGITUDE: Array = -179.0 + 1.5 * np.arange(36.0)
 
 CHANNEL = toys.TwoLayerChannel(
     zonal_waves=12,
@@ -42,7 +42,7 @@ CHANNEL = toys.TwoLayerChannel(
     drag_rate=0.8,
 )
 STEP_HOURS = 1
-SPIN_UP_DAYS = 60
+SPIN_UP_DAYS = 32  # short enough that rounding errors stay small on any machine, see the README
 BREEDING_DAYS = 2
 INITIAL_WIND_ERROR = 0.3  # m s-1, RMS of the vector over the grid
 PERTURBATION_SCALE = 9.0e5  # m, shorter scales are left out of the first disturbance
@@ -53,12 +53,12 @@ WIND_FACTOR = 0.65
 AIR_DENSITY = 1.2  # kg m-3
 MEAN_PRESSURE = 101300.0  # Pa
 
-CLIMATOLOGY_DAYS = 60
-CLIMATOLOGY_SKIP_DAYS = 20
-CLIMATOLOGY_SHIFTS = 3
+CLIMATOLOGY_RUNS = 8
+CLIMATOLOGY_SKIP_DAYS = 15
+CLIMATOLOGY_DAYS = 45
 
 FILL = np.int16(-32768)
-SCALE = {"eastward_wind": 0.01, "northward_wind": 0.01, "air_pressure_at_sea_level": 1.0}
+SCALE = {"eastward_wind": 0.02, "northward_wind": 0.02, "air_pressure_at_sea_level": 2.0}
 OFFSET = {"eastward_wind": 0.0, "northward_wind": 0.0, "air_pressure_at_sea_level": MEAN_PRESSURE}
 ATTRIBUTES = {
     "eastward_wind": {
@@ -79,12 +79,9 @@ ATTRIBUTES = {
 }
 
 
-def fields(states: Array, shift: float = 0.0) -> dict[str, Array]:
-    """Return wind and pressure (..., latitude, longitude) of states (..., N).
-
-    ``shift`` moves the grid by so many degrees along the channel.
-    """
-    found = CHANNEL.evaluate(states, LATITUDE, LONGITUDE - LONGITUDE[0] + shift)
+def fields(states: Array, longitude: Array = LONGITUDE) -> dict[str, Array]:
+    """Return wind and pressure (..., latitude, longitude) of states (..., N)."""
+    found = CHANNEL.evaluate(states, LATITUDE, longitude - LONGITUDE[0])
     pressure = AIR_DENSITY * CHANNEL.coriolis * found["streamfunction_lower"]
     return {
         "eastward_wind": WIND_FACTOR * found["eastward_wind_lower"],
@@ -140,26 +137,130 @@ def night(members: int = MEMBERS, leads: int = LEAD_HOURS.size) -> dict[str, Arr
 
 
 def climatology() -> dict[str, Array]:
-    """Return mean and standard deviation (latitude, longitude) by ``NAME_mean``, ``NAME_std``.
+    """Return the standard deviation in time (latitude, longitude) of wind speed and each field.
 
-    From runs of the same model that part from each other well before sampling begins. The model
-    is the same all along the channel, so each run is looked at on three stretches of it.
+    From runs of the same model that have long parted when sampling begins. The model is the same
+    all along the channel, so samples are pooled along it and every longitude gets the same value.
     """
-    start = forward(CHANNEL.default_state(), 20, 24)[-1]
-    apart = toys.perturb(CHANNEL, start, MEMBERS, norm=2.0e6, seed=SEED)
+    start = forward(CHANNEL.default_state(), 10, 24)[-1]
+    apart = toys.perturb(CHANNEL, start, CLIMATOLOGY_RUNS, norm=2.0e6, seed=SEED)
     settled = forward(apart, CLIMATOLOGY_SKIP_DAYS, 24)[-1]
     states = forward(settled, CLIMATOLOGY_DAYS, 12)
-    parallel = np.pi / 180 * 6.371e6 * np.cos(np.radians(CHANNEL.latitude))
-    around = CHANNEL.length / parallel
-    samples: dict[str, list[Array]] = {name: [] for name in (*ATTRIBUTES, "wind_speed")}
-    for number in range(CLIMATOLOGY_SHIFTS):
-        found = fields(states, shift=number * around / CLIMATOLOGY_SHIFTS)
-        found["wind_speed"] = np.hypot(found["eastward_wind"], found["northward_wind"])
-        for name, values in found.items():
-            samples[name].append(values.reshape(-1, *values.shape[-2:]))
-    result = {}
-    for name, parts in samples.items():
-        joined = np.concatenate(parts)
-        result[f"{name}_mean"] = joined.mean(axis=0)
-        result[f"{name}_std"] = joined.std(axis=0, ddof=1)
-    return result
+    around = CHANNEL.coordinates()["longitude"][1]
+    found = fields(states, longitude=around)
+    found["wind_speed"] = np.hypot(found["eastward_wind"], found["northward_wind"])
+    columns = np.ones(LONGITUDE.size)
+    return {name: values.std(axis=(0, 1, 3))[:, None] * columns for name, values in found.items()}
+
+
+def write_member(path: Path, member: int, values: dict[str, Array]) -> None:
+    """Write one member's fields (lead, latitude, longitude) as packed CF-NetCDF."""
+    with _opened(path) as file:
+        file.setncatts(_global_attributes("one perturbed run of the example night"))
+        file.createDimension("forecast_period", LEAD_HOURS.size)
+        _write_grid(file)
+        lead = file.createVariable("forecast_period", "i4", ("forecast_period",))
+        lead.setncatts({"standard_name": "forecast_period", "units": "hours"})
+        lead[:] = LEAD_HOURS
+        since = {"units": "hours since 2031-01-01 00:00:00", "calendar": "standard"}
+        since["units_metadata"] = "leap_seconds: none"
+        begin = int((START - np.datetime64("2031-01-01T00:00")) / np.timedelta64(1, "h"))
+        time = file.createVariable("time", "i4", ("forecast_period",))
+        time.setncatts({"standard_name": "time", **since})
+        time[:] = begin + LEAD_HOURS
+        reference = file.createVariable("forecast_reference_time", "i4")
+        reference.setncatts({"standard_name": "forecast_reference_time", **since})
+        reference[...] = begin
+        number = file.createVariable("realization", "i4")
+        number.setncatts({"standard_name": "realization", "units": "1"})
+        number[...] = member
+        for name, field in values.items():
+            variable = file.createVariable(
+                name,
+                "i2",
+                ("forecast_period", "latitude", "longitude"),
+                zlib=True,
+                complevel=9,
+                shuffle=True,
+                fill_value=FILL,
+                chunksizes=(14, LATITUDE.size, LONGITUDE.size),
+            )
+            variable.setncatts(
+                {
+                    **ATTRIBUTES[name],
+                    "scale_factor": SCALE[name],
+                    "add_offset": OFFSET[name],
+                    "coordinates": "forecast_reference_time realization time",
+                }
+            )
+            variable[:] = field
+
+
+def write_climatology(path: Path, deviations: dict[str, Array]) -> None:
+    """Write the standard deviations, each under the name of its variable."""
+    with _opened(path) as file:
+        file.setncatts(_global_attributes("climatological standard deviations of the same model"))
+        _write_grid(file)
+        speed = {
+            "standard_name": "wind_speed",
+            "long_name": "wind speed near the surface",
+            "units": "m s-1",
+        }
+        for name, field in deviations.items():
+            variable = file.createVariable(name, "f4", ("latitude", "longitude"))
+            attributes = dict(ATTRIBUTES.get(name, speed))
+            attributes["long_name"] = f"standard deviation of {attributes['long_name']}"
+            variable.setncatts({**attributes, "cell_methods": "time: standard_deviation"})
+            variable[:] = field
+
+
+@contextmanager
+def _opened(path: Path) -> Iterator[netCDF4.Dataset]:
+    """Open a neighbour file for writing and move it into place once it is whole."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    neighbour = path.with_name(path.name + ".part")
+    try:
+        with netCDF4.Dataset(neighbour, "w", format="NETCDF4_CLASSIC") as file:
+            yield file
+        neighbour.replace(path)
+    finally:
+        neighbour.unlink(missing_ok=True)
+
+
+def _global_attributes(title: str) -> dict[str, str]:
+    return {
+        "Conventions": "CF-1.11",
+        "title": f"Ouvrane Sea, {title}",
+        "institution": "Quillmere operations desk (invented)",
+        "source": "two-layer quasi-geostrophic channel model of Ensemble Horizon",
+        "history": "made by example_runs/make_night.py",
+        "comment": "Invented place and weather.",
+        "license": "CC0 1.0",
+    }
+
+
+def _write_grid(file: netCDF4.Dataset) -> None:
+    for name, values, units in (
+        ("latitude", LATITUDE, "degrees_north"),
+        ("longitude", LONGITUDE, "degrees_east"),
+    ):
+        file.createDimension(name, values.size)
+        axis = file.createVariable(name, "f8", (name,))
+        axis.setncatts({"standard_name": name, "units": units})
+        axis[:] = values
+
+
+def main() -> None:
+    """Make the files and move them into place."""
+    parser = argparse.ArgumentParser(description="Make the example night.")
+    parser.add_argument("--folder", type=Path, default=Path(__file__).parent)
+    folder = parser.parse_args().folder
+    values = night()
+    for member in range(MEMBERS):
+        path = folder / NIGHT / f"member{member:02d}.nc"
+        write_member(path, member, {name: field[:, member] for name, field in values.items()})
+    write_climatology(folder / CLIMATOLOGY, climatology())
+
+
+if __name__ == "__main__":
+    main()

@@ -53,7 +53,11 @@ class Clock:
         self.span = float(values[-1])
         self.time: np.ndarray = (values / self.span)[:, None]
         steps = np.diff(values) / self.span
-        self.steps, self.kind = np.unique(np.round(steps, 13), return_inverse=True)
+        # Equal but for rounding is equal; the mean of such steps is nearest to what was meant.
+        _, self.kind, count = np.unique(
+            np.round(steps, 12), return_inverse=True, return_counts=True
+        )
+        self.steps: np.ndarray = np.bincount(self.kind, weights=steps) / count
         self._rooms: dict[str, np.ndarray] = {}
         self.regular = self.steps.size <= max(1, steps.size // 4)
 
@@ -78,6 +82,8 @@ class Clock:
             return power
         factors = np.exp(-self.steps[:, None] * rate)
         np.exp(-rate * self.time[0, 0] - depth, out=power[0])
+        if self.steps.size == 1:
+            return self._doubled(power, factors[0])
         for index, kind in enumerate(self.kind):
             np.multiply(power[index], factors[kind], out=power[index + 1])
         return power
@@ -92,7 +98,28 @@ class Clock:
         below = np.expm1(-self.steps[:, None] * rate)
         factors = 1.0 + below
         np.expm1(-rate * self.time[0, 0], out=power[0])
+        if self.steps.size == 1:
+            return self._doubled(power, factors[0], below[0])
         for index, kind in enumerate(self.kind):
             np.multiply(power[index], factors[kind], out=power[index + 1])
             power[index + 1] += below[kind]
+        return power
+
+    @staticmethod
+    def _doubled(
+        power: np.ndarray, factor: np.ndarray, below: np.ndarray | None = None
+    ) -> np.ndarray:
+        """Fill powers (L, n), or powers less one, from the first row: twice as many at a time.
+
+        ``factor`` is the power over one step, ``below`` the same less one.
+        """
+        done, size = 1, power.shape[0]
+        while done < size:
+            more = min(done, size - done)
+            np.multiply(power[:more], factor, out=power[done : done + more])
+            if below is not None:
+                power[done : done + more] += below
+                below = below * (factor + 1.0)
+            done += more
+            factor = factor * factor
         return power

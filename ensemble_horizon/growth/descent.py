@@ -14,12 +14,20 @@ from ensemble_horizon.growth.batches import Batch
 from ensemble_horizon.growth.clock import Clock
 from ensemble_horizon.growth.law import Form
 
-# A rounding error of the residual sum of squares must not count as a failed step.
-ROUNDING = 1e-13
-ROUNDING_FLOOR = 1e-30
+# A rounding error of the residual sum of squares must not count as a failed step; residuals are
+# differences of sizes, so that the error goes with the root of RSS times the sum of squares.
+ROUNDING = 1e-15
+# Per lead, of curves scaled to one: residuals below it are rounding.
+ROUNDING_FLOOR = 1e-26
+# What an undamped step may still promise, relative to the RSS, where rounding ends a descent.
+SETTLED = 1e-8
 LEAST_PIVOT = 1e-14
 LEAST_DAMPING = 1e-12
 MOST_DAMPING = 1e12
+# Largest part of the unit diagonal that learnt curvature may take.
+MOST_SECANT = 0.5
+# Steps that promise a larger part of the RSS are too long to learn curvature from.
+NEAR = 1e-3
 # Batches are repacked only when enough curves have left to pay for the copy.
 COMPACT = 0.75
 
@@ -51,31 +59,68 @@ class Descent:
 
 @dataclass
 class State:
-    """Residual sum of squares (n,), J'r (P, n), J'J (P, P, n), extra curvature (n,) or None."""
+    """Where all curves of a batch stand.
+
+    Attributes
+    ----------
+    rss : array (n,)
+    gradient : array (P, n)
+        J'r.
+    normal : array (P, P, n)
+        J'J.
+    extra : array (n,) or None
+        Second derivative by the first parameter that J'J leaves out.
+    secant : array (P, P, n) or None
+        Second derivatives that J'J leaves out, learnt from the steps.
+    """
 
     rss: np.ndarray
     gradient: np.ndarray
     normal: np.ndarray
     extra: np.ndarray | None
+    secant: np.ndarray | None = None
 
     def take(self, keep: np.ndarray) -> State:
         """The curves of index ``keep``."""
         extra = None if self.extra is None else self.extra[keep]
-        return State(self.rss[keep], self.gradient[:, keep], self.normal[:, :, keep], extra)
+        secant = None if self.secant is None else self.secant[:, :, keep]
+        return State(self.rss[keep], self.gradient[:, keep], self.normal[:, :, keep], extra, secant)
 
-    def advance(self, new: State, better: np.ndarray) -> State:
-        """The new state where it is ``better``."""
+    def advance(self, new: State, better: np.ndarray, near: np.ndarray, step: np.ndarray) -> State:
+        """The new state where it is ``better``, with what the step taught where ``near``."""
+        secant = self._learn(new, near, step)
+        extra = new.extra
         if better.all():
-            return new
-        extra = None
-        if self.extra is not None and new.extra is not None:
-            extra = np.where(better, new.extra, self.extra)
+            return State(new.rss, new.gradient, new.normal, extra, secant)
+        if self.extra is not None and extra is not None:
+            extra = np.where(better, extra, self.extra)
         return State(
             np.where(better, new.rss, self.rss),
             np.where(better, new.gradient, self.gradient),
             np.where(better, new.normal, self.normal),
             extra,
+            secant,
         )
+
+    def _learn(self, new: State, near: np.ndarray, step: np.ndarray) -> np.ndarray | None:
+        """Symmetric rank-one update; forgotten far from a minimum or where it would be large."""
+        if not near.any():
+            return None
+        with np.errstate(all="ignore"):
+            change = self.gradient - new.gradient
+            change -= np.einsum("ijn,jn->in", new.normal, step)
+            if new.extra is not None:
+                change[0] -= new.extra * step[0]
+            if self.secant is not None:
+                change -= np.einsum("ijn,jn->in", self.secant, step)
+            along = np.einsum("in,in->n", change, step)
+            size = np.einsum("in,in->n", change, change / np.einsum("iin->in", new.normal))
+            learnt = near & (size <= MOST_SECANT * np.abs(along))
+            share = np.where(learnt, change / along, 0.0)
+            secant = share[:, None] * np.where(learnt, change, 0.0)
+            if self.secant is not None:
+                secant += np.where(learnt, self.secant, 0.0)
+        return secant
 
 
 def normal_equations(form: Form, clock: Clock, batch: Batch, theta: np.ndarray) -> State:
@@ -179,6 +224,8 @@ def proposed_step(
         matrix[i, i] = 1.0 + damping
     if state.extra is not None:
         matrix[0, 0] += state.extra * scale[0] ** 2
+    if state.secant is not None:
+        matrix += state.secant * scale[:, None] * scale
     force = state.gradient * scale
     step = solve(factorise(matrix), force)
     promise: np.ndarray = np.einsum("pn,pn->n", step, force)
@@ -200,11 +247,13 @@ def descend(
     theta: np.ndarray,
     tolerance: float,
     iterations: int,
+    last: bool = False,
 ) -> Descent:
     """Minimise the residual sum of squares of every curve from ``theta`` (P, n).
 
     A curve is finished when the next step promises less than ``tolerance`` of its RSS; that step
-    is still taken. Bounds hold by projection.
+    is still taken. Bounds hold by projection. After the ``last`` iteration a curve is also
+    finished where rounding alone keeps it from being so.
     """
     lower, upper = np.array(form.lower)[:, None], np.array(form.upper)[:, None]
     theta = np.clip(theta, lower, upper)
@@ -212,7 +261,8 @@ def descend(
     end = Descent(
         theta.copy(), state.rss.copy(), state.normal.copy(), np.zeros(state.rss.size, dtype=bool)
     )
-    floor = ROUNDING_FLOOR * np.einsum("ln,ln->n", batch.curve, batch.curve)
+    floor = np.full(state.rss.size, ROUNDING_FLOOR * batch.curve.shape[0])
+    total = np.einsum("ln,ln->n", batch.target, batch.target) + batch.curve.shape[0]
     damping = np.full(state.rss.size, 1e-4)
     where = np.arange(state.rss.size)
     alive = np.ones(state.rss.size, dtype=bool)
@@ -222,7 +272,10 @@ def descend(
             step, promise = proposed_step(state, damping, free)
             trial = np.clip(theta + step, lower, upper)
             done = (promise <= tolerance * state.rss) & (damping <= 1e-2) | (state.rss <= floor)
-        leave = alive & (done | (damping >= MOST_DAMPING) | ~np.isfinite(state.rss))
+        stuck = damping >= MOST_DAMPING
+        if stuck.any():
+            done |= stuck & _settled(state, free, floor)
+        leave = alive & (done | stuck | ~np.isfinite(state.rss))
         if leave.any():
             polish = done & (state.rss > floor)
             end.record(where, np.where(polish, trial, theta), state, done, leave)
@@ -238,13 +291,23 @@ def descend(
                     state.take(stay),
                 )
                 theta, trial, floor = theta[:, stay], trial[:, stay], floor[stay]
-                damping, promise = damping[stay], promise[stay]
+                damping, promise, total = damping[stay], promise[stay], total[stay]
         new = normal_equations(form, clock, batch, trial)
-        better = new.rss <= state.rss * (1.0 + ROUNDING)
+        noise = np.sqrt(state.rss * total) + state.rss
+        better = new.rss <= state.rss + ROUNDING * noise
         with np.errstate(all="ignore"):
             gain = (state.rss - new.rss) / promise
         damping = next_damping(damping, better, gain)
+        start = theta
         theta = trial if better.all() else np.where(better, trial, theta)
-        state = state.advance(new, better)
-    end.record(where, theta, state, np.zeros_like(alive), alive)
+        state = state.advance(new, better, better & (promise <= NEAR * state.rss), trial - start)
+    free = ~((theta <= lower) & (state.gradient < 0) | (theta >= upper) & (state.gradient > 0))
+    end.record(where, theta, state, _settled(state, free, floor) & last, alive)
     return end
+
+
+def _settled(state: State, free: np.ndarray, floor: np.ndarray) -> np.ndarray:
+    """Whether a descent that finds no better point stands in a minimum, bool (n,)."""
+    with np.errstate(all="ignore"):
+        _, promise = proposed_step(state, np.zeros_like(floor), free)
+        return np.asarray(promise <= SETTLED * state.rss + floor)

@@ -106,10 +106,10 @@ def _ask(fit: xr.Dataset, about: xr.DataArray, dim: str | None, question: Questi
     parts = [fit[name] for name in PARAMETERS]
     answer: xr.DataArray = xr.apply_ufunc(
         partial(_sorted_by_law, question=question, along=dim is not None),
-        about.drop_vars([name for name in about.coords if name not in about.dims]),
         fit["law"],
         *parts,
-        input_core_dims=[core, *[[] for _ in range(len(parts) + 1)]],
+        about.drop_vars([name for name in about.coords if name not in about.dims]),
+        input_core_dims=[*[[] for _ in range(len(parts) + 1)], core],
         output_core_dims=[core],
         dask="parallelized",
         output_dtypes=[np.float64],
@@ -118,12 +118,9 @@ def _ask(fit: xr.Dataset, about: xr.DataArray, dim: str | None, question: Questi
 
 
 def _sorted_by_law(
-    about: np.ndarray,
-    flag: np.ndarray,
-    *parameters: np.ndarray,
-    question: Question,
-    along: bool,
+    flag: np.ndarray, *arrays: np.ndarray, question: Question, along: bool
 ) -> np.ndarray:
+    *parameters, about = arrays
     if along:
         shape = np.broadcast_shapes(flag.shape, *(part.shape for part in parameters))
         result = np.full((*shape, about.shape[-1]), np.nan)

@@ -30,7 +30,7 @@ from ensemble_horizon.growth.laws import find_law
 
 SCALES = ("linear", "log")
 PASSES = (8, 40, 400)
-TOLERANCE = 1e-13
+TOLERANCE = 1e-10
 STALLED_GROWTH = 1e-3
 GRAIN = 1e-10
 
@@ -171,8 +171,8 @@ def _run_passes(job: _Job, fit: Fit, chosen: np.ndarray) -> None:
             batch = job.data.batch(rows)
             here = slice(first, first + BATCH)
             theta = _best_start(job, batch) if known is None else known[:, here]
-            end = descend(job.law.form, job.clock, batch, theta, job.tolerance, iterations)
             last = number == len(PASSES) - 1
+            end = descend(job.law.form, job.clock, batch, theta, job.tolerance, iterations, last)
             late = ~end.finished & np.isfinite(end.rss)
             keep = np.ones(rows.size, dtype=bool) if last else ~late
             _store(job, fit, rows, batch, end, keep)
@@ -209,7 +209,8 @@ def _store(
         natural, slope, held = job.law.form.natural(theta, scale, job.clock.span)
         noise = end.rss[keep] / (fit.points[rows] - count)
         covariance = _covariance(slope, normal, (theta > lower) & (theta < upper)) * noise
-        covariance[held[:, None] | held[None]] = np.nan
+        if held.any():
+            covariance[held[:, None] | held[None]] = np.nan
         ends = job.law.value(natural.T, job.clock.time[[0, -1], 0] * job.clock.span)
         growth = ends[:, 1] / ends[:, 0] - 1.0
     good = finished & np.isfinite(end.rss[keep])

@@ -20,6 +20,7 @@ from ensemble_horizon.growth.clock import Clock
 LN2 = float(np.log(2.0))
 
 
+@dataclass(frozen=True)
 class Form(ABC):
     """A law in the parameters it is fitted in; arrays are lead-major: (L, n), (P, n).
 
@@ -82,7 +83,7 @@ class Law(ABC):
     form: Form
 
     may_fall: ClassVar[bool] = False
-    least_growth: ClassVar[float] = 1e-6
+    least_growth: ClassVar[float] = 1e-5
 
     @abstractmethod
     def value(self, parameters: np.ndarray, lead: np.ndarray) -> np.ndarray:

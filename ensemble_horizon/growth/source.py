@@ -13,21 +13,15 @@ from ensemble_horizon.growth.clock import Clock
 from ensemble_horizon.growth.law import Form, Law, split
 from ensemble_horizon.growth.starts import scan_logistic, scan_source
 
-SMALLEST = 1e-6
+SMALLEST = 1e-8
+SLOWEST = 1e-3
 
 
-def fall_shape(
-    rate: np.ndarray, time: np.ndarray, fall: np.ndarray, drop: np.ndarray
-) -> np.ndarray:
-    """Derivative by k of (1 - exp(-k t))/k, from exp(-k t) and (1 - exp(-k t))/k."""
+def early_bend(rate: np.ndarray, time: np.ndarray) -> np.ndarray:
+    """Derivative by k of (1 - exp(-k t))/k for k t up to 1e-3, where the closed form cancels."""
     product = rate * time
-    with np.errstate(divide="ignore", invalid="ignore"):
-        slope: np.ndarray = (time * fall - drop) / rate
-    tiny = product < 1e-3
-    if tiny.any():
-        series = -(time**2) * (0.5 - product / 3.0 + product**2 / 8.0 - product**3 / 30.0)
-        slope = np.where(tiny, series, slope)
-    return slope
+    series = 0.5 - product / 3.0 + product**2 / 8.0 - product**3 / 30.0
+    return np.asarray(-(time**2) * series)
 
 
 class SourceForm(Form):
@@ -39,35 +33,50 @@ class SourceForm(Form):
     def evaluate(self, theta: np.ndarray, clock: Clock) -> tuple[np.ndarray, list[np.ndarray]]:
         """See `Form.evaluate`."""
         initial, feed, source, level = theta
+        number, time = initial.size, clock.time
         start = initial * initial
         ramp = feed * start + source
         rate = feed + source * level
-        still = rate <= 0
+        small = rate < SLOWEST
+        inverse = 1.0 / np.where(rate > 0, rate, 1.0)
         drop = clock.decay_minus_one(rate)
-        fall = 1.0 + drop
-        drop *= -1.0 / np.where(still, 1.0, rate)
-        if still.any():
-            drop[:, still] = clock.time
-        share = 1.0 / (fall + level * ramp * drop)
-        variance = (start * fall + ramp * drop) * share
+        fall = np.add(drop, 1.0, out=clock.room("fall", number))
+        drop *= -inverse
+        drop[:, rate <= 0] = time
+        grown = np.multiply(drop, ramp, out=clock.room("grown", number))
+        share = np.multiply(grown, level, out=clock.room("share", number))
+        share += fall
+        np.reciprocal(share, out=share)
+        variance = np.multiply(fall, start, out=clock.room("variance", number))
+        variance += grown
+        variance *= share
         variance[:, level * start >= 1.0] = np.nan
-        # Derivatives by (start, ramp, rate, level), each still to be divided by 2 V.
-        share *= 0.5 / variance
-        room = drop * (1.0 - level * variance)
-        bend = fall_shape(rate, clock.time, fall, drop)
-        by_ramp = room * share
-        by_rate = share * (
-            (variance - start) * clock.time * fall + ramp * bend * (1.0 - level * variance)
-        )
-        by_start = fall * share + feed * by_ramp
-        by_level = -variance * ramp * drop * share + source * by_rate
-        slopes = [
-            2.0 * initial * by_start,
-            start * by_ramp + by_rate,
-            by_ramp + level * by_rate,
-            by_level,
-        ]
-        return np.sqrt(variance), slopes
+        # With this factor, derivatives of V are those of ln E.
+        share /= variance
+        share *= 0.5
+        free = np.multiply(variance, -level, out=clock.room("free", number))
+        free += 1.0
+        slid = np.multiply(time, fall, out=clock.room("slid", number))
+        by_rate = np.subtract(slid, drop, out=clock.room("by_rate", number))
+        by_rate *= inverse
+        if small.any():
+            by_rate[:, small] = early_bend(rate[small], time)
+        by_rate *= ramp
+        by_rate *= free
+        slid *= variance - start
+        by_rate += slid
+        by_rate *= share
+        drop *= free
+        by_ramp = np.multiply(drop, share, out=drop)
+        fall *= share
+        fall += feed * by_ramp
+        fall *= 2.0 * initial
+        grown *= variance
+        grown *= share
+        by_level = np.subtract(source * by_rate, grown, out=grown)
+        by_source = np.add(by_ramp, np.multiply(by_rate, level, out=free), out=free)
+        by_feed = np.add(by_rate, np.multiply(by_ramp, start, out=slid), out=slid)
+        return np.sqrt(variance, out=variance), [fall, by_feed, by_source, by_level]
 
     def bend(
         self, theta: np.ndarray, value: np.ndarray, slopes: list[np.ndarray], log: bool
@@ -152,7 +161,9 @@ class LogisticSource(Law):
         share = 1.0 / (fall + level * ramp * drop)
         variance = (start * fall + ramp * drop) * share
         free = 1.0 - level * variance
-        bend = fall_shape(rate, lead, fall, drop)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            bend = (lead * fall - drop) / rate
+        bend = np.where(rate * lead < SLOWEST, early_bend(rate, lead), bend)
         by_ramp = share * drop * free
         by_rate = share * ((variance - start) * lead * fall + ramp * bend * free)
         by_level = -variance * ramp * drop * share + source * by_rate

@@ -21,7 +21,7 @@ def line_of_logarithm(
     """Straight line through ln E, weighted by E^2 unless ``log``: (a, b), shape (2, n)."""
     time = clock.time
     if log:
-        worth = np.ones_like(curve) if weight is None else weight
+        worth = np.ones_like(curve) if weight is None else weight.copy()
     else:
         worth = curve * curve if weight is None else weight * curve * curve
     # Sizes at or below zero have no logarithm, and next to no say in the linear residual either.
@@ -149,7 +149,8 @@ def scan_power(clock: Clock, curve: np.ndarray, weight: np.ndarray | None, log: 
         misfit += level * level * s0 + 2.0 * level * slope * s1 + slope * slope * s2
         misfit /= power**2
         end = level + slope
-        share = np.clip(slope / end, 1e-3, 1.0)
+        # Not at the bound 1, where the first lead no longer pulls.
+        share = np.clip(slope / end, 1e-3, 0.97)
         current = np.stack([np.log(end) / power, share, share * (1.0 / power - 1.0)])
         if least is None:
             least, guess = misfit, current

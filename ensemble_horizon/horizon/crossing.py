@@ -27,7 +27,12 @@ class Crossing:
 
 
 def first_crossing(
-    lead: np.ndarray, curves: np.ndarray, threshold: np.ndarray | float, hold: float = 0.0
+    lead: np.ndarray,
+    curves: np.ndarray,
+    threshold: np.ndarray | float,
+    hold: float = 0.0,
+    *,
+    geometric: bool = False,
 ) -> Crossing:
     """First crossing that lasts.
 
@@ -39,6 +44,8 @@ def first_crossing(
     hold : float, in the units of ``lead``
         The curve must stay at or above the threshold for this long after the crossing. A crossing
         that the run ends on before it has lasted is not counted: the run cannot show that it lasts.
+    geometric : bool
+        Interpolate the logarithm of the curve instead of the curve.
 
     Notes
     -----
@@ -67,7 +74,13 @@ def first_crossing(
             up = known & (row >= level)
             opens = up & ~active & ~done
             if opens.any():
-                step = (level - previous) / (row - previous) * (moment - previous_lead)
+                share = (level - previous) / (row - previous)
+                if geometric:
+                    positive = previous > 0
+                    share = np.where(
+                        positive, np.log(level / previous) / np.log(row / previous), share
+                    )
+                step = share * (moment - previous_lead)
                 begun = np.where(points == 0, moment, previous_lead + step)
                 candidate = np.where(opens, begun, candidate)
                 from_start = np.where(opens, points == 0, from_start)

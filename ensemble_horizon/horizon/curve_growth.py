@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import special
+from scipy import special, stats
 
 from ensemble_horizon.growth.law import Law
 from ensemble_horizon.growth.laws import LAWS
@@ -84,7 +84,10 @@ def _growth_of(
         value = float(getattr(law, quantity)(parameters)[0])
         weight = quantity_sensitivity(law, quantity, parameters, lead, usable, scale)[0]
         error = float(np.sqrt(max(weight @ covariance @ weight, 0.0)))
-        low, high = _interval(quantity, value, quantile * error)
+        if quantity == "growth_rate":
+            low, high = value - quantile * error, value + quantile * error
+        else:
+            low, high = _size_interval(value, error, noise, scale, quantile)
         values.update({quantity: value, f"{quantity}_low": low, f"{quantity}_high": high})
         if quantity == "saturation" and np.isfinite(value):
             pull = weight / value
@@ -99,13 +102,28 @@ def _nothing(lead: np.ndarray) -> Growth:
     return Growth("none", np.full(lead.size, np.nan), _empty_values(), np.empty(0), None)
 
 
-def _interval(quantity: str, value: float, reach: float) -> tuple[float, float]:
-    if quantity == "growth_rate":
-        return value - reach, value + reach
-    if not value > 0:
+def _size_interval(
+    value: float, error: float, noise: LeadNoise, scale: str, quantile: float
+) -> tuple[float, float]:
+    """Interval of a size: chi-square with the degrees of freedom that its error is worth.
+
+    ln(spread) of few members lies below that of many by (ln(dof/2) - digamma(dof/2))/2. A fit that
+    averages over leads keeps that bias while its scatter shrinks, so it is taken off here; a fit
+    on the linear scale has about half of it.
+    """
+    if not (value > 0 and np.isfinite(value)):
         return float("nan"), float("nan")
-    factor = float(np.exp(reach / value))  # sizes are positive: symmetric in the logarithm
-    return value / factor, value * factor
+    relative = 4 * max(error / value, 1e-6) ** 2
+    half = (1 + np.sqrt(1 + 2 * relative)) / (2 * relative)  # inverse of trigamma, near enough
+    bias = float(np.median(_log_bias(noise.dof / 2))) - float(_log_bias(np.array(half)))
+    center = value * np.exp(max(bias, 0.0) * (1.0 if scale == "log" else 0.5))
+    tail = float(special.ndtr(-quantile))
+    low, high = stats.chi2.ppf([tail, 1 - tail], 2 * half)
+    return center * float(np.sqrt(2 * half / high)), center * float(np.sqrt(2 * half / low))
+
+
+def _log_bias(half: np.ndarray) -> np.ndarray:
+    return np.asarray((np.log(half) - special.digamma(half)) / 2)
 
 
 def _doubling(rate: float) -> float:

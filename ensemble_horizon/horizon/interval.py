@@ -79,7 +79,7 @@ def calibrated_moves(
     moment = float(crossing.time[0])
     draws = _noise_draws(noise, _DRAWS)
     scale = np.sqrt(special.polygamma(1, noise.dof / 2) / 4)
-    pull = None if threshold_pull is None else draws * scale @ threshold_pull
+    pull = None if threshold_pull is None else log_factor(noise.dof, draws) @ threshold_pull
     if not np.isfinite(moment):
         widen = 1.0 if pull is None else float(np.sqrt(1 + np.var(pull) / np.median(scale) ** 2))
         plain = plain_moves(confidence, noise.inflation)
@@ -206,19 +206,22 @@ def spread_bounds(
     """
     number = curves.shape[1]
     level = np.broadcast_to(np.asarray(threshold, dtype=float), (number,))
-    up = first_crossing(lead, _moved(curves, dof, -np.asarray(moves.up), -1), level, hold)
-    down = first_crossing(lead, _moved(curves, dof, np.asarray(moves.down), -1), level, hold)
+    up = first_crossing(lead, _moved(curves, dof, -np.asarray(moves.up)), level, hold)
+    lowered = _moved(curves, dof, np.asarray(moves.down))
+    # Between two leads a growing error runs below the straight line: the later placing, here.
+    down = first_crossing(lead, lowered, level, hold, geometric=True)
     return _ends(lead, up, down, np.isfinite(level) & (up.points > 0))
 
 
-def _moved(curves: np.ndarray, dof: np.ndarray, z: np.ndarray, sign: int) -> np.ndarray:
+def _moved(curves: np.ndarray, dof: np.ndarray, z: np.ndarray) -> np.ndarray:
+    """Curves freed of noise of ``z`` standard units."""
     if z.ndim == 0:
-        return curves * np.exp(sign * log_factor(dof, float(z)))[:, np.newaxis]
+        return curves * np.exp(-log_factor(dof, float(z)))[:, np.newaxis]
     grid = np.linspace(-6.0, 6.0, 121)
     moved = np.empty_like(curves)
     factors: dict[float, np.ndarray] = {}
     for row, degrees in enumerate(dof):
-        table = factors.setdefault(float(degrees), np.exp(sign * log_factor(degrees, grid)))
+        table = factors.setdefault(float(degrees), np.exp(-log_factor(degrees, grid)))
         moved[row] = curves[row] * np.interp(z, grid, table)
     return moved
 

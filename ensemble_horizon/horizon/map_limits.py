@@ -24,7 +24,7 @@ from ensemble_horizon.horizon.trend import grows
 from ensemble_horizon.spread.sampling import LeadNoise
 from ensemble_horizon.vocabulary import Status
 
-LAW_NAMES = (*LAWS, "none")
+LAW_NAMES = ("none", *LAWS)  # in the order of the flags of fit_growth
 
 
 @dataclass(frozen=True)

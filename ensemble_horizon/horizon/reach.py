@@ -112,7 +112,7 @@ def _law_flags(fit: xr.Dataset) -> xr.DataArray:
 
 
 def _laws_by_flag(flags: xr.DataArray) -> dict[int, str]:
-    names = str(flags.attrs["flag_meanings"]).replace("_", "-").split()
+    names = str(flags.attrs["flag_meanings"]).split()
     values = np.atleast_1d(flags.attrs.get("flag_values", range(len(names))))
     return {int(value): name for value, name in zip(values, names, strict=True)}
 

@@ -25,7 +25,7 @@ from ensemble_horizon.vocabulary import (
 LAW_ATTRIBUTES = {
     "long_name": "law of error growth",
     "flag_values": list(range(len(LAW_NAMES))),
-    "flag_meanings": " ".join(name.replace("-", "_") for name in LAW_NAMES),
+    "flag_meanings": " ".join(LAW_NAMES),
 }
 
 

@@ -9,6 +9,7 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``tables``         ``horizons.csv`` and the table for the terminal
 ``netcdf``         names, attributes and variables of the NetCDF products
 ``curve_file``     ``horizons.nc``
+``map_grid``       grids in the maps file
 ``map_file``       ``horizon_maps.nc``, start by start
 ``places``         outlines and sites on a map
 ``coast``          coastlines

@@ -15,7 +15,7 @@ from ensemble_horizon.products.curve_panel import BAND, LAW_INK, Panel, colour_o
 from ensemble_horizon.products.limits import Limit, curve_limits
 from ensemble_horizon.products.sheet import INK, SOFT_INK, Sheet, line_height, wrapped
 from ensemble_horizon.products.tables import criterion_text
-from ensemble_horizon.products.wording import lead_units
+from ensemble_horizon.products.wording import interval_name, lead_units
 from ensemble_horizon.vocabulary import CAUTION, CRITERION, LEAD, PLACE, START, Status
 
 SOFTWARE = "Ensemble Horizon"
@@ -113,7 +113,8 @@ def _draw_sheet(panels: Sequence[Panel], path: Path) -> Path:
 
 def _entries(panels: Sequence[Panel]) -> list[tuple[str, str]]:
     """Return (kind or colour, words) of the legend; a threshold only where all places share it."""
-    entries = [("spread", "spread"), ("band", "its interval"), ("law", "fitted law")]
+    band = interval_name(panels[0].curves.attrs.get("confidence")).lower()
+    entries = [("spread", "spread"), ("band", f"its {band}"), ("law", "fitted law")]
     for position, limit in enumerate(panels[0].limits):
         same = {panel.limits[position].threshold for panel in panels}
         words = criterion_text(limit) if len(same) == 1 else limit.criterion

@@ -11,6 +11,7 @@ import netCDF4
 import numpy as np
 import xarray as xr
 
+from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.products.limits import VariableResult, start_labels
 from ensemble_horizon.products.netcdf import (
@@ -85,6 +86,9 @@ def write_horizon_file(
 
 
 def _require_agreement(curves: Sequence[xr.Dataset]) -> None:
+    for part in curves:
+        for dimension in _ORDER:
+            require_dimension(part, dimension, "curves")
     units = {str(part[LEAD].attrs.get("units", "hours")) for part in curves}
     if len(units) != 1:
         raise ArgumentError(

@@ -21,7 +21,7 @@ CURVE_HEIGHT, CHANCE_HEIGHT, ROW_HEIGHT = 176, 74, 19
 TITLE_HEIGHT, TICKS_HEIGHT, CHANCE_GAP = 44, 34, 15
 _LOG_FROM = 30.0
 _LEAD_STEPS = (1, 2, 3, 6, 12, 24, 48, 72, 96, 120, 240, 480, 960)
-_LETTER_OF_STRIP = 7.5 * DPI / 72 * LETTER
+_LETTER_OF_STRIP = 7.5 * DPI / 72 * 1.06 * LETTER
 
 
 @dataclass(frozen=True)
@@ -182,6 +182,7 @@ def _strip(axes: Axes, panel: Panel) -> None:
     for position, limit in enumerate(panel.limits):
         colour = colour_of(position)
         words = limit.text
+        veil: dict[str, str] | None = None
         if limit.status == Status.reached:
             low = limit.low if np.isfinite(limit.low) else limit.horizon
             high = limit.high if not np.isnan(limit.high) else limit.horizon
@@ -192,8 +193,16 @@ def _strip(axes: Axes, panel: Panel) -> None:
             if high > last:
                 axes.plot(last, position, ">", color=colour, markersize=6, clip_on=False)
             right = end + 1.5 * letter
-            beside = right + len(words) * letter < last
-            place, align = (right, "left") if beside else (low - 1.5 * letter, "right")
+            left = low - 1.5 * letter
+            if right + len(words) * letter < last:
+                place, align = right, "left"
+            elif left - len(words) * letter > first:
+                place, align = left, "right"
+            else:
+                # No room on either side: over the bar, away from the mark.
+                early = limit.horizon < (first + last) / 2
+                place, align = (last, "right") if early else (first + letter, "left")
+                veil = {"boxstyle": "square,pad=0.1", "fc": "#f5f6f4e6", "ec": "none"}
         elif limit.status == Status.beyond_run:
             axes.plot(last, position, ">", color=colour, markersize=6, clip_on=False)
             place, align = last - 1.5 * letter, "right"
@@ -202,7 +211,14 @@ def _strip(axes: Axes, panel: Panel) -> None:
                 axes.plot(first, position, "<", color=colour, markersize=6, clip_on=False)
             place, align = first + 1.5 * letter, "left"
         axes.text(
-            place, position, words, fontsize=7.5, color=colour, ha=align, va="center_baseline"
+            place,
+            position,
+            words,
+            fontsize=7.5,
+            color=colour,
+            ha=align,
+            va="center_baseline",
+            bbox=veil,
         )
 
 

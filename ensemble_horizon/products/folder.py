@@ -187,11 +187,12 @@ def _draw(folder: Path, results: Sequence[VariableResult], places: Sequence[Plac
         view = map_view(maps["horizon"].isel({START: 0, CRITERION: 0}))
         members = int(curves["members"].max()) if "members" in curves else None
         for position, stamp in enumerate(_stamps(maps)):
+            # One start in memory at a time, read once for all its criteria.
+            one = maps.isel({START: [position]}).compute()
             for column, criterion in enumerate(criteria):
                 draw_horizon_map(
-                    maps,
+                    one,
                     folder / f"{variable}_map_{criterion}_{stamp}.png",
-                    start=position,
                     criterion=column,
                     places=places,
                     members=maps.attrs.get("members", members),

@@ -17,7 +17,7 @@ _MOST_STEPS = 8
 
 STATUS_COLOURS: dict[Status, tuple[str, str]] = {
     Status.beyond_run: ("#fffdf7", "#c2b79a"),
-    Status.at_start: ("#5b1030", "#c98a9f"),
+    Status.at_start: ("#5b1030", "#a65674"),
     Status.no_growth: ("#d8cfe3", "#8d7ba6"),
     Status.no_data: ("#c9cccf", "#c9cccf"),
 }
@@ -95,7 +95,7 @@ def status_colours(status: Status, rows: np.ndarray, columns: np.ndarray) -> np.
     if status == Status.beyond_run:
         hatch = (rows + columns) % 12 < 2
     elif status == Status.at_start:
-        hatch = (rows - columns) % 7 < 2
+        hatch = (rows - columns) % 9 < 2
     elif status == Status.no_growth:
         hatch = rows % 8 < 2
     else:

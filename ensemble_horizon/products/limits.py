@@ -138,6 +138,15 @@ def curve_limits(curves: xr.Dataset) -> Iterator[Limit]:
                 )
 
 
+def lead_axis(data: xr.Dataset) -> tuple[str, float | None]:
+    """Return the units of the leads and the last lead, from the coordinate or the attributes."""
+    units, last = data.attrs.get("lead_units", "hours"), data.attrs.get("last_lead")
+    if LEAD in data.coords:
+        units = data[LEAD].attrs.get("units", units)
+        last = data[LEAD].values[-1]
+    return str(units), None if last is None else float(last)
+
+
 def start_labels(data: xr.Dataset) -> list[str]:
     """Return the labels of the starts, empty where the dataset carries none."""
     return _labels(data, "start_label", START)

@@ -15,7 +15,8 @@ import xarray as xr
 
 from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.products.limits import start_labels
+from ensemble_horizon.products.limits import lead_axis, start_labels
+from ensemble_horizon.products.map_grid import FileGrids, space_of
 from ensemble_horizon.products.netcdf import (
     encoded_starts,
     field_attributes,
@@ -30,16 +31,13 @@ from ensemble_horizon.products.netcdf import (
 from ensemble_horizon.products.wording import is_pooled
 from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import (
-    COORDINATE_ATTRIBUTES,
     CRITERION,
     LATITUDE,
-    LEAD,
     LONGITUDE,
     START,
 )
 
 TITLE = "Lead-time limits of ensemble forecasts per grid point"
-_AXES = {LATITUDE: "Y", LONGITUDE: "X", "y": "Y", "x": "X"}
 
 
 @contextlib.contextmanager
@@ -77,7 +75,7 @@ def map_file(
             maps = MapFile(file, starts)
             yield maps
             maps.complete()
-        verify_file(neighbour, {START: maps.start_count})
+        verify_file(neighbour, {START: maps.start_count} if maps.start_count else {})
 
 
 def write_map_file(
@@ -98,6 +96,7 @@ class _Layout:
     """How one variable lies in the file: its prefix, and the file's names of its dimensions."""
 
     prefix: str
+    pooled: bool
     dimensions: dict[str, str]
     space: tuple[str, ...]
     coordinates: str
@@ -109,17 +108,18 @@ class MapFile:
 
     Fields carry the name of their variable, such as ``wind_speed_horizon(wind_speed_criterion,
     start, latitude, longitude)``. A variable on a second grid gets dimensions of its own
-    (``latitude_2``). Starts that a variable lacks are filled with ``no_data``.
+    (``latitude_2``). Starts that a variable lacks are filled with ``no_data``. Maps pooled over all
+    starts stand beside them without the start, as in ``wind_speed_pooled_horizon``.
     """
 
     def __init__(self, file: netCDF4.Dataset, starts: np.ndarray | None = None) -> None:
         self._file = file
-        self._layouts: dict[str, _Layout] = {}
-        self._grids: list[tuple[dict[str, xr.DataArray], dict[str, str]]] = []
+        self._layouts: dict[tuple[str, bool], _Layout] = {}
+        self._prefixes: dict[str, str] = {}
         self._slots: dict[Any, int] = {}
         self._written: set[tuple[str, int]] = set()
         self._taken: set[str] = {START}
-        file.createDimension(START, None)
+        self._grids = FileGrids(file, self._taken)
         for start in [] if starts is None else sorted(dict.fromkeys(starts.tolist())):
             self._slot(np.array([start], dtype=starts.dtype if starts is not None else None))
 
@@ -130,8 +130,6 @@ class MapFile:
 
     def append(self, maps: xr.Dataset) -> None:
         """Write the maps of one variable for the starts they hold; a start comes only once.
-
-        A pooled pseudo start is passed over: it has no place on the axis of starts.
 
         Parameters
         ----------
@@ -148,17 +146,18 @@ class MapFile:
         name = str(maps.attrs.get("variable", "variable"))
         labels = start_labels(maps)
         for position, start in enumerate(maps[START].values):
-            if is_pooled(start, labels[position]):
-                continue
+            pooled = is_pooled(start, labels[position])
+            key = (name, pooled)
+            slot = -1 if pooled else self._slot(maps[START].values[position : position + 1])
             one = maps.isel({START: position}).compute()
-            if name not in self._layouts:
-                self._define(name, maps, one)
-            self._write(name, self._slot(maps[START].values[position : position + 1]), one)
+            if key not in self._layouts:
+                self._layouts[key] = self._define(name, maps, one, pooled=pooled)
+            self._write(self._layouts[key], slot, one)
 
     def complete(self) -> None:
         """Fill the starts that some variable lacks, so that every cell has a status."""
         for layout in self._layouts.values():
-            for slot in set(self._slots.values()):
+            for slot in [] if layout.pooled else self._slots.values():
                 if (layout.prefix, slot) in self._written:
                     continue
                 for field, missing in layout.missing.items():
@@ -169,6 +168,7 @@ class MapFile:
     def _slot(self, start: np.ndarray) -> int:
         values, attributes = encoded_starts(start)
         if START not in self._file.variables:
+            self._file.createDimension(START, None)
             put(self._file, START, (START,), values, {**attributes, "axis": "T"}, write=False)
         key = float(values[0])
         if key not in self._slots:
@@ -183,40 +183,47 @@ class MapFile:
             self._file[START][self._slots[key]] = key
         return self._slots[key]
 
-    def _define(self, name: str, maps: xr.Dataset, one: xr.Dataset) -> None:
-        prefix = valid_name(name, self._taken)
-        criterion = f"{prefix}_{CRITERION}"
-        self._file.createDimension(criterion, one.sizes[CRITERION])
-        about = f"criterion for {maps.attrs.get('long_name', name)}"
-        put(
-            self._file,
-            f"{criterion}_name",
-            (criterion,),
-            np.array([str(label) for label in maps[CRITERION].values]),
-            {"long_name": about},
-        )
-        space = _space(maps)
-        names = self._grid(maps, space)
+    def _define(self, name: str, maps: xr.Dataset, one: xr.Dataset, *, pooled: bool) -> _Layout:
+        if name not in self._prefixes:
+            self._prefixes[name] = self._criteria(name, maps)
+        prefix = self._prefixes[name]
+        space = space_of(maps)
+        names = self._grids.names(maps, space)
         near = [names[key] for key in (LATITUDE, LONGITUDE) if key in names and key not in space]
-        self._layouts[name] = _Layout(
-            prefix=prefix,
-            dimensions={CRITERION: criterion, **{key: names[key] for key in space}},
+        layout = _Layout(
+            prefix=f"{prefix}_pooled" if pooled else prefix,
+            pooled=pooled,
+            dimensions={CRITERION: f"{prefix}_{CRITERION}", **{key: names[key] for key in space}},
             space=space,
             coordinates=" ".join(near),
             missing={},
         )
-        for key, field in split_thresholds(maps).items():
-            self._define_field(self._layouts[name], key, field, maps, one)
+        fields = split_thresholds(one if pooled else maps)
+        for key, field in fields.items():
+            self._define_field(layout, key, field, maps, one)
+        return layout
+
+    def _criteria(self, name: str, maps: xr.Dataset) -> str:
+        """Write the names of the criteria of a variable; return the variable's prefix."""
+        prefix = valid_name(name, self._taken)
+        self._taken.add(f"{prefix}_pooled")
+        criterion = f"{prefix}_{CRITERION}"
+        self._file.createDimension(criterion, maps.sizes[CRITERION])
+        labels = np.array([str(label) for label in maps[CRITERION].values])
+        about = f"criterion for {maps.attrs.get('long_name', name)}"
+        put(self._file, f"{criterion}_name", (criterion,), labels, {"long_name": about})
+        return prefix
 
     def _define_field(
         self, layout: _Layout, key: str, field: xr.DataArray, maps: xr.Dataset, one: xr.Dataset
     ) -> None:
         order = [CRITERION, START, *layout.space]
         dimensions = [dimension for dimension in order if dimension in field.dims]
-        lead = maps[LEAD].attrs.get("units", "hours") if LEAD in maps.coords else "hours"
+        lead, _ = lead_axis(maps)
         about = str(maps.attrs.get("long_name", layout.prefix))
+        about += " (all starts pooled)" if layout.pooled else ""
         units = str(maps.attrs.get("units", "1"))
-        attributes = field_attributes(key, field.attrs, about, units, str(lead))
+        attributes = field_attributes(key, field.attrs, about, units, lead)
         near = [layout.coordinates] if set(layout.space) & set(dimensions) else []
         if CRITERION in dimensions:
             near.append(f"{layout.dimensions[CRITERION]}_name")
@@ -238,13 +245,12 @@ class MapFile:
         )
         layout.missing[name] = missing_value(key, field.attrs, kind)
 
-    def _write(self, name: str, slot: int, one: xr.Dataset) -> None:
-        layout = self._layouts[name]
+    def _write(self, layout: _Layout, slot: int, one: xr.Dataset) -> None:
         if (layout.prefix, slot) in self._written:
             raise ArgumentError(
                 "maps",
                 expected="every start of a variable once",
-                found=f"start number {slot + 1} of {name} a second time",
+                found=f"a start of {layout.prefix} a second time",
                 remedy="append each start only once",
             )
         for key, field in split_thresholds(one).items():
@@ -252,7 +258,7 @@ class MapFile:
             if target not in layout.missing:
                 raise ArgumentError(
                     "maps",
-                    expected=f"the fields of the first start of {name}",
+                    expected=f"the fields of the first start of {layout.prefix}",
                     found=f"a further field {key!r}",
                     remedy="give every start of a variable the same fields",
                 )
@@ -260,43 +266,6 @@ class MapFile:
             order = [d for d in (CRITERION, *layout.space) if d in field.dims]
             variable[_at(variable, slot)] = field.transpose(*order).values
         self._written.add((layout.prefix, slot))
-
-    def _grid(self, maps: xr.Dataset, space: tuple[str, ...]) -> dict[str, str]:
-        """Return the file's names for the dimensions and coordinates of a grid, old or new."""
-        coords = {
-            str(key): coordinate
-            for key, coordinate in maps.coords.items()
-            if coordinate.dims
-            and set(coordinate.dims) <= set(space)
-            and coordinate.dtype.kind in "fiu"
-        }
-        sizes = {key: maps.sizes[key] for key in space}
-        for known, names in self._grids:
-            same = set(known) == set(coords) and all(key in names for key in space)
-            if (
-                same
-                and all(known[key].equals(coords[key]) for key in coords)
-                and all(
-                    self._file.dimensions[names[key]].size == size for key, size in sizes.items()
-                )
-            ):
-                return names
-        names = {key: valid_name(key, self._taken) for key in dict.fromkeys([*space, *coords])}
-        for key, size in sizes.items():
-            self._file.createDimension(names[key], size)
-        for key, coordinate in coords.items():
-            dimensions = tuple(names[str(dimension)] for dimension in coordinate.dims)
-            values = (
-                _steady(coordinate.values) if dimensions == (names[key],) else coordinate.values
-            )
-            put(self._file, names[key], dimensions, values, _coordinate_attributes(key, coordinate))
-        self._grids.append((coords, names))
-        return names
-
-
-def _space(maps: xr.Dataset) -> tuple[str, ...]:
-    dimensions = maps["horizon"].dims if "horizon" in maps else tuple(maps.dims)
-    return tuple(str(name) for name in dimensions if name not in (START, CRITERION, LEAD))
 
 
 def _real_starts(maps: xr.Dataset) -> np.ndarray:
@@ -306,24 +275,3 @@ def _real_starts(maps: xr.Dataset) -> np.ndarray:
 
 def _at(variable: Any, slot: int) -> tuple[Any, ...]:
     return tuple(slot if name == START else slice(None) for name in variable.dimensions)
-
-
-def _steady(values: np.ndarray) -> np.ndarray:
-    """Return longitudes that cross the date line as steadily rising ones, as CF asks."""
-    steps = np.diff(values)
-    if values.size < 2 or np.all(steps > 0) or np.all(steps < 0):
-        return values
-    return np.unwrap(values, period=360.0)
-
-
-def _coordinate_attributes(key: str, coordinate: xr.DataArray) -> dict[str, Any]:
-    attributes: dict[str, Any] = dict(COORDINATE_ATTRIBUTES.get(key, {}))
-    if not attributes:
-        # Projection axes would need a grid mapping, which the canonical layout does not carry.
-        attributes = {
-            "long_name": str(coordinate.attrs.get("long_name", f"{key} of the grid")),
-            "units": str(coordinate.attrs.get("units", "1")),
-        }
-    if coordinate.dims == (key,) and key in _AXES:
-        attributes["axis"] = _AXES[key]
-    return attributes

@@ -9,7 +9,7 @@ import numpy as np
 from ensemble_horizon.products.hour_scale import HourScale, ramp, status_colours
 from ensemble_horizon.products.sheet import INK, Sheet, wrapped
 from ensemble_horizon.products.view import MapView
-from ensemble_horizon.products.wording import duration, lead_number, lead_units
+from ensemble_horizon.products.wording import duration, interval_name, lead_number, lead_units
 from ensemble_horizon.vocabulary import CAUTION, Status
 
 STATUS_WORDS = {
@@ -30,6 +30,7 @@ class MapField:
     low: np.ndarray | None
     high: np.ndarray | None
     units: str
+    confidence: float | None
     last_lead: float | None
     title: str
     subtitle: str
@@ -128,9 +129,7 @@ def map_notes(content: MapField, width: float) -> list[str]:
             up = "past the end of the run"
             if np.isfinite(middle):
                 up = f"{lead_number(middle, content.units)} {unit} above"
-            notes += wrapped(
-                f"Interval of the limit, median over the map: from {down} {unit} below to {up}.",
-                width,
-                7.5,
-            )
+            name = interval_name(content.confidence)
+            words = f"{name} of the limit, median over the map: from {down} {unit} below to {up}."
+            notes += wrapped(words, width, 7.5)
     return notes + wrapped(CAUTION, width, 7.5)

@@ -16,6 +16,7 @@ from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.products.coast import coastlines
 from ensemble_horizon.products.hour_scale import HourScale, hour_scale, status_colours
 from ensemble_horizon.products.isolines import contour_lines, label_places
+from ensemble_horizon.products.limits import lead_axis
 from ensemble_horizon.products.map_legend import (
     STATUS_WORDS,
     MapField,
@@ -29,8 +30,14 @@ from ensemble_horizon.products.map_legend import (
 from ensemble_horizon.products.places import PlaceMark
 from ensemble_horizon.products.sheet import INK, SOFT_INK, Sheet, line_height, wrapped
 from ensemble_horizon.products.view import MapView, map_view
-from ensemble_horizon.products.wording import lead_number, number, start_text
-from ensemble_horizon.vocabulary import CRITERION, LEAD, START, Status
+from ensemble_horizon.products.wording import (
+    criterion_words,
+    is_pooled,
+    lead_number,
+    start_text,
+    with_units,
+)
+from ensemble_horizon.vocabulary import CRITERION, START, Status
 
 SOFTWARE = "Ensemble Horizon"
 _WIDEST, _HIGHEST, _NARROWEST = 1020, 690, 620
@@ -64,7 +71,8 @@ def draw_horizon_map(
     members : int, optional
         Number of members, for the title; ``maps.attrs["members"]`` otherwise.
     last_lead : float, optional
-        End of the run, for the legend; the last ``lead`` of the maps otherwise.
+        End of the run, for the legend; the last ``lead`` of the maps or
+        ``maps.attrs["last_lead"]`` otherwise.
     view : MapView, optional
         View of the same grid from an earlier picture, which saves finding it again.
 
@@ -114,18 +122,21 @@ def draw_horizon_map(
 
 def _field(one: xr.Dataset, members: int | None, last_lead: float | None) -> MapField:
     """Gather the fields and write the title and the line below it."""
-    units = "hours"
-    if LEAD in one.coords:
-        units = str(one[LEAD].attrs.get("units", "hours"))
-        last_lead = float(one[LEAD].values[-1]) if last_lead is None else last_lead
+    units, end = lead_axis(one)
+    last_lead = end if last_lead is None else last_lead
     members = one.attrs.get("members") if members is None else members
     label = str(one["start_label"].values) if "start_label" in one else ""
-    threshold = ""
+    words = str(one[CRITERION].values)
+    kind = str(one["criterion_kind"].values) if "criterion_kind" in one else ""
+    if kind == "tolerance" and "threshold" not in one:
+        # The name says the number; only its units are wanting.
+        words = with_units(words, str(one["threshold_units"].values))
     if "threshold" in one and one["threshold"].ndim == 0 and np.isfinite(one["threshold"]):
         unit = str(one["threshold_units"].values) if "threshold_units" in one else ""
-        threshold = f" ({number(float(one['threshold']))}{'' if unit in ('', '1') else ' ' + unit})"
-    parts = [f"Criterion: {one[CRITERION].values}{threshold}"]
-    parts.append(f"start {start_text(one[START].values[()], label)}")
+        words = criterion_words(words, float(one["threshold"]), unit)
+    parts = [f"Criterion: {words}"]
+    when = start_text(one[START].values[()], label)
+    parts.append(when if is_pooled(one[START].values[()], label) else f"start {when}")
     if members is not None:
         parts.append(f"{int(members)} members")
     fields = {
@@ -135,6 +146,7 @@ def _field(one: xr.Dataset, members: int | None, last_lead: float | None) -> Map
     return MapField(
         horizon=one["horizon"].values.ravel().astype(float),
         status=one["status"].values.ravel(),
+        confidence=one.attrs.get("confidence"),
         low=fields["low"],
         high=fields["high"],
         units=units,

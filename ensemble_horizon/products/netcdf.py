@@ -11,6 +11,7 @@ from importlib import metadata
 from pathlib import Path
 from typing import Any
 
+import cf_units
 import cftime
 import netCDF4
 import numpy as np
@@ -32,7 +33,7 @@ REFERENCES = (
     "Brisch and Kantz 2019 (New Journal of Physics)"
 )
 _EPOCH = "1970-01-01 00:00:00"
-_KNOWN = ("inputs", "settings", "version", "command", "institution", "model", "created")
+_KNOWN = ("title", "inputs", "settings", "version", "command", "institution", "model", "created")
 _SHOWN_INPUTS = 4
 
 # Long name, and what the units are taken from: the variable, the leads, their inverse, or none.
@@ -116,7 +117,7 @@ def global_attributes(title: str, provenance: Mapping[str, Any]) -> dict[str, An
     title : str
         What the file holds.
     provenance : mapping
-        Any of ``inputs`` (list of paths), ``settings`` (text), ``version``, ``command``,
+        Any of ``title``, ``inputs`` (list of paths), ``settings`` (text), ``version``, ``command``,
         ``institution``, ``model``, ``created`` (datetime); further keys become attributes of that
         name with ``provenance_`` before it.
 
@@ -132,7 +133,7 @@ def global_attributes(title: str, provenance: Mapping[str, Any]) -> dict[str, An
     files = "file" if len(inputs) == 1 else "files"
     attributes: dict[str, Any] = {
         "Conventions": CONVENTIONS,
-        "title": title,
+        "title": f"{provenance['title']}: {title}" if provenance.get("title") else title,
         "institution": str(provenance.get("institution") or "not stated"),
         "source": f"Ensemble Horizon {version}, from {len(inputs)} ensemble forecast "
         f"{files}{model}",
@@ -183,16 +184,32 @@ def field_attributes(
     text, kind = FIELDS.get(name, (name.replace("_", " "), "given"))
     inverse = "1" if lead == "1" else f"{lead.rstrip('s')}-1"
     table = {"variable": units, "lead": lead, "rate": inverse, "none": "1"}
-    result: dict[str, Any] = {"long_name": f"{text}: {long_name}"}
-    if kind == "flag" or "flag_values" in attributes:
-        result["flag_values"] = np.asarray(attributes.get("flag_values", []), dtype=np.int8)
+    text = str(attributes.get("long_name") or text)
+    result: dict[str, Any] = {
+        "long_name": text if long_name in text else f"{text}: {long_name}",
+    }
+    if kind == "flag" and "flag_values" not in attributes:
+        return result
+    if "flag_values" in attributes:
+        result["flag_values"] = np.asarray(attributes["flag_values"], dtype=np.int8)
         result["flag_meanings"] = str(attributes.get("flag_meanings", ""))
         return result
     result["units"] = str(attributes.get("units") or table.get(kind, "1"))
+    if not is_unit(result["units"]):
+        # CF readers stop at a unit they cannot parse.
+        result["units_as_given"] = result.pop("units")
     comment = str(attributes.get("comment") or FIELD_COMMENTS.get(name, ""))
     if comment:
         result["comment"] = comment
     return result
+
+
+def is_unit(text: str) -> bool:
+    """Tell whether UDUNITS can read a unit."""
+    try:
+        return not cf_units.Unit(text).is_unknown()
+    except ValueError:
+        return False
 
 
 def put(

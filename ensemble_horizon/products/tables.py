@@ -13,7 +13,7 @@ from rich.table import Table
 from rich.text import Text
 
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
-from ensemble_horizon.products.wording import duration, number
+from ensemble_horizon.products.wording import criterion_words, duration
 from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import CAUTION, Status
 
@@ -169,10 +169,7 @@ def limits_table(results: Iterable[VariableResult], *, most: int | None = None) 
 
 def criterion_text(limit: Limit) -> str:
     """Return a criterion with its threshold: ``gale (5 m s-1)``; no units where dimensionless."""
-    if not np.isfinite(limit.threshold):
-        return limit.criterion
-    units = "" if limit.threshold_units in ("", "1") else f" {limit.threshold_units}"
-    return f"{limit.criterion} ({number(limit.threshold)}{units})"
+    return criterion_words(limit.criterion, limit.threshold, limit.threshold_units)
 
 
 def _shortest_first(limit: Limit) -> tuple[int, float, str, str]:

@@ -76,6 +76,17 @@ def interval(low: float, high: float, units: str) -> str:
     return f"({lower} to {upper})"
 
 
+def interval_name(confidence: float | None) -> str:
+    """Return ``90 % interval`` or, where the confidence is not known, ``Interval``.
+
+    Examples
+    --------
+    >>> interval_name(0.9), interval_name(None)
+    ('90 % interval', 'Interval')
+    """
+    return "Interval" if confidence is None else f"{100 * float(confidence):.3g} % interval"
+
+
 def horizon_text(
     status: int,
     horizon: float,
@@ -148,7 +159,47 @@ def is_pooled(start: Any, label: str = "") -> bool:
 
 
 def law_names(flags: Any) -> dict[int, str]:
-    """Return the meaning of each flag value of a law variable (an xarray object with attrs)."""
+    """Return the law behind each flag value of a law variable (an xarray object with attrs).
+
+    CF flag meanings may be written with underscores where the names of laws have hyphens; ``none``
+    is an empty name.
+    """
     values = np.atleast_1d(flags.attrs.get("flag_values", []))
     meanings = str(flags.attrs.get("flag_meanings", "")).split()
-    return {int(value): meaning for value, meaning in zip(values, meanings, strict=False)}
+    return {
+        int(value): "" if meaning == "none" else meaning.replace("_", "-")
+        for value, meaning in zip(values, meanings, strict=False)
+    }
+
+
+def with_units(words: str, units: str) -> str:
+    """Return ``words`` with ``units`` behind them, if they end in a number.
+
+    Examples
+    --------
+    >>> with_units("tolerance 5", "m s-1"), with_units("gale", "m s-1")
+    ('tolerance 5 m s-1', 'gale')
+    """
+    try:
+        float(words.split()[-1])
+    except (ValueError, IndexError):
+        return words
+    return words if units in ("", "1") else f"{words} {units}"
+
+
+def criterion_words(criterion: str, threshold: float, units: str) -> str:
+    """Return a criterion with its threshold, unless its name says the number already.
+
+    Examples
+    --------
+    >>> criterion_words("gale", 5.0, "m s-1"), criterion_words("tolerance 5", 5.0, "m s-1")
+    ('gale (5 m s-1)', 'tolerance 5 m s-1')
+    >>> criterion_words("chance 0.3 beyond 17", 0.3, "1")
+    'chance 0.3 beyond 17'
+    """
+    if not np.isfinite(threshold):
+        return criterion
+    value, unit = number(threshold), "" if units in ("", "1") else f" {units}"
+    if criterion.split()[-1:] == [value]:
+        return f"{criterion}{unit}"
+    return criterion if value in criterion.split() else f"{criterion} ({value}{unit})"

@@ -59,8 +59,7 @@ def written_whole(target: str | os.PathLike[str]) -> Iterator[Path]:
             neighbour.replace(place)
             flush_to_disk(place.parent)
     finally:
-        with contextlib.suppress(OSError):
-            neighbour.unlink(missing_ok=True)
+        discard(neighbour)
 
 
 @contextlib.contextmanager
@@ -121,6 +120,18 @@ def flush_to_disk(path: Path) -> None:
             raise
     finally:
         os.close(descriptor)
+
+
+def discard(path: Path) -> None:
+    """Remove a file and give its room back at once.
+
+    A library that failed to write a file may hold it open until the program ends, and a full disk
+    would stay full of a file that nobody can see; so it is emptied before it is unlinked.
+    """
+    with contextlib.suppress(OSError):
+        os.truncate(path, 0)
+    with contextlib.suppress(OSError):
+        path.unlink(missing_ok=True)
 
 
 def nearest_folder(target: Path) -> Path:

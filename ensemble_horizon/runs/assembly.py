@@ -19,7 +19,7 @@ from ensemble_horizon.runs.agreement import (
     number_members,
 )
 from ensemble_horizon.runs.catalogue import Catalogue, Table
-from ensemble_horizon.runs.faults import Fault
+from ensemble_horizon.runs.faults import Effect, Fault
 from ensemble_horizon.runs.files import Files, FoundFile, find_files
 from ensemble_horizon.runs.grids import Grid
 from ensemble_horizon.runs.headers import FileHeader, Layout, VariableHeader, read_header
@@ -94,8 +94,9 @@ that matches; found no match, and no folder 'no/such/folder'. Next: correct the 
     layouts = keep_one_calendar(layouts, faults)
     layouts, grid = keep_one_grid(layouts, faults)
     layouts = keep_one_unit(layouts, faults)
-    if strict and faults:
-        raise _strict_refusal(faults[0])
+    serious = [fault for fault in faults if fault.effect is not Effect.note]
+    if strict and serious:
+        raise _strict_refusal(serious[0])
     layouts = number_members(layouts, lagged)
     if lagged:
         layouts = align_lagged(layouts, faults)
@@ -134,9 +135,17 @@ def _read_all(
     headers: list[FileHeader] = []
     faults: list[Fault] = []
     errors: list[InputError] = []
+    grids: list[Grid] = []
+    skipped: dict[str, Fault] = {}
     for count, file in enumerate(found, start=1):
         try:
-            headers.append(read_header(file, wanted))
+            header = read_header(file, wanted, grids)
+            headers.append(header)
+            grids += [layout.grid for layout in header.layouts if layout.grid not in grids]
+            for name, reason in header.skipped.items():
+                message = f"{name!r} is left out: {reason}"
+                skipped.setdefault(name, Fault("variable-skipped", file=file.path,
+                                               variable=name, message=message))  # fmt: skip
         except InputError as error:
             if strict:
                 raise
@@ -146,7 +155,7 @@ def _read_all(
             progress(count, len(found))
     if not headers:
         raise errors[0]
-    return headers, faults
+    return headers, [*faults, *skipped.values()]
 
 
 def _fault_of(file: FoundFile, error: EnsembleHorizonError) -> Fault:
@@ -185,7 +194,7 @@ def _assemble(
     calendar = layouts[0].calendar
     for source, layout in enumerate(layouts):
         if layout.mismatch:
-            faults.append(layout_fault("start-mismatch", layout, layout.mismatch))
+            faults.append(layout_fault("time-mismatch", layout, layout.mismatch))
         inside = np.flatnonzero(layout.lead.ravel() != OUTSIDE)
         where = (
             np.searchsorted(starts, layout.start.ravel()[inside]),
@@ -210,7 +219,7 @@ def _assemble(
     order = tuple(sorted(faults, key=lambda fault: (str(fault.file), fault.kind)))
     return Catalogue(headers, starts, leads, members, grid, order, calendar,
                      tuple(layout.source for layout in layouts), distinct, table_of,
-                     attrs)  # fmt: skip
+                     attrs, layouts[0].lead_units)  # fmt: skip
 
 
 def sorted_members(labels: set[int | str]) -> tuple[int | str, ...]:

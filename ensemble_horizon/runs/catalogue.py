@@ -27,7 +27,7 @@ from ensemble_horizon.runs.times import Ticks, iso_text, to_dates, to_hours
 
 Index = slice | int | Sequence[int] | npt.NDArray[np.int64]
 
-BLOCK_BYTES = 64 * 2**20
+BLOCK_BYTES = 32 * 2**20
 
 
 @dataclass(frozen=True)

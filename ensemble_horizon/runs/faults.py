@@ -32,11 +32,12 @@ KINDS: dict[str, Effect] = {
     "constant-fields": Effect.wrong,
     "identical-members": Effect.wrong,
     "duplicate-lead": Effect.wrong,
-    "start-mismatch": Effect.wrong,
+    "time-mismatch": Effect.wrong,
     "leads-out-of-order": Effect.note,
     "lagged-starts": Effect.note,
     "common-mask": Effect.note,
     "varying-mask": Effect.note,
+    "variable-skipped": Effect.note,
     "identical-leads": Effect.note,
 }
 

@@ -18,9 +18,18 @@ from ensemble_horizon.runs.levels import select_level
 from ensemble_horizon.runs.moments import Moments, Wanted, read_moments
 from ensemble_horizon.runs.recognition import LEVEL, X, Y, recognise, recognise_name
 from ensemble_horizon.runs.times import Ticks
-from ensemble_horizon.vocabulary import LATITUDE, LEAD, LONGITUDE, MEMBER, START, VALID
+from ensemble_horizon.vocabulary import (
+    LATITUDE,
+    LEAD,
+    LONGITUDE,
+    MEMBER,
+    STANDARD_NAMES,
+    START,
+    VALID,
+)
 
 _RUN_ROLES = (LEAD, VALID, MEMBER, START)
+_RUN_STANDARD_NAMES = {name for role in _RUN_ROLES for name in STANDARD_NAMES[role]}
 _REFERENCES = (
     "coordinates", "bounds", "climatology", "grid_mapping", "cell_measures",
     "ancillary_variables", "formula_terms",
@@ -69,6 +78,7 @@ class Layout:
     grid: Grid
     calendar: str
     mismatch: str | None
+    lead_units: str
 
 
 @dataclass(frozen=True)
@@ -79,10 +89,16 @@ class FileHeader:
     layouts: tuple[Layout, ...]
     attrs: Mapping[str, object]
     absent: tuple[str, ...]
+    skipped: Mapping[str, str]
 
 
-def read_header(file: FoundFile, wanted: Wanted) -> FileHeader:
+def read_header(file: FoundFile, wanted: Wanted, known: Sequence[Grid] = ()) -> FileHeader:
     """Read the header of one file, and close it again.
+
+    Parameters
+    ----------
+    known : sequence of Grid
+        Grids of other files; one of them is used where this file has the same.
 
     Raises
     ------
@@ -93,7 +109,7 @@ def read_header(file: FoundFile, wanted: Wanted) -> FileHeader:
         dataset = open_raw(file.path)
         try:
             with border(file.path, "the header"):
-                return HeaderReading(dataset, file, wanted).header()
+                return HeaderReading(dataset, file, wanted, known).header()
         finally:
             dataset.close()
 
@@ -101,7 +117,14 @@ def read_header(file: FoundFile, wanted: Wanted) -> FileHeader:
 class HeaderReading:
     """The steps of reading one header, with what they share."""
 
-    def __init__(self, dataset: netCDF4.Dataset, file: FoundFile, wanted: Wanted) -> None:
+    def __init__(
+        self,
+        dataset: netCDF4.Dataset,
+        file: FoundFile,
+        wanted: Wanted,
+        known: Sequence[Grid] = (),
+    ) -> None:
+        self.known = known
         self.dataset = dataset
         self.file = file
         self.wanted = wanted
@@ -130,9 +153,25 @@ class HeaderReading:
             key = level.get(name) if isinstance(level, Mapping) else level
             extra = str(self.attributes[name].get("coordinates", ""))
             groups.setdefault((dims, (key, extra)), []).append(name)
-        layouts = tuple(self._layout(dims, group) for (dims, _), group in groups.items())
+        layouts, skipped = self._layouts([(dims, group) for (dims, _), group in groups.items()])
         attrs = {key: self.dataset.getncattr(key) for key in self.dataset.ncattrs()}
-        return FileHeader(self.file, layouts, attrs, absent)
+        return FileHeader(self.file, layouts, attrs, absent, skipped)
+
+    def _layouts(
+        self, groups: Sequence[tuple[tuple[str, ...], list[str]]]
+    ) -> tuple[tuple[Layout, ...], dict[str, str]]:
+        """Layouts of all groups; variables nobody asked for may have unknown dimensions."""
+        layouts, skipped, refusals = [], {}, []
+        for dims, group in groups:
+            unknown = self._unknown_dimension(dims, group[0])
+            if unknown is None:
+                layouts.append(self._layout(dims, group))
+            else:
+                refusals.append(unknown)
+                skipped.update(dict.fromkeys(group, unknown.found))
+        if refusals and (self.wanted.variables is not None or not layouts):
+            raise refusals[0]
+        return tuple(layouts), skipped
 
     def _coordinate_roles(self) -> dict[str, str]:
         """Role of each variable that can be a coordinate."""
@@ -144,7 +183,7 @@ class HeaderReading:
             own = name in variable.dimensions or name in referred or variable.ndim == 0
             flat = variable.ndim <= 2 and (
                 role in (LATITUDE, LONGITUDE)
-                or (role in _RUN_ROLES and "standard_name" in attributes)
+                or str(attributes.get("standard_name")) in _RUN_STANDARD_NAMES
             )
             if role is not None and (own or flat):
                 roles[name] = role
@@ -166,9 +205,7 @@ class HeaderReading:
         return moving or names
 
     def _moves(self, name: str) -> bool:
-        return any(
-            self.dim_role(dim) in _RUN_ROLES for dim in self.variables[name].dimensions
-        )
+        return any(self.dim_role(dim) in _RUN_ROLES for dim in self.variables[name].dimensions)
 
     @property
     def path(self) -> str:
@@ -185,15 +222,17 @@ class HeaderReading:
         """The role of a dimension: of its own coordinate, of one along it, or of its name."""
         if dim in self.roles:
             return self.roles[dim]
-        along = {
-            role
-            for name, role in self.roles.items()
-            if tuple(self.variables[name].dimensions) == (dim,)
-        }
+        along = {role for name, role in self.roles.items() if self._span(name) == (dim,)}
         for role in (*_RUN_ROLES, LEVEL):
             if role in along:
                 return role
         return recognise_name(dim) if dim not in self.variables else None
+
+    def _span(self, name: str) -> tuple[str, ...]:
+        """Dimensions of a coordinate, without the one that runs along the characters of text."""
+        variable = self.variables[name]
+        dims = tuple(variable.dimensions)
+        return dims[:-1] if variable.dtype == "S1" else dims
 
     def _layout(self, dims: tuple[str, ...], names: Sequence[str]) -> Layout:
         dim_roles = {dim: self.dim_role(dim) for dim in dims}
@@ -210,10 +249,8 @@ class HeaderReading:
                 values = self.variables.get(dim)
                 fixed.append((axis, select_level(self.file.path, names, dim, self.sizes[dim],
                                                  values, self.wanted.level)))  # fmt: skip
-            elif self.sizes[dim] == 1:
-                fixed.append((axis, 0))
             else:
-                raise self._unknown_dimension(names[0], dim)
+                fixed.append((axis, 0))
         space_dims = tuple(dim for dim in dims if dim in space)
         source = Source(
             self.file.path,
@@ -224,17 +261,16 @@ class HeaderReading:
         )
         run_dims = tuple(dims[axis] for axis in run_axes)
         moments = self._moments(run_dims, names[0])
-        grid = read_grid(space_dims, space, self.sizes, places)
+        grid = read_grid(space_dims, space, self.sizes, places, self.known)
         headers = tuple(self._variable(name, source, moments) for name in names)
         return Layout(source, headers, moments.start, moments.lead, moments.member, grid,
-                      moments.calendar, moments.mismatch)  # fmt: skip
+                      moments.calendar, moments.mismatch, moments.lead_units)  # fmt: skip
 
     def _moments(self, run_dims: tuple[str, ...], name: str) -> Moments:
         listed = str(self.attributes[name].get("coordinates", "")).split()
         candidates: dict[str, list[str]] = {}
         for coordinate, role in self.roles.items():
-            over = tuple(self.variables[coordinate].dimensions)
-            if role in _RUN_ROLES and set(over) <= set(run_dims):
+            if role in _RUN_ROLES and set(self._span(coordinate)) <= set(run_dims):
                 candidates.setdefault(role, []).append(coordinate)
         chosen = {
             role: self.variables[min(found, key=lambda c: (c not in run_dims, c not in listed))]
@@ -284,15 +320,23 @@ class HeaderReading:
             for name in wanted
             for match in difflib.get_close_matches(name, names, n=2, cutoff=0.4)
         ]
-        hint = f"did you mean {' or '.join(dict.fromkeys(near))}? " if near else ""
+        nearest = " or ".join(dict.fromkeys(near))
         return InputError(
             self.file.path,
             expected=f"the variable {' or '.join(map(repr, wanted))}",
             found=f"the variables {offered}",
-            remedy=f"{hint}Take one of those named" if not near else hint.strip(),
+            remedy=f"ask for {nearest}, which is nearest" if near else "take one of those named",
         )
 
-    def _unknown_dimension(self, name: str, dim: str) -> InputError:
+    def _unknown_dimension(self, dims: tuple[str, ...], name: str) -> InputError | None:
+        """The refusal of a variable with a dimension that nothing tells the meaning of."""
+        roles = {dim: self.dim_role(dim) for dim in dims}
+        space = space_roles(dims, roles, self.places(dims, name))
+        known = (*_RUN_ROLES, LEVEL)
+        odd = [d for d in dims if d not in space and roles[d] not in known and self.sizes[d] != 1]
+        if not odd:
+            return None
+        dim = odd[0]
         return InputError(
             self.file.path,
             expected=f"to recognise every dimension of {name!r}",

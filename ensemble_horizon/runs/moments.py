@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 
+import netCDF4
 import numpy as np
 
 from ensemble_horizon.errors import InputError
@@ -18,9 +19,13 @@ from ensemble_horizon.runs.times import (
     decode_dates,
     decode_durations,
     iso_text,
+    to_hours,
     unit_kind,
 )
-from ensemble_horizon.vocabulary import LEAD, MEMBER, START, VALID
+from ensemble_horizon.vocabulary import HOURS, LEAD, MEMBER, START, VALID
+
+# Toy systems count in units of model time; such leads are kept as they are, without hours.
+MODEL_TIME = "1"
 
 
 @dataclass(frozen=True)
@@ -43,6 +48,7 @@ class Moments:
     calendar: str
     lead_axis: int | None
     mismatch: str | None
+    lead_units: str = HOURS
 
 
 def read_moments(
@@ -72,22 +78,39 @@ def read_moments(
     times: dict[str, Ticks] = {}
     for role in (START, LEAD, VALID):
         if role in coordinates:
-            ticks = _ticks(file.path, coordinates[role])
+            ticks = _ticks(file.path, coordinates[role], role)
             if ticks is not None:
                 times[role] = _spread_out(ticks, coordinates[role].dimensions, dims, sizes)
     if asked.analysis:
-        start = times.get(VALID, times.get(START))
-        if start is None:
-            raise _no_time(file.path)
-        return Moments(start, np.zeros(sizes, np.int64), None, calendar, None, None)
+        return _analysis(file, times, sizes, calendar)
     _refuse_time_beside_lead(file.path, dims, dim_roles, times)
     start, mismatch = _start(file, times, sizes, calendar, asked)
     lead = _lead(file, times, start, sizes)
+    told = file.parts.lead
+    if mismatch is None and told is not None and lead.size == 1:
+        inside = float(to_hours(lead).flat[0])
+        if abs(inside - told) > 1e-6:
+            mismatch = f"lead {inside:g} h inside the file, {told:g} h in its name"
     member = _members(file, coordinates.get(MEMBER), dims, sizes, dim_roles)
     moving = [axis for axis in range(len(sizes)) if sizes[axis] > 1 and _varies(lead, axis)]
     if not moving:
         moving = [axis for axis, dim in enumerate(dims) if dim_roles[dim] in (LEAD, VALID)]
-    return Moments(start, lead, member, calendar, moving[0] if moving else None, mismatch)
+    plain = LEAD in coordinates and str(getattr(coordinates[LEAD], "units", "")) == MODEL_TIME
+    return Moments(start, lead, member, calendar, moving[0] if moving else None, mismatch,
+                   MODEL_TIME if plain else HOURS)  # fmt: skip
+
+
+def _analysis(
+    file: FoundFile, times: Mapping[str, Ticks], sizes: tuple[int, ...], calendar: str
+) -> Moments:
+    """Analyses: every valid time is a start, with the lead 0 and the member 0."""
+    valid = times.get(VALID, times.get(START))
+    if valid is None:
+        if file.parts.start is None:
+            raise _no_time(file.path)
+        valid = np.full(sizes, date_ticks(file.parts.start), dtype=np.int64)
+    zeros = np.zeros(sizes, dtype=np.int64)
+    return Moments(valid, zeros, zeros.astype(object), calendar, None, None)
 
 
 def _start(
@@ -100,19 +123,20 @@ def _start(
     inside = times.get(START)
     if inside is None and LEAD in times and VALID in times:
         inside = times[VALID] - times[LEAD]
-    told = asked.start
-    if told is None and file.parts.start is not None:
-        told = date_ticks(file.parts.start)
-    if told is None:
+    if asked.start is not None:
+        return np.full(sizes, asked.start, dtype=np.int64), None
+    if file.parts.start is None:
         if inside is None:
             raise _no_reference_time(file.path)
+        return inside, None
+    told = date_ticks(file.parts.start)
+    if inside is not None and np.unique(inside).size > 1:
+        # A name can only tell one of several starts.
         return inside, None
     mismatch = None
     if inside is not None and inside.size and (inside != told).any():
         first = iso_text(int(inside.flat[0]), calendar)
-        mismatch = f"start {first} inside the file, {iso_text(told, calendar)} outside it"
-        if np.unique(inside).size > 1:
-            return inside, mismatch
+        mismatch = f"start {first} inside the file, {iso_text(told, calendar)} in its name"
     return np.full(sizes, told, dtype=np.int64), mismatch
 
 
@@ -155,9 +179,9 @@ def _members(
 
 def _labels(coordinate: StoredVariable) -> tuple[np.ndarray, tuple[str, ...]]:
     values, dims = np.asarray(coordinate[...]), tuple(coordinate.dimensions)
-    if values.dtype.kind == "S":
-        joined = np.apply_along_axis(lambda row: b"".join(row), -1, values)
-        values, dims = np.char.decode(joined, "utf-8", "replace"), dims[:-1]
+    if values.ndim == len(dims) and coordinate.dtype == "S1":
+        values = np.asarray(netCDF4.chartostring(values))
+    dims = dims[: values.ndim]
     flat = np.empty(values.size, dtype=object)
     for index, value in enumerate(values.ravel()):
         is_number = isinstance(value, int | float | np.number) and float(value).is_integer()
@@ -165,13 +189,15 @@ def _labels(coordinate: StoredVariable) -> tuple[np.ndarray, tuple[str, ...]]:
     return flat.reshape(values.shape), dims
 
 
-def _ticks(path: str, coordinate: StoredVariable) -> Ticks | None:
+def _ticks(path: str, coordinate: StoredVariable, role: str) -> Ticks | None:
     units = str(getattr(coordinate, "units", ""))
     kind = unit_kind(units)
     try:
         values = np.asarray(coordinate[...])
         if kind == "date":
             return decode_dates(values, units, str(getattr(coordinate, "calendar", "standard")))
+        if units == MODEL_TIME and role == LEAD:
+            return decode_durations(values, HOURS)
         return decode_durations(values, units) if kind == "duration" else None
     except ValueError as error:
         raise InputError(

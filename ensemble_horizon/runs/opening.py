@@ -13,7 +13,7 @@ from ensemble_horizon.runs.catalogue import BLOCK_BYTES, Catalogue
 from ensemble_horizon.runs.decoding import PACKING
 from ensemble_horizon.runs.files import Files
 from ensemble_horizon.runs.levels import Level
-from ensemble_horizon.vocabulary import COORDINATE_ATTRIBUTES, LEAD, MEMBER, START, VALID
+from ensemble_horizon.vocabulary import COORDINATE_ATTRIBUTES, HOURS, LEAD, MEMBER, START, VALID
 
 _NOT_KEPT = (*PACKING, "coordinates", "grid_mapping", "cell_measures", "ancillary_variables")
 
@@ -80,8 +80,8 @@ def open_analyses(
     catalogue = read_catalogue(
         files, variables=variables, level=level, strict=strict, analysis=True
     )
-    data = to_dataset(catalogue).drop_vars(VALID).isel({LEAD: 0, MEMBER: 0}, drop=True)
-    data = data.rename({START: VALID})
+    data = to_dataset(catalogue).drop_vars(VALID, errors="ignore")
+    data = data.isel({LEAD: 0, MEMBER: 0}, drop=True).rename({START: VALID})
     data[VALID].attrs = dict(COORDINATE_ATTRIBUTES[VALID])
     return data
 
@@ -94,13 +94,15 @@ def to_dataset(catalogue: Catalogue, budget: int = BLOCK_BYTES) -> xr.Dataset:
         for name, header in catalogue.variables.items()
     }
     lead_attributes = COORDINATE_ATTRIBUTES[LEAD] | {"units": catalogue.lead_units}
-    coords = {
+    coords: dict[str, object] = {
         START: (START, catalogue.starts, dict(COORDINATE_ATTRIBUTES[START])),
         LEAD: (LEAD, catalogue.leads, lead_attributes),
         MEMBER: (MEMBER, np.asarray(catalogue.members), dict(COORDINATE_ATTRIBUTES[MEMBER])),
-        VALID: ((START, LEAD), catalogue.valid, dict(COORDINATE_ATTRIBUTES[VALID])),
         **catalogue.grid.coords,
     }
+    if catalogue.lead_units == HOURS:
+        valid = ((START, LEAD), catalogue.valid, dict(COORDINATE_ATTRIBUTES[VALID]))
+        coords[VALID] = valid
     return xr.Dataset(data, coords=coords, attrs=dict(catalogue.attrs))
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 
@@ -18,6 +19,7 @@ Indices = npt.NDArray[np.int64]
 
 # Reading a span with gaps is cheaper than many calls while at least this part of it is wanted.
 _DENSE = 0.5
+_CHUNK_CACHE = 2 * 2**20
 
 
 @dataclass(frozen=True)
@@ -87,8 +89,12 @@ def raw_blocks(
         axes = np.stack(np.unravel_index(position[where], source.run_shape))
     else:
         axes = np.zeros((0, member.size), dtype=np.int64)
-    for chosen in _slabs(axes, np.arange(member.size)):
-        along = [np.unique(axis[chosen]) for axis in axes]
+    whole = [np.unique(axis) for axis in axes]
+    one = all(part[-1] - part[0] + 1 == part.size for part in whole)
+    one = one and math.prod(part.size for part in whole) == member.size
+    everything = np.arange(member.size)
+    for chosen in (everything,) if one else _slabs(axes, everything):
+        along = whole if one else [np.unique(axis[chosen]) for axis in axes]
         raw, decode = _read_slab(source, variable, along, bounds)
         shape = tuple(part.size for part in along)
         # The slab holds its fields in the order of the axes, so the labels are sorted likewise.
@@ -105,7 +111,7 @@ def _slabs(axes: Indices, chosen: Indices, axis: int = 0) -> Iterator[Indices]:
     for run in _dense_runs(positions):
         part = chosen[np.isin(axes[axis, chosen], run)]
         rest = [np.unique(axes[later, part]).size for later in range(axis + 1, len(axes))]
-        if run.size * int(np.prod(rest, dtype=np.int64)) == part.size:
+        if run.size * math.prod(rest) == part.size:
             yield from _slabs(axes, part, axis + 1)
         else:
             for single in run:
@@ -157,6 +163,10 @@ def _variable(opened: Opened, path: str, variable: str, rank: int) -> Decoder:
             found="another layout",
             remedy="the file was replaced meanwhile; start again",
         )
+    # Blocks follow the chunks, so a chunk is wanted once: the library's cache of 64 MB for each
+    # variable of each open file would only fill the memory.
+    if stored.chunking() not in (None, "contiguous"):
+        stored.set_var_chunk_cache(_CHUNK_CACHE)
     made = decoder(stored.dtype, {key: stored.getncattr(key) for key in stored.ncattrs()})
     opened.decoders[variable] = made
     return made
@@ -165,6 +175,10 @@ def _variable(opened: Opened, path: str, variable: str, rank: int) -> Decoder:
 def _view(out: np.ndarray, block: RawBlock) -> tuple[np.ndarray, np.ndarray] | None:
     """A view of ``out`` and ``raw`` in the same order, where the block fills a rectangle of it."""
     axes = block.member.ndim
+    if block.member.size == 1:
+        member, lead = block.member.item(), block.lead.item()
+        target = out[member : member + 1, lead : lead + 1]
+        return target, block.raw.reshape(target.shape)
     moving = [axis for axis in range(axes) if block.member.shape[axis] > 1]
     by_member = [axis for axis in moving if (np.diff(block.member, axis=axis) != 0).any()]
     by_lead = [axis for axis in moving if (np.diff(block.lead, axis=axis) != 0).any()]

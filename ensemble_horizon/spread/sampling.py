@@ -117,14 +117,27 @@ def noise_from_points(values: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
     with np.errstate(invalid="ignore", divide="ignore"):
         unit = deviation / np.sqrt((deviation**2).sum(axis=2, keepdims=True))
     n = np.maximum(count.reshape(leads, points).max(axis=1) - 1.0, 1.0)
-    square = (unit @ unit.transpose(0, 2, 1)) ** 2
+    pair = np.minimum(n[:, np.newaxis], n)
+    square = _unbiased_square((unit @ unit.transpose(0, 2, 1)) ** 2, pair + 1)
     known = np.isfinite(square)
     with np.errstate(invalid="ignore", divide="ignore"):
-        mean = np.where(known, square, 0.0).sum(axis=0) / known.sum(axis=0)
-        pair = np.minimum(n[:, np.newaxis], n)
-        # E[r^2] = rho^2 + about (1 - rho^2)/n: taken off, so that idle noise is no correlation.
-        correlation = (pair * mean - 1) / np.maximum(pair - 1, 1.0)
+        correlation = np.where(known, square, 0.0).sum(axis=0) / known.sum(axis=0)
     return LeadNoise(_widen(n, n, kurtosis), _as_correlation(correlation))
+
+
+def _unbiased_square(square: np.ndarray, members: np.ndarray) -> np.ndarray:
+    """Squared correlations freed of the bias of few members.
+
+    1 - (M-3)/(M-2) (1-r^2) 2F1(1, 1; M/2; 1-r^2) (Olkin and Pratt 1958, Annals of Mathematical
+    Statistics, from memory), with the first terms of the series.
+    """
+    rest = 1 - square
+    series = np.ones_like(square)
+    term = np.ones_like(square)
+    for order in range(1, 7):
+        term = term * rest * order / (members / 2 + order - 1)
+        series += term
+    return 1 - np.maximum(members - 3, 0) / np.maximum(members - 2, 1) * rest * series
 
 
 def pooled_kurtosis(values: np.ndarray) -> float:
@@ -136,9 +149,10 @@ def pooled_kurtosis(values: np.ndarray) -> float:
 
     Notes
     -----
-    Fisher's unbiased estimate g2 (scipy.stats.kurtosis, bias=False), averaged. From 20 Gaussian
-    members one point scatters by sqrt(24/20); as leads and neighbouring points repeat one another,
-    only one point in four and no lead counts towards the precision of the mean.
+    The fourth cumulant over the square of the second, both from Fisher's unbiased k-statistics
+    summed over points: a ratio of sums, as the mean of ratios from few members misses heavy tails.
+    From 20 Gaussian members one point scatters by sqrt(24/20); as leads and neighbouring points
+    repeat one another, only one point in four and no lead counts towards the precision of the mean.
     """
     _, members, points = values.shape
     if members < 5 or points == 0:
@@ -148,7 +162,12 @@ def pooled_kurtosis(values: np.ndarray) -> float:
     varying = (complete**2).sum(axis=1).min(axis=0) > 0
     if not varying.any():
         return 0.0
-    mean = float(stats.kurtosis(complete[:, :, varying], axis=1, bias=False).mean())
+    chosen = complete[:, :, varying]
+    variance = chosen.var(axis=1, ddof=1)
+    fourth = stats.kurtosis(chosen, axis=1, bias=False) * variance**2
+    # E[k2^2] = sigma^4 (1 + 2/(M-1)) + k4/M
+    square = (variance**2 - fourth / members) / (1 + 2 / (members - 1))
+    mean = float(np.mean(fourth.sum(axis=1) / np.maximum(square.sum(axis=1), 1e-300)))
     error = np.sqrt(24 / members / max(1.0, varying.sum() / 4))
     return mean if mean > 2 * error else 0.0
 

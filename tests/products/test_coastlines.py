@@ -37,7 +37,7 @@ def test_no_line_follows_the_date_line_or_the_pole():
     lines = coastlines(-180, 180, -90, 90)
     assert len(lines) > 1000
     for line in lines:
-        along = np.abs(np.abs(line[:, 0]) - 180) < 0.011
+        along = np.abs(np.abs(line[:, 0]) - 180) < 0.005
         assert not np.any(along[1:] & along[:-1])
         assert line[:, 1].min() > -86
         assert np.abs(np.diff(line[:, 0])).max(initial=0) < 10

@@ -105,6 +105,20 @@ def test_words_stay_on_the_sheet_and_off_each_other():
             assert not any(box.overlaps(other) for other in boxes[:index])
 
 
+@pytest.mark.parametrize("horizon", [60.0, 130.0, 200.0])
+def test_words_beside_wide_intervals_stay_inside_and_off_the_mark(horizon):
+    curves = make_curves(criteria=("a",))
+    curves["horizon"][:] = horizon
+    curves["low"][:], curves["high"][:] = 20.0, np.inf
+    strip = drawn(panel_of(curves)).axes[-1]
+    strip.figure.canvas.draw()
+    box = strip.texts[0].get_window_extent()
+    rim = strip.get_window_extent()
+    assert rim.x0 <= box.x0 and box.x1 <= rim.x1
+    mark = strip.transData.transform((horizon, 0))[0]
+    assert not box.x0 - 4 < mark < box.x1 + 4
+
+
 def test_more_than_twelve_places_go_on_further_sheets(tmp_path):
     curves = make_curves(places=tuple(f"Site {number}" for number in range(14)), pooled=True)
     curves["spread"][:, 2] = np.nan

@@ -133,11 +133,12 @@ def test_a_picture_for_every_grid(tmp_path, grid):
     height, width = picture.shape[:2]
     assert 500 < width < 1300 and 300 < height < 1000
     # Several colours of the scale are there, exactly as painted.
-    bytes_ = {tuple(pixel) for pixel in (picture[..., :3] * 255).round().astype(int).reshape(-1, 3)}
-    values = make_maps(grid)["horizon"].values[0, 0]
-    status = make_maps(grid)["status"].values[0, 0]
-    scale = hour_scale(np.where(status == 0, values, np.nan), "hours")
-    assert sum(tuple(map(int, colour)) in bytes_ for colour in scale.colours) >= 2
+    weights = np.array([65536, 256, 1])
+    painted = np.unique((picture[..., :3] * 255).round().astype(int) @ weights)
+    maps = make_maps(grid).isel(start=0, criterion=0)
+    reached = maps["horizon"].where(maps["status"] == Status.reached).values
+    scale = hour_scale(reached, "hours")
+    assert np.isin(scale.colours.astype(int) @ weights, painted).sum() >= 2
     # Nothing is cut off: the rim of the sheet is white.
     rim = np.concatenate([picture[0], picture[-1], picture[:, 0], picture[:, -1]])
     assert (rim[:, :3] == 1).all()
@@ -165,6 +166,19 @@ def test_half_a_degree_is_drawn_in_time(tmp_path):
 def test_the_plotting_library_is_not_loaded_with_the_package():
     code = "import sys, ensemble_horizon.products as p; sys.exit('matplotlib' in sys.modules)"
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_the_line_below_the_title_names_criterion_start_and_members():
+    maps = make_maps(GRIDS["tiny"](), criteria=("tolerance 2.5", "gale"))
+    one = maps.isel(start=0, criterion=0)
+    expected = "Criterion: tolerance 2.5 m s-1   ·   start 2031-01-05 00:00 UTC   ·   20 members"
+    assert _field(one, None, None).subtitle == expected
+    bare = one.drop_vars(["threshold", "lead"]).assign_coords(criterion_kind="tolerance")
+    bare = bare.assign_attrs(lead_units="hours", last_lead=120.0)
+    assert _field(bare, None, None).subtitle == expected
+    assert _field(bare, None, None).last_lead == 120.0
+    pooled = one.assign_coords(start=np.datetime64("NaT", "ns"), start_label="all")
+    assert "·   all starts pooled   ·" in _field(pooled, None, None).subtitle
 
 
 def test_outlines_are_repeated_on_the_turn_of_the_window():

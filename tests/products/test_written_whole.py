@@ -6,6 +6,7 @@ import errno
 import os
 import shutil
 import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -35,7 +36,8 @@ def small_disk(tmp_path):
     if done.returncode:
         pytest.skip("mounting is not permitted here")
     yield place
-    subprocess.run(["umount", str(place)], check=True)
+    # Lazily: the HDF5 library keeps a file that it failed to write open until the program ends.
+    subprocess.run(["umount", "-l", str(place)], check=True)
 
 
 def test_the_target_is_replaced_at_one_stroke(tmp_path):
@@ -90,9 +92,11 @@ def test_a_folder_in_place_of_the_file_is_named(tmp_path):
 @pytest.mark.skipif(not Path("/proc/self").exists(), reason="no /proc on this system")
 def test_a_folder_that_nobody_can_write_not_even_root():
     target = Path("/proc/ensemble-horizon/horizons.csv")
-    with pytest.raises(ProductError, match=r"/proc/ensemble-horizon/horizons\.csv"):
-        with written_whole(target) as neighbour:
-            neighbour.write_text("never")
+    with (
+        pytest.raises(ProductError, match=r"/proc/ensemble-horizon/horizons\.csv"),
+        written_whole(target) as neighbour,
+    ):
+        neighbour.write_text("never")
 
 
 @pytest.mark.parametrize(
@@ -130,6 +134,7 @@ def test_products_on_a_full_disk_leave_nothing(small_disk, result, provenance):
     with pytest.raises(ProductError, match="is full"):
         write_products(small_disk / "night", [result], provenance, figures=True)
     assert everything(small_disk) == ["filler"]
+    assert shutil.disk_usage(small_disk).free > 60_000
 
 
 def test_a_netcdf_file_on_a_full_disk_is_a_product_error(small_disk, result, provenance):
@@ -140,16 +145,37 @@ def test_a_netcdf_file_on_a_full_disk_is_a_product_error(small_disk, result, pro
         write_horizon_file(small_disk / "horizons.nc", [result], provenance)
     assert "horizons.nc" in caught.value.culprit and "is full" in caught.value.found
     assert everything(small_disk) == ["filler"]
+    # The room that was left is free again.
+    assert shutil.disk_usage(small_disk).free > 12_000
+
+
+def test_the_program_ends_in_order_after_a_full_disk(small_disk):
+    code = f"""
+import sys
+sys.path.insert(0, {str(Path(__file__).parent)!r})
+from synthetic_products import GRIDS, make_maps
+from ensemble_horizon.errors import ProductError
+from ensemble_horizon.products import write_map_file
+try:
+    write_map_file({str(small_disk / "maps.nc")!r}, [make_maps(GRIDS["global"]())], {{}})
+except ProductError as error:
+    sys.exit(error.exit_status)
+"""
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, check=False, text=True)
+    assert (done.returncode, done.stderr) == (2, "")
+    assert everything(small_disk) == []
 
 
 def test_moves_are_undone_when_one_fails(tmp_path):
     (tmp_path / "a.txt").write_text("old a")
     (tmp_path / "b.txt").mkdir()
-    with pytest.raises(ProductError, match="a folder of that name"):
-        with moved_together(tmp_path) as aside:
-            (aside / "figures").mkdir()
-            for name in ("a.txt", "aa.txt", "b.txt", "figures/c.txt"):
-                (aside / name).write_text("new")
+    with (
+        pytest.raises(ProductError, match="a folder of that name"),
+        moved_together(tmp_path) as aside,
+    ):
+        (aside / "figures").mkdir()
+        for name in ("a.txt", "aa.txt", "b.txt", "figures/c.txt"):
+            (aside / name).write_text("new")
     assert (tmp_path / "a.txt").read_text() == "old a"
     assert everything(tmp_path) == ["a.txt", "b.txt"]
 

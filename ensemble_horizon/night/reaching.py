@@ -1,0 +1,115 @@
+"""Reach from stored products: the fitted laws of ``horizons.nc`` asked what-if questions."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import xarray as xr
+
+from ensemble_horizon.errors import InputError, SettingsError
+from ensemble_horizon.growth import LAWS, doubling_at
+from ensemble_horizon.horizon import reach
+from ensemble_horizon.products.netcdf import valid_name
+from ensemble_horizon.settings import Settings
+from ensemble_horizon.vocabulary import PLACE, START
+
+_SIZES = 6
+
+
+@dataclass(frozen=True)
+class Reach:
+    """What-if answers for one variable and place.
+
+    bought : Dataset of `ensemble_horizon.horizon.reach.reach`
+    sizes, doubling : (S,) error sizes and the time each takes to double under the law
+    """
+
+    variable: str
+    place: str
+    law: str
+    units: str
+    lead_units: str
+    initial_error: float
+    last_lead: float
+    bought: xr.Dataset
+    sizes: np.ndarray
+    doubling: np.ndarray
+
+
+def reach_of_products(
+    settings: Settings,
+    variable: str,
+    place: str | None,
+    tolerances: Sequence[float],
+    factors: Sequence[float],
+) -> list[Reach]:
+    """Answers for one variable at one place, or at all of them, from the newest start.
+
+    Raises
+    ------
+    InputError
+        if there is no ``horizons.nc`` yet, or it cannot be read.
+    SettingsError
+        if the variable or the place is not in it.
+    """
+    path = settings.path(settings.products.folder) / "horizons.nc"
+    if variable not in settings.variables:
+        raise _unknown("variable", variable, list(settings.variables))
+    try:
+        with xr.open_dataset(path, decode_timedelta=False) as stored:
+            fits = _fits(stored.load(), list(settings.variables), variable)
+    except (OSError, ValueError) as error:
+        raise InputError(
+            str(path),
+            expected="the products of an estimate",
+            found=getattr(error, "strerror", None) or str(error),
+            remedy="run the estimate command with this settings file first",
+        ) from error
+    names = [str(name) for name in fits["place_name"].values]
+    if place is not None and place not in names:
+        raise _unknown("place", place, names)
+    chosen = [number for number, name in enumerate(names) if place in (None, name)]
+    return [_answer(fits.isel({PLACE: number}), variable, tolerances, factors) for number in chosen]
+
+
+def _fits(stored: xr.Dataset, variables: list[str], variable: str) -> xr.Dataset:
+    taken: set[str] = set()
+    prefixes = {name: valid_name(name, taken) for name in variables}
+    prefix = f"{prefixes[variable]}_"
+    own = {name: name.removeprefix(prefix) for name in map(str, stored) if name.startswith(prefix)}
+    fits = stored[list(own)].rename(own)
+    return fits.isel({START: -1}) if START in fits.dims else fits
+
+
+def _answer(
+    fit: xr.Dataset, variable: str, tolerances: Sequence[float], factors: Sequence[float]
+) -> Reach:
+    bought = reach(fit, tolerance=tolerances, error_factor=factors)
+    names = str(fit["law"].attrs["flag_meanings"]).split()
+    law = names[int(fit["law"])]
+    initial = float(fit["initial_error"])
+    top = float(fit["saturation"]) / 2
+    if not np.isfinite(top):
+        top = float(fit["spread"].max())
+    sizes = np.geomspace(initial, max(top, initial), _SIZES) if law in LAWS else np.empty(0)
+    doubling = np.array([float(doubling_at(fit, size)) for size in sizes])
+    return Reach(
+        variable=variable,
+        place=str(fit["place_name"].values),
+        law=law,
+        units=str(fit["initial_error"].attrs.get("units", "1")),
+        lead_units=str(fit["doubling_time"].attrs.get("units", "1")),
+        initial_error=initial,
+        last_lead=float(fit["lead"].max()),
+        bought=bought,
+        sizes=sizes,
+        doubling=doubling,
+    )
+
+
+def _unknown(what: str, name: str, known: list[str]) -> SettingsError:
+    return SettingsError(
+        what, expected=f"one of {', '.join(known)}", found=repr(name), remedy="correct the name"
+    )
