@@ -26,8 +26,8 @@ class EnsembleHorizonError(Exception):
 
     Examples
     --------
-    >>> print(InputError("m03.nc", expected="a NetCDF file", found="plain text", remedy="remove it"))
-    m03.nc: expected a NetCDF file; found plain text. Next: remove it.
+    >>> print(InputError("m03.nc", expected="NetCDF", found="plain text", remedy="remove it"))
+    m03.nc: expected NetCDF; found plain text. Next: remove it.
     """
 
     exit_status = 1

@@ -22,10 +22,11 @@ from scipy import special, stats
 from ensemble_horizon.horizon.crossing import Crossing, first_crossing
 from ensemble_horizon.spread.sampling import LeadNoise
 
-_DRAWS = 4000
+_DRAWS = 2000
 _TABLE_DRAWS = 600
 _SEED = 20  # fixed: the same input gives the same interval
 _STEEPNESS = np.array([0.02, 0.05, 0.1, 0.2, 0.4, 0.8, 1.6, 3.2, 6.4])
+_FAR = 8.0  # standard units from the threshold at which noise brings no crossing
 _REACH = 16  # leads before the crossing whose noise can matter in a table
 
 
@@ -77,37 +78,47 @@ def calibrated_moves(
     """
     crossing = first_crossing(lead, center[:, np.newaxis], threshold, 0.0)
     moment = float(crossing.time[0])
-    draws = _noise_draws(noise, _DRAWS)
     scale = np.sqrt(special.polygamma(1, noise.dof / 2) / 4)
-    pull = None if threshold_pull is None else log_factor(noise.dof, draws) @ threshold_pull
+    with np.errstate(divide="ignore", invalid="ignore"):
+        distance = (np.log(threshold) - np.log(center)) / scale
+    distance = np.nan_to_num(distance, nan=np.inf, posinf=np.inf)
+    pull, chosen = None, slice(0, lead.size)
+    if threshold_pull is not None:
+        draws = _noise_draws(noise, _DRAWS)
+        pull = _log_factors(noise.dof, draws) @ threshold_pull
     if not np.isfinite(moment):
         widen = 1.0 if pull is None else float(np.sqrt(1 + np.var(pull) / np.median(scale) ** 2))
         plain = plain_moves(confidence, noise.inflation)
         return Moves(plain.up * widen, plain.down * widen)
-    least = _least_move(lead, center, threshold, moment, scale, draws, pull, hold)
+    if pull is None:
+        chosen = _telling_leads(lead, distance, moment, hold)
+        part = LeadNoise(noise.dof[chosen], noise.correlation[chosen, chosen])
+        draws = _noise_draws(part, _DRAWS)
+    need = distance[chosen] - draws
+    if pull is not None:
+        need = need + pull[:, np.newaxis] / scale
+    least = _least_move(lead[chosen], need, distance[chosen], moment, hold)
     return _quantiles(least * noise.inflation, confidence)
 
 
+def _telling_leads(lead: np.ndarray, distance: np.ndarray, moment: float, hold: float) -> slice:
+    """Leads whose noise can bring a crossing: near the threshold, up to the end of the hold."""
+    after = int(np.searchsorted(lead, moment))
+    near = np.flatnonzero(distance[:after] < _FAR)
+    first = min(int(near[0]) if near.size else after - 1, after - 1)
+    return slice(first, max(int(np.searchsorted(lead, moment + hold, side="right")), after) + 1)
+
+
 def _least_move(
-    lead: np.ndarray,
-    center: np.ndarray,
-    threshold: float,
-    moment: float,
-    scale: np.ndarray,
-    draws: np.ndarray,
-    pull: np.ndarray | None,
-    hold: float,
+    lead: np.ndarray, need: np.ndarray, distance: np.ndarray, moment: float, hold: float
 ) -> np.ndarray:
+    """c* (D,) from what each lead needs (D, L); the crossing itself lies between two leads."""
     after = int(np.searchsorted(lead, moment))
     share = (moment - lead[after - 1]) / (lead[after] - lead[after - 1])
-    at_crossing = (1 - share) * draws[:, after - 1] + share * draws[:, after]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        distance = (np.log(threshold) - np.log(center)) / scale
-    distance = np.nan_to_num(distance, nan=np.inf, posinf=np.inf)
-    need = np.insert(distance - draws, after, -at_crossing, axis=1)
+    freed = need[:, after - 1 : after + 1] - distance[after - 1 : after + 1]
+    at_crossing = (1 - share) * freed[:, 0] + share * freed[:, 1]
+    need = np.insert(need, after, at_crossing, axis=1)
     moments = np.insert(lead, after, moment)
-    if pull is not None:
-        need = need + pull[:, np.newaxis] / np.insert(scale, after, scale[after])
     if hold > 0:
         windows = [(moments >= t) & (moments <= t + hold) for t in moments[: after + 1]]
         return np.stack([need[:, window].max(axis=1) for window in windows]).min(axis=0)
@@ -214,16 +225,21 @@ def spread_bounds(
 
 
 def _moved(curves: np.ndarray, dof: np.ndarray, z: np.ndarray) -> np.ndarray:
-    """Curves freed of noise of ``z`` standard units."""
+    """Curves (L, N) freed of noise of ``z`` standard units, a scalar or (N,)."""
     if z.ndim == 0:
         return curves * np.exp(-log_factor(dof, float(z)))[:, np.newaxis]
+    return curves * np.exp(-_log_factors(dof, np.broadcast_to(z, (dof.size, z.size)).T).T)
+
+
+def _log_factors(dof: np.ndarray, z: np.ndarray) -> np.ndarray:
+    """`log_factor` for many draws (D, L), from a table: the chi-square quantile is slow."""
     grid = np.linspace(-6.0, 6.0, 121)
-    moved = np.empty_like(curves)
-    factors: dict[float, np.ndarray] = {}
-    for row, degrees in enumerate(dof):
-        table = factors.setdefault(float(degrees), np.exp(-log_factor(degrees, grid)))
-        moved[row] = curves[row] * np.interp(z, grid, table)
-    return moved
+    tables: dict[float, np.ndarray] = {}
+    found = np.empty(z.shape)
+    for lead, degrees in enumerate(dof):
+        table = tables.setdefault(float(degrees), log_factor(degrees, grid))
+        found[:, lead] = np.interp(z[:, lead], grid, table)
+    return found
 
 
 def share_bounds(

@@ -13,8 +13,6 @@ from ensemble_horizon.errors import InputError
 from ensemble_horizon.runs.catalogue import Catalogue
 from ensemble_horizon.runs.reading import RawBlock, raw_blocks
 
-Progress = Callable[[int, int], None]
-
 
 @dataclass(frozen=True)
 class Content:
@@ -70,11 +68,11 @@ def read_content(
         for first in range(0, held.shape[1], step):
             where = np.zeros_like(held)
             where[:, first : first + step] = held[:, first : first + step]
-            for part in (where,) if where.any() else ():
-                _read_part(catalogue, content, int(number), part, position, bounds, plausible,
-                           numbers)  # fmt: skip
-                if progress is not None:
-                    progress(int(part.sum()))
+            if not where.any():
+                continue
+            _read_part(catalogue, content, int(number), where, position, bounds, plausible, numbers)
+            if progress is not None:
+                progress(int(where.sum()))
     return content
 
 

@@ -116,37 +116,43 @@ def _lazy(catalogue: Catalogue, name: str, budget: int) -> da.Array:
         for length, step in zip((*shape, *catalogue.grid.shape), steps, strict=True)
     )
     made: da.Array = da.map_blocks(  # type: ignore[no-untyped-call]
-        _load,
+        _Loader(catalogue, name, chunks),
         chunks=chunks,
         dtype=dtype,
         meta=np.empty((0,) * len(chunks), dtype=dtype),
         name=f"runs-{name}-{catalogue.token}",
-        catalogue=catalogue,
-        variable=name,
-        spans=chunks,
     )
     return made
+
+
+class _Loader:
+    """Reads one chunk: one start, a block of leads, all members, a window of the grid.
+
+    A plain class and not a function with keywords: dask would search a catalogue among the
+    keywords for arrays, field by field.
+    """
+
+    def __init__(
+        self, catalogue: Catalogue, variable: str, spans: tuple[tuple[int, ...], ...]
+    ) -> None:
+        self.catalogue = catalogue
+        self.variable = variable
+        self.spans = spans
+
+    def __call__(self, block_id: tuple[int, ...]) -> np.ndarray:
+        parts = [
+            slice(sum(sizes[:index]), sum(sizes[: index + 1]))
+            for sizes, index in zip(self.spans, block_id, strict=True)
+        ]
+        values = self.catalogue.read(
+            self.variable, block_id[0], parts[1], parts[2], tuple(parts[3:])
+        )
+        return values.swapaxes(0, 1)[np.newaxis]
 
 
 def _split(length: int, step: int) -> tuple[int, ...]:
     whole, rest = divmod(length, max(1, step))
     return (step,) * whole + ((rest,) if rest or not whole else ())
-
-
-def _load(
-    *,
-    catalogue: Catalogue,
-    variable: str,
-    spans: tuple[tuple[int, ...], ...],
-    block_id: tuple[int, ...],
-) -> np.ndarray:
-    """Read one chunk: one start, a block of leads, all members, a window of the grid."""
-    parts = [
-        slice(sum(sizes[:index]), sum(sizes[: index + 1]))
-        for sizes, index in zip(spans, block_id, strict=True)
-    ]
-    values = catalogue.read(variable, block_id[0], parts[1], parts[2], tuple(parts[3:]))
-    return values.swapaxes(0, 1)[np.newaxis]
 
 
 def _kept(attributes: Mapping[str, object]) -> dict[str, object]:

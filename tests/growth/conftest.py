@@ -34,7 +34,7 @@ def lead() -> np.ndarray:
     return LEAD.copy()
 
 
-@pytest.fixture
+@pytest.fixture(scope="session")
 def draw() -> Callable[..., np.ndarray]:
     return drawn_parameters
 

@@ -197,10 +197,10 @@ def test_wrong_arguments_are_named(noisy: Noisy) -> None:
     scale=st.sampled_from(["linear", "log"]),
     seed=st.integers(0, 10_000),
 )
-def test_units_of_the_curve_do_not_matter(factor: float, law: str, scale: str, seed: int) -> None:
-    from conftest import drawn_parameters
-
-    clean = LAWS[law].value(drawn_parameters(law, 3, seed), LEAD)
+def test_units_of_the_curve_do_not_matter(
+    draw: Draw, factor: float, law: str, scale: str, seed: int
+) -> None:
+    clean = LAWS[law].value(draw(law, 3, seed), LEAD)
     curves = clean * np.exp(0.03 * np.random.default_rng(seed).standard_normal(clean.shape))
     one = fit_growth(labelled(curves, "site"), law=law, scale=scale)
     other = fit_growth(labelled(factor * curves, "site"), law=law, scale=scale)
@@ -217,10 +217,8 @@ def test_units_of_the_curve_do_not_matter(factor: float, law: str, scale: str, s
     law=st.sampled_from(["exponential", "logistic", "logistic-source"]),
     seed=st.integers(0, 10_000),
 )
-def test_units_of_lead_scale_the_rate(stretch: float, law: str, seed: int) -> None:
-    from conftest import drawn_parameters
-
-    clean = LAWS[law].value(drawn_parameters(law, 3, seed), LEAD)
+def test_units_of_lead_scale_the_rate(draw: Draw, stretch: float, law: str, seed: int) -> None:
+    clean = LAWS[law].value(draw(law, 3, seed), LEAD)
     curves = clean * np.exp(0.03 * np.random.default_rng(seed).standard_normal(clean.shape))
     one = fit_growth(labelled(curves, "site"), law=law)
     other = fit_growth(labelled(curves, "site").assign_coords(lead=stretch * LEAD), law=law)

@@ -53,20 +53,21 @@ def test_truncation_itself_conserves(waves, modes):
 def test_time_step_conserves_to_its_order(waves, modes):
     # Phillips 1954: without forcing and friction both are constant. Runge-Kutta of order four
     # loses them at order four or better (five for a pure oscillation).
+    # Taken over several states, for the drift of a single one can pass through zero.
     channel = free_channel(waves, modes)
-    state = lively(channel)
+    states = np.stack([lively(channel, seed) for seed in range(8)])
     drift = []
-    for steps in (320, 640, 1280):
-        end = toys.integrate(channel, state, steps, 10.0 / steps, every=steps).states[-1]
+    for steps in (48, 96, 192):
+        end = toys.integrate(channel, states, steps, 3.0 / steps, every=steps).states[-1]
         drift.append(
             [
-                abs(invariant(end) / invariant(state) - 1)
+                np.sqrt(np.mean((invariant(end) / invariant(states) - 1) ** 2))
                 for invariant in (channel.energy, channel.potential_enstrophy)
             ]
         )
     orders = np.log2(np.array(drift[:-1]) / np.array(drift[1:]))
-    assert np.all(orders[-1] > 3.7)
-    assert np.all(np.array(drift[-1]) < 1e-10)
+    assert np.all(orders > 3.7)
+    assert np.all(np.array(drift[-1]) < 1e-7)
 
 
 def test_energy_and_enstrophy_are_what_they_say():

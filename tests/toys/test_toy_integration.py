@@ -29,7 +29,7 @@ def test_stops_at_the_first_state_that_is_not_finite():
     # A step far beyond the stability limit of Runge-Kutta: the fourth member runs off first.
     lorenz = toys.system("lorenz-63")
     initial = np.tile(lorenz.default_state(), (5, 1))
-    initial[3] = 1e6
+    initial[3] = 100.0
     with pytest.raises(ArgumentError) as caught:
         toys.integrate(lorenz, initial, 100, dt=0.25)
     assert caught.value.culprit == "integrate(lorenz-63)"
@@ -37,8 +37,8 @@ def test_stops_at_the_first_state_that_is_not_finite():
     step = int(caught.value.found.split("(step ")[1].rstrip(")"))
     assert f"at time {step * 0.25:g} " in caught.value.found
     assert "shorter than dt=0.25" in caught.value.remedy
-    before = toys.integrate(lorenz, initial, step - 1, dt=0.25) if step > 1 else None
-    assert before is None or np.all(np.isfinite(before.states))
+    assert step > 1
+    assert np.all(np.isfinite(toys.integrate(lorenz, initial, step - 1, dt=0.25).states))
 
 
 @pytest.mark.parametrize(
