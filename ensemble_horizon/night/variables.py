@@ -166,7 +166,7 @@ def _climatology(
         item.climatology_fraction for item in settings.variables[name].criteria
     ):
         return None
-    source = table.names.get(name, name)
+    source = table.names.get(name, settings.variables[name].source or name)
     field = open_field(settings.path(table.file), source, catalogue.grid)
     own = str(field.attrs.get("units", units))
     scale = abs(difference_scale(own, units, f"climatology {source!r} in {table.file}"))
