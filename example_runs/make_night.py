@@ -26,8 +26,11 @@ NIGHT = "night_20310214T00"
 CLIMATOLOGY = "climatology.nc"
 MEMBERS = 20
 LEAD_HOURS = 6 * np.arange(41)
+# The channel is northern, the files southern. Mirrored at the equator (latitude, Coriolis parameter,
+# streamfunction and northward wind change sign) its equations stay the same.
 LATITUDE: Array = np.round(28.0 + 1.35 * np.arange(24), 2)
-LONGITUDE: Array = -179.0 + 1.5 * np.arange(36.0)
+STORED_LATITUDE: Array = -LATITUDE
+LONGITUDE: Array = -165.0 + 1.5 * np.arange(36.0)
 
 CHANNEL = toys.TwoLayerChannel(
     zonal_waves=12,
@@ -80,12 +83,12 @@ ATTRIBUTES = {
 
 
 def fields(states: Array, longitude: Array = LONGITUDE) -> dict[str, Array]:
-    """Return wind and pressure (..., latitude, longitude) of states (..., N)."""
+    """Return wind and pressure (..., latitude, longitude) of states (..., N), mirrored."""
     found = CHANNEL.evaluate(states, LATITUDE, longitude - LONGITUDE[0])
     pressure = AIR_DENSITY * CHANNEL.coriolis * found["streamfunction_lower"]
     return {
         "eastward_wind": WIND_FACTOR * found["eastward_wind_lower"],
-        "northward_wind": WIND_FACTOR * found["northward_wind_lower"],
+        "northward_wind": -WIND_FACTOR * found["northward_wind_lower"],
         "air_pressure_at_sea_level": MEAN_PRESSURE + pressure,
     }
 
@@ -241,7 +244,7 @@ def _global_attributes(title: str) -> dict[str, str]:
 
 def _write_grid(file: netCDF4.Dataset) -> None:
     for name, values, units in (
-        ("latitude", LATITUDE, "degrees_north"),
+        ("latitude", STORED_LATITUDE, "degrees_north"),
         ("longitude", LONGITUDE, "degrees_east"),
     ):
         file.createDimension(name, values.size)

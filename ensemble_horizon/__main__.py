@@ -1,0 +1,6 @@
+"""``python -m ensemble_horizon``: the command line."""
+
+from ensemble_horizon.cli import main
+
+if __name__ == "__main__":
+    main()
