@@ -26,8 +26,8 @@ NIGHT = "night_20310214T00"
 CLIMATOLOGY = "climatology.nc"
 MEMBERS = 20
 LEAD_HOURS = 6 * np.arange(41)
-# The channel is northern, the files southern. Mirrored at the equator (latitude, Coriolis parameter,
-# streamfunction and northward wind change sign) its equations stay the same.
+# The channel is northern, the files southern. The equations are the same in the mirror of the
+# equator: latitude, Coriolis parameter, streamfunction and northward wind change sign.
 LATITUDE: Array = np.round(28.0 + 1.35 * np.arange(24), 2)
 STORED_LATITUDE: Array = -LATITUDE
 LONGITUDE: Array = -165.0 + 1.5 * np.arange(36.0)

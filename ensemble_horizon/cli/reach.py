@@ -40,6 +40,8 @@ def command(
     """
     settings = read_settings(config)
     answers = reach_of_products(settings, variable, place, tolerances, (1.0, *factors))
+    if quiet:
+        return
     screen = console()
     for answer in answers:
         screen.print(_bought(answer), _doubling(answer))

@@ -41,7 +41,7 @@ def read_settings(path: str | Path) -> Settings:
     """
     source = Path(path)
     try:
-        text = source.read_text(encoding="utf-8")
+        text = source.read_text(encoding="utf-8-sig")
     except (OSError, UnicodeDecodeError) as error:
         raise SettingsError(
             str(path),
@@ -74,7 +74,7 @@ def settings_from(
     Traceback (most recent call last):
     ...
     ensemble_horizon.errors.SettingsError: settings: expected settings without mistakes; found 1:
-      variables: at least 1 item after validation, not 0. Next: correct it and run again.
+      variables: at least 1 item, not 0. Next: correct it and run again.
     """
     hidden = {key: "unknown key" for key in ("base", "text") if key in table}
     try:
@@ -140,6 +140,7 @@ def _mistake(item: Any) -> str:
     message = item["msg"].removeprefix("Value error, ")
     for phrase in ("Dictionary should have ", "Input should be ", "Tuple should have "):
         message = message.removeprefix(phrase)
+    message = message.replace(" after validation", "")
     found = item["input"]
     if isinstance(found, str | int | float | bool):
         message += f"; found {found!r}"

@@ -2,7 +2,6 @@
 
 import pytest
 
-ONE = "[variables.t2]\ncriteria = [{tolerance = 1.5}]"
 
 
 def test_every_mistake_at_once_with_its_key_and_the_nearest(night, refusal):

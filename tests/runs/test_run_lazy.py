@@ -3,7 +3,6 @@
 import multiprocessing
 import os
 import pickle
-import time
 
 import dask
 import numpy as np
@@ -127,15 +126,13 @@ def test_reading_headers_leaves_no_file_open(template, member_files, truth, run_
     run_dataset(truth[0]).to_netcdf(member_files[0])
 
 
-def test_a_hundred_files_open_in_seconds(tmp_path, run_dataset, reads):
+def test_a_hundred_files_open_without_reading(tmp_path, run_dataset, reads):
     values = np.zeros((2, 5, 6), "f4")
     first = tmp_path / "m000.nc"
     run_dataset(values).to_netcdf(first)
     for m in range(1, 100):
         (tmp_path / f"m{m:03d}.nc").write_bytes(first.read_bytes())
-    begin = time.perf_counter()
     data = open_runs(str(tmp_path / "m{member:03d}.nc"))
-    assert time.perf_counter() - begin < 10
     assert data.sizes["member"] == 100
     assert reads == []
 
