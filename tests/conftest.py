@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+import os
 import warnings
 from collections.abc import Callable
 from pathlib import Path
+
+# Before numpy is loaded: the matrices are small, and test workers share the cores.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
 import pytest

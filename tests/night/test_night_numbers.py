@@ -39,9 +39,7 @@ def test_spread_of_domain_region_and_site_by_hand(night):
     inside = np.where(rows[:, None] & columns, WEIGHTS, 0.0)
     np.testing.assert_allclose(spread["box"], over(values, inside), rtol=1e-6)
     np.testing.assert_allclose(spread["all"], over(values, WEIGHTS), rtol=1e-6)
-    np.testing.assert_allclose(
-        spread["tower"], values[:, :, 2, 3].std(axis=0, ddof=1), rtol=1e-6
-    )
+    np.testing.assert_allclose(spread["tower"], values[:, :, 2, 3].std(axis=0, ddof=1), rtol=1e-6)
     np.testing.assert_allclose(data["lead"].values, 12.0 * np.arange(12))
 
 

@@ -3,7 +3,6 @@
 import pytest
 
 
-
 def test_every_mistake_at_once_with_its_key_and_the_nearest(night, refusal):
     night.write()
     night.config.write_text(
@@ -52,9 +51,7 @@ def test_an_unknown_key_without_a_near_one_lists_the_known(night, refusal):
 
 
 def test_an_unknown_key_below_chance(night, refusal):
-    night.settings(
-        "[variables.t2]\ncriteria = [{chance = {beyond = 2.0, probabilty = 0.2}}]"
-    )
+    night.settings("[variables.t2]\ncriteria = [{chance = {beyond = 2.0, probabilty = 0.2}}]")
     refusal(
         night.estimate(), 2,
         "variables.t2.criteria[0].chance.probabilty: unknown key; did you mean 'probability'?",

@@ -6,10 +6,23 @@ import pytest
 STARTS = ("2031-02-14 00:00", "2031-02-15 00:00", "2031-02-16 12:00")
 FILES = "{start:%Y%m%d%H}/m{member:02d}.nc"
 WEIGHTS = np.cos(np.deg2rad(np.linspace(65.0, 40.0, 6)))[:, None] * np.ones(8)
-COLUMNS = (
-    "start,variable,place,criterion,threshold,threshold_units,horizon,low,high,horizon_units,"
-    "status,projected,doubling_time,law,members"
-).split(",")
+COLUMNS = [
+    "start",
+    "variable",
+    "place",
+    "criterion",
+    "threshold",
+    "threshold_units",
+    "horizon",
+    "low",
+    "high",
+    "horizon_units",
+    "status",
+    "projected",
+    "doubling_time",
+    "law",
+    "members",
+]
 
 
 @pytest.fixture

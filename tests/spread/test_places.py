@@ -18,7 +18,9 @@ def globe(step=10.0, north_first=False, west=0.0):
 
 def field(latitude, longitude, values):
     return xr.DataArray(
-        values, dims=("latitude", "longitude"), coords={"latitude": latitude, "longitude": longitude}
+        values,
+        dims=("latitude", "longitude"),
+        coords={"latitude": latitude, "longitude": longitude},
     )
 
 
