@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import click
 import numpy as np
+from rich.markup import escape
 from rich.table import Table
 
 from ensemble_horizon.cli.session import common_options, console
+from ensemble_horizon.errors import SettingsError
 from ensemble_horizon.night.reaching import Reach, reach_of_products
 from ensemble_horizon.products.wording import duration, number
 from ensemble_horizon.settings import read_settings
@@ -38,6 +40,15 @@ def command(
 
     Asks the laws that the last estimate with CONFIG fitted; run that first.
     """
+    for option, amounts in (("--tolerance", tolerances), ("--smaller", factors)):
+        for amount in amounts:
+            if not 0 < amount < np.inf:
+                raise SettingsError(
+                    option,
+                    expected="a finite number above zero",
+                    found=f"{amount:g}",
+                    remedy="correct it",
+                )
     settings = read_settings(config)
     answers = reach_of_products(settings, variable, place, tolerances, (1.0, *factors))
     if quiet:
@@ -54,12 +65,14 @@ def command(
 
 
 def _bought(answer: Reach) -> Table:
-    table = Table(
-        title=f"{answer.place}, {answer.variable}: {answer.law} law, "
-        f"initial error {number(answer.initial_error)} {answer.units}",
-        title_justify="left",
+    fitted = (
+        f"{answer.law} law, initial error {number(answer.initial_error)} {answer.units}"
+        if np.isfinite(answer.initial_error)
+        else "no law could be fitted"
     )
-    table.add_column(f"tolerance ({answer.units})", justify="right")
+    title = f"{answer.place}, {answer.variable}: {fitted}"
+    table = Table(title=escape(title), title_justify="left")
+    table.add_column(escape(f"tolerance ({answer.units})"), justify="right")
     for factor in answer.bought["error_factor"].values:
         as_it_is = factor == 1
         table.add_column("error as it is" if as_it_is else f"error / {factor:g}", justify="right")
@@ -88,7 +101,7 @@ def _lead(limit: float, gain: float, answer: Reach) -> str:
 def _doubling(answer: Reach) -> Table:
     table = Table(title="Doubling time by error size", title_justify="left")
     for size in answer.sizes:
-        table.add_column(f"{number(float(size))} {answer.units}", justify="right")
+        table.add_column(escape(f"{number(float(size))} {answer.units}"), justify="right")
     cells = [
         duration(float(time), answer.lead_units) if np.isfinite(time) else "never"
         for time in answer.doubling

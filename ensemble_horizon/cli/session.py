@@ -93,6 +93,7 @@ class Bars:
             self._tasks[stage] = self._bars.add_task(stage, total=total)
             self._bars.start()
         self._bars.update(self._tasks[stage], completed=done, total=total)
+        self._bars.refresh()
 
 
 @contextmanager
@@ -105,6 +106,7 @@ def progress(quiet: bool) -> Iterator[Bars]:
     bars = Progress(
         TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"),
         TimeRemainingColumn(), console=target, transient=True,
+        auto_refresh=False,  # no thread of its own: worker processes are copies of this one
     )  # fmt: skip
     try:
         yield Bars(bars)

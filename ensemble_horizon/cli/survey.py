@@ -38,7 +38,12 @@ def command(
     if not quiet:
         click.echo(report.text(), nl=False)
     if not report.usable:
-        raise SystemExit(InputError.exit_status)
+        raise InputError(
+            " ".join(target),
+            expected="usable runs",
+            found="; ".join(report.reasons[:1]) or report.summary(),
+            remedy="mend or leave out the files that the report names",
+        )
 
 
 def _survey(

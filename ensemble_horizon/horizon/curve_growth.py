@@ -5,13 +5,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import special, stats
+from scipy import special
 
 from ensemble_horizon.growth.law import Law
 from ensemble_horizon.growth.laws import LAWS
 from ensemble_horizon.growth.selection import select_law
 from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
-from ensemble_horizon.spread.sampling import LeadNoise
+from ensemble_horizon.spread.sampling import LeadNoise, chi_square_quantile
 
 LN2 = float(np.log(2.0))
 QUANTITIES = ("growth_rate", "initial_error", "saturation")
@@ -118,7 +118,7 @@ def _size_interval(
     bias = float(np.median(_log_bias(noise.dof / 2))) - float(_log_bias(np.array(half)))
     center = value * np.exp(max(bias, 0.0) * (1.0 if scale == "log" else 0.5))
     tail = float(special.ndtr(-quantile))
-    low, high = stats.chi2.ppf([tail, 1 - tail], 2 * half)
+    low, high = chi_square_quantile(np.array([tail, 1 - tail]), 2 * half)
     return center * float(np.sqrt(2 * half / high)), center * float(np.sqrt(2 * half / low))
 
 

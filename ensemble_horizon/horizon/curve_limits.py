@@ -63,7 +63,7 @@ def limits_of_curve(
 ) -> list[Limit]:
     """The horizon of a curve under each criterion, with its interval."""
     covariance = curve.noise.log_spread_covariance()
-    growing = bool(grows(lead, curve.spread[:, np.newaxis], covariance)[0])
+    growing = grows(lead, curve.spread[:, np.newaxis], covariance)
     levels = Levels(saturation=growth.values["saturation"], climatology=curve.climatology)
     found = []
     for criterion in criteria:
@@ -83,12 +83,12 @@ def _spread_limit(
     growth: Growth,
     criterion: Criterion,
     threshold: float,
-    growing: bool,
+    growing: np.ndarray,
     hold: float,
     confidence: float,
 ) -> Limit:
     column = curve.spread[:, np.newaxis]
-    time, flags = judge(lead, column, np.array([threshold]), hold, np.array([growing]))
+    time, flags = judge(lead, column, np.array([threshold]), hold, growing.__getitem__)
     status = Status(int(flags[0]))
     low = high = projected = float("nan")
     if status not in (Status.no_data, Status.no_growth):
@@ -110,13 +110,13 @@ def _chance_limit(
     lead: np.ndarray,
     curve: Curve,
     criterion: Chance,
-    growing: bool,
+    growing: np.ndarray,
     hold: float,
     confidence: float,
 ) -> Limit:
     shares = curve.shares[criterion.beyond][:, np.newaxis]
     threshold = np.array([criterion.probability])
-    time, flags = judge(lead, shares, threshold, hold, np.array([growing]))
+    time, flags = judge(lead, shares, threshold, hold, growing.__getitem__)
     status = Status(int(flags[0]))
     low = high = float("nan")
     if status not in (Status.no_data, Status.no_growth):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -106,7 +107,13 @@ def horizon(
     flat = values.reshape(lead.size, -1)
     threshold = np.broadcast_to(np.asarray(criterion.threshold(levels), float), (flat.shape[1],))
     noise = None if sampling is None else _noise(sampling)
-    growing = share_grows(lead, flat) if criterion.on_share else _growing(lead, flat, noise)
+
+    def growing(rows: np.ndarray) -> np.ndarray:
+        if criterion.on_share:
+            return share_grows(lead, flat[:, rows])
+        covariance = None if noise is None else noise.log_spread_covariance()
+        return grows(lead, flat[:, rows], covariance)
+
     time, status = judge(lead, flat, threshold, hold, growing)
     data: dict[str, np.ndarray] = {"horizon": time, "status": status, "threshold": threshold}
     if noise is not None:
@@ -126,16 +133,19 @@ def judge(
     curves: np.ndarray,
     threshold: np.ndarray,
     hold: float,
-    growing: np.ndarray,
+    growing: Callable[[np.ndarray], np.ndarray],
 ) -> tuple[np.ndarray, np.ndarray]:
     """Horizon (N,) and status (N,) of N curves (L, N): numpy kernel.
 
     The horizon is NaN unless the status is ``reached``. A curve needs two leads with a value, or
-    one at which the threshold is already exceeded; and a threshold.
+    one at which the threshold is already exceeded; and a threshold. ``growing`` tells of the
+    curves at given positions whether they grow; it is asked only of those that do not cross.
     """
     crossing = first_crossing(lead, curves, threshold, hold)
-    status = np.where(growing, Status.beyond_run, Status.no_growth).astype(np.int8)
-    status[np.isfinite(crossing.time)] = Status.reached
+    status = np.full(curves.shape[1], Status.reached, dtype=np.int8)
+    rest = np.flatnonzero(~np.isfinite(crossing.time) & ~crossing.at_start)
+    if rest.size:
+        status[rest] = np.where(growing(rest), Status.beyond_run, Status.no_growth)
     status[crossing.at_start] = Status.at_start
     missing = ((crossing.points < 2) & ~crossing.at_start) | ~np.isfinite(threshold)
     status[missing] = Status.no_data
@@ -152,10 +162,6 @@ def status_names(status: xr.DataArray) -> xr.DataArray:
     """
     names = np.array([item.name for item in Status])
     return status.copy(data=names[status.values.astype(int)]).drop_attrs()
-
-
-def _growing(lead: np.ndarray, curves: np.ndarray, noise: LeadNoise | None) -> np.ndarray:
-    return grows(lead, curves, None if noise is None else noise.log_spread_covariance())
 
 
 def _bounds(

@@ -20,7 +20,7 @@ import numpy as np
 from scipy import special
 
 from ensemble_horizon.horizon.crossing import Crossing, first_crossing
-from ensemble_horizon.spread.sampling import LeadNoise
+from ensemble_horizon.spread.sampling import LeadNoise, chi_square_quantile
 
 _DRAWS = 2000
 _TABLE_DRAWS = 600
@@ -43,8 +43,7 @@ def log_factor(dof: np.ndarray, z: np.ndarray | float) -> np.ndarray:
 
     ``ln(chi2(Phi(z)) / dof) / 2`` with the chi-square quantile at ``dof`` degrees of freedom.
     """
-    # gammaincinv is the chi-square quantile without the overhead of scipy.stats.
-    return np.asarray(0.5 * np.log(2 * special.gammaincinv(dof / 2, special.ndtr(z)) / dof))
+    return np.asarray(0.5 * np.log(chi_square_quantile(special.ndtr(z), dof) / dof))
 
 
 def plain_moves(confidence: float, inflation: float = 1.0) -> Moves:

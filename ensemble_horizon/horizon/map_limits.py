@@ -62,18 +62,18 @@ class PointBatch:
     shares : mapping of distance to (L, N)
     climatology : (N,) or None
     block : (N,) int, position in ``noises``
+    noise : LeadNoise of the whole map
     noises : LeadNoise of each block of the map
-    noise : LeadNoise of the whole map, or None without intervals
     table : MoveTable that goes with it, or None without intervals
     """
 
     lead: np.ndarray
     variance: np.ndarray
+    noise: LeadNoise
     shares: Mapping[float, np.ndarray] = field(default_factory=dict)
     climatology: np.ndarray | None = None
     block: np.ndarray = field(default_factory=lambda: np.empty(0, dtype=int))
     noises: tuple[LeadNoise, ...] = ()
-    noise: LeadNoise | None = None
     table: MoveTable | None = None
 
 
@@ -93,13 +93,11 @@ def limits_of_points(batch: PointBatch, options: MapOptions) -> dict[str, np.nda
     names = None if options.law == "auto" else [options.law]
     selection = select_law(batch.lead, spread.T, names, scale=options.scale)
     result = _growth_values(selection)
-    covariance = None if batch.noise is None else batch.noise.log_spread_covariance()
-    growing = grows(batch.lead, spread, covariance)
     if options.confidence is not None:
         result |= _rate_intervals(batch, spread, selection, options)
     widening = _widening(batch, spread, selection, options)
     rows = [
-        _limit(batch, options, criterion, spread, growing, result, selection, widening)
+        _limit(batch, options, criterion, spread, result, selection, widening)
         for criterion in options.criteria
     ]
     result.pop("exact_saturation")
@@ -129,7 +127,6 @@ def _limit(
     options: MapOptions,
     criterion: Criterion,
     spread: np.ndarray,
-    growing: np.ndarray,
     growth: dict[str, np.ndarray],
     selection: Selection,
     widening: np.ndarray | None,
@@ -140,6 +137,11 @@ def _limit(
     curves = spread
     if isinstance(criterion, Chance):
         curves = batch.shares[criterion.beyond].astype(np.float64)
+    covariance = batch.noise.log_spread_covariance()
+
+    def growing(rows: np.ndarray) -> np.ndarray:
+        return grows(batch.lead, spread[:, rows], covariance)
+
     time, status = judge(batch.lead, curves, threshold, options.hold, growing)
     row = {
         "horizon": time.astype(np.float32),
@@ -154,7 +156,6 @@ def _limit(
             options.confidence, options.hold,
         )  # fmt: skip
     else:
-        assert batch.noise is not None
         moves = _moves(batch, threshold, time, selection)
         if criterion.kind == "saturation_fraction" and widening is not None:
             moves = Moves(moves.up * widening, moves.down * widening)
@@ -171,7 +172,6 @@ def _moves(
 ) -> Moves:
     """Moves by the steepness of the fitted law where it reaches the threshold."""
     assert batch.table is not None
-    assert batch.noise is not None
     lead = batch.lead
     crossing = np.where(np.isfinite(time), time, lead[-1])
     before = np.clip(np.searchsorted(lead, crossing) - 1, 0, lead.size - 2)
@@ -189,7 +189,7 @@ def _widening(
 ) -> np.ndarray | None:
     """Factor by which moves widen because the saturation level is itself estimated, or None."""
     wanted = any(item.kind == "saturation_fraction" for item in options.criteria)
-    if options.confidence is None or not wanted or batch.noise is None:
+    if options.confidence is None or not wanted:
         return None
     error = _errors("saturation", batch, spread, selection, options)
     level = np.full(error.size, np.nan)
@@ -203,7 +203,6 @@ def _rate_intervals(
     batch: PointBatch, spread: np.ndarray, selection: Selection, options: MapOptions
 ) -> dict[str, np.ndarray]:
     assert options.confidence is not None
-    assert batch.noise is not None
     rate = np.full(selection.chosen.size, np.nan)
     for law, rows, parameters in chosen_groups(selection):
         rate[rows] = law.growth_rate(parameters)

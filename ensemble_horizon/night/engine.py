@@ -9,11 +9,16 @@ from __future__ import annotations
 
 import multiprocessing
 import os
+import sys
+import threading
+import warnings
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from types import TracebackType
 from typing import Any, TypeVar
+
+from threadpoolctl import threadpool_limits
 
 from ensemble_horizon.errors import EnsembleHorizonError
 
@@ -21,7 +26,6 @@ T = TypeVar("T")
 R = TypeVar("R")
 
 _PRELOAD = ["ensemble_horizon.night.reading", "ensemble_horizon.horizon.map_limits"]
-_THREAD_KEYS = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 
 _shared: Any = None
 
@@ -55,6 +59,8 @@ class Engine:
         self._pool: ProcessPoolExecutor | None = None
 
     def __enter__(self) -> Engine:
+        # One linear-algebra thread a process: matrices are small, and workers share the cores.
+        self._limits = threadpool_limits(limits=1)
         _install(self._common)
         if self.workers > 1:
             self._pool = _start_pool(self.workers, self._common)
@@ -67,6 +73,7 @@ class Engine:
         trace: TracebackType | None,
     ) -> None:
         _install(None)
+        self._limits.restore_original_limits()
         if self._pool is not None:
             self._pool.shutdown(wait=kind is None, cancel_futures=True)
             self._pool = None
@@ -120,22 +127,23 @@ def _install(common: Any) -> None:
 
 
 def _start_pool(workers: int, common: Any) -> ProcessPoolExecutor:
-    methods = multiprocessing.get_all_start_methods()
-    context = multiprocessing.get_context("forkserver" if "forkserver" in methods else "spawn")
-    if "forkserver" in methods:
+    context = multiprocessing.get_context(_start_method())
+    if context.get_start_method() == "forkserver":
         context.set_forkserver_preload(_PRELOAD)
-    saved = {key: os.environ.get(key) for key in _THREAD_KEYS}
-    try:
-        # One linear-algebra thread a worker: the workers are the parallelism.
-        os.environ.update(dict.fromkeys(_THREAD_KEYS, "1"))
-        pool = ProcessPoolExecutor(
-            workers, mp_context=context, initializer=_install, initargs=(common,)
-        )
-        pool.submit(os.getpid)  # starts the server now, while this process goes on
-    finally:
-        for key, value in saved.items():
-            if value is None:
-                os.environ.pop(key, None)
-            else:
-                os.environ[key] = value
+    pool = ProcessPoolExecutor(
+        workers, mp_context=context, initializer=_start_worker, initargs=(common,)
+    )
+    with warnings.catch_warnings():
+        # Python cannot tell idle threads of the linear-algebra library from threads that hold
+        # locks; its own threads have been ruled out by the choice of the start method.
+        warnings.simplefilter("ignore", DeprecationWarning)
+        pool.submit(os.getpid)  # starts the workers now, before there are other threads
     return pool
+
+
+def _start_method() -> str:
+    """Copies of this process where that is safe, as they need not load anything anew."""
+    methods = multiprocessing.get_all_start_methods()
+    if "fork" in methods and sys.platform == "linux" and threading.active_count() == 1:
+        return "fork"
+    return "forkserver" if "forkserver" in methods else "spawn"

@@ -134,14 +134,14 @@ class _Job:
         members: list[int] = []
         maps: list[dict[str, np.ndarray]] = []
         map_confidence = settings.growth.confidence if settings.products.map_intervals else None
-        pooled = PooledFields(self.layout, map_confidence is not None)
+        pooled = PooledFields(self.layout)
         for start in range(starts):
             summary = self._read(engine, number, variable, start)
             lines.append(curves_of_start(summary, variable, self.places))
             members.append(members_of_start(summary))
             if self.mode == "none":
                 continue
-            noise = noise_of_start(summary, self.layout) if map_confidence else None
+            noise = noise_of_start(summary, self.layout)
             if self.mode == "pooled":
                 pooled.add(summary, noise)
             else:
@@ -149,7 +149,7 @@ class _Job:
                 fields = Fields(summary.variance, summary.share, noise)
                 maps.append(self._map(engine, fields, variable, members[-1], map_confidence))
         if self.mode == "pooled":
-            fields = pooled.fields(map_confidence)
+            fields = pooled.fields(settings.growth.confidence)
             maps.append(self._map(engine, fields, variable, sum(members), map_confidence))
         return self._result(variable, lines, members, maps)
 

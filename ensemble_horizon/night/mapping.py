@@ -42,12 +42,12 @@ class FieldNoise:
 class Fields:
     """Spread variance and shares at every point, in the units of the files.
 
-    variance : (L, P); share : (A, L, P) or None; noise : FieldNoise or None
+    variance : (L, P); share : (A, L, P) or None; noise : FieldNoise
     """
 
     variance: np.ndarray
     share: np.ndarray | None
-    noise: FieldNoise | None
+    noise: FieldNoise
 
 
 def noise_of_start(summary: Summary, layout: SampleLayout) -> FieldNoise:
@@ -63,16 +63,15 @@ def noise_of_start(summary: Summary, layout: SampleLayout) -> FieldNoise:
 class PooledFields:
     """Fields averaged over starts as they come in; memory does not grow with the fields."""
 
-    def __init__(self, layout: SampleLayout, intervals: bool) -> None:
+    def __init__(self, layout: SampleLayout) -> None:
         self._layout = layout
-        self._intervals = intervals
         self._total: np.ndarray | None = None
         self._share: np.ndarray | None = None
         self._count: np.ndarray | None = None
         self._samples: list[np.ndarray] = []
         self._noises: list[FieldNoise] = []
 
-    def add(self, summary: Summary, noise: FieldNoise | None) -> None:
+    def add(self, summary: Summary, noise: FieldNoise) -> None:
         """Take in one start."""
         assert summary.variance is not None
         if self._total is None:
@@ -85,23 +84,19 @@ class PooledFields:
         self._count += known
         if self._share is not None and summary.share is not None:
             self._share += np.where(known, summary.share, 0)
-        if self._intervals and noise is not None:
-            leads, members, points = summary.sample_values.shape
-            flat = summary.sample_values.transpose(1, 0, 2).reshape(members, -1)
-            self._samples.append(member_variance(flat)[0].reshape(leads, points))
-            self._noises.append(noise)
+        leads, members, points = summary.sample_values.shape
+        flat = summary.sample_values.transpose(1, 0, 2).reshape(members, -1)
+        self._samples.append(member_variance(flat)[0].reshape(leads, points))
+        self._noises.append(noise)
 
-    def fields(self, confidence: float | None) -> Fields:
+    def fields(self, confidence: float) -> Fields:
         """What all starts together say."""
         assert self._total is not None
         assert self._count is not None
         with np.errstate(invalid="ignore", divide="ignore"):
             variance = self._total / self._count
             share = None if self._share is None else self._share / self._count
-        noise = None
-        if confidence is not None and self._samples:
-            noise = self._noise(confidence)
-        return Fields(variance, share, noise)
+        return Fields(variance, share, self._noise(confidence))
 
     def _noise(self, confidence: float) -> FieldNoise:
         samples = np.stack(self._samples)
@@ -129,7 +124,7 @@ def map_fields(
     """Fits and horizons at every point: (P,) or (C, P) arrays by name."""
     size = fields.variance.shape[1]
     table = None
-    if options.confidence is not None and fields.noise is not None:
+    if options.confidence is not None:
         table = move_table(lead, fields.noise.whole, options.confidence, hold=options.hold)
     parts = split_points(size, max(engine.workers, -(-size // _BATCH)))
     tasks = [(_batch(lead, fields, variable, layout, part, table), options) for part in parts]
@@ -150,7 +145,6 @@ def _batch(
     part: slice,
     table: MoveTable | None,
 ) -> PointBatch:
-    noise = fields.noise
     shares = {}
     if fields.share is not None:
         shares = {
@@ -164,8 +158,8 @@ def _batch(
         shares=shares,
         climatology=climatology,
         block=layout.block_of_point[part],
-        noises=() if noise is None else noise.blocks,
-        noise=None if noise is None else noise.whole,
+        noises=fields.noise.blocks,
+        noise=fields.noise.whole,
         table=table,
     )
 

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from typing import Any
 
-import dask.array as da
 import numpy as np
 import xarray as xr
 
@@ -106,7 +106,7 @@ def to_dataset(catalogue: Catalogue, budget: int = BLOCK_BYTES) -> xr.Dataset:
     return xr.Dataset(data, coords=coords, attrs=dict(catalogue.attrs))
 
 
-def _lazy(catalogue: Catalogue, name: str, budget: int) -> da.Array:
+def _lazy(catalogue: Catalogue, name: str, budget: int) -> Any:
     block, window = catalogue.natural_block(name, budget)
     dtype = catalogue.dtype(name)
     shape = (len(catalogue.starts), catalogue.leads.size, len(catalogue.members))
@@ -115,14 +115,16 @@ def _lazy(catalogue: Catalogue, name: str, budget: int) -> da.Array:
         _split(length, step)
         for length, step in zip((*shape, *catalogue.grid.shape), steps, strict=True)
     )
-    made: da.Array = da.map_blocks(  # type: ignore[no-untyped-call]
+    # Half a second to load, and the main job reads through the catalogue instead.
+    import dask.array as da  # noqa: PLC0415
+
+    return da.map_blocks(  # type: ignore[no-untyped-call]
         _Loader(catalogue, name, chunks),
         chunks=chunks,
         dtype=dtype,
         meta=np.empty((0,) * len(chunks), dtype=dtype),
         name=f"runs-{name}-{catalogue.token}",
     )
-    return made
 
 
 class _Loader:

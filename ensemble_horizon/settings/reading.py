@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import copy
 import difflib
 import tomllib
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -42,12 +44,19 @@ def read_settings(path: str | Path) -> Settings:
     source = Path(path)
     try:
         text = source.read_text(encoding="utf-8-sig")
-    except (OSError, UnicodeDecodeError) as error:
+    except OSError as error:
         raise SettingsError(
             str(path),
             expected="a readable settings file",
-            found=getattr(error, "strerror", None) or str(error),
+            found=error.strerror or str(error),
             remedy="check the path; a sample stands in configs/",
+        ) from error
+    except UnicodeDecodeError as error:
+        raise SettingsError(
+            str(path),
+            expected="a TOML settings file in UTF-8",
+            found=f"a byte that is no text at position {error.start + 1}",
+            remedy="check the path, or save the file as UTF-8",
         ) from error
     try:
         table = tomllib.loads(text)
@@ -76,23 +85,23 @@ def settings_from(
     ensemble_horizon.errors.SettingsError: settings: expected settings without mistakes; found 1:
       variables: at least 1 item, not 0. Next: correct it and run again.
     """
-    hidden = {key: "unknown key" for key in ("base", "text") if key in table}
+    own = {"base": base or Path(), "text": text}
+    hidden = [key for key in own if key in table]
+    given = {key: value for key, value in table.items() if key not in own}
+    mistakes: list[str] = []
     try:
-        settings = Settings.model_validate(
-            {
-                **{k: v for k, v in table.items() if k not in hidden},
-                "base": base or Path(),
-                "text": text,
-            }
-        )
-        mistakes: list[str] = []
+        settings = Settings.model_validate({**given, **own})
     except ValidationError as error:
-        mistakes = [_mistake(item) for item in error.errors(include_url=False)]
-    mistakes += [f"{key}: {what}" for key, what in hidden.items()]
-    if not mistakes:
+        errors = error.errors(include_url=False)
+        mistakes += [_mistake(item) for item in errors]
+        with suppress(ValidationError):
+            mistakes += _cross_checks(Settings.model_validate(_sound_part(given, errors)))
+    else:
         mistakes += _cross_checks(settings)
+    mistakes += [f"{key}: unknown key" for key in hidden]
+    mistakes = list(dict.fromkeys(mistakes))
     if mistakes:
-        listing = "\n  ".join(dict.fromkeys(mistakes))
+        listing = "\n  ".join(mistakes)
         raise SettingsError(
             name,
             expected="settings without mistakes",
@@ -102,6 +111,37 @@ def settings_from(
             else "correct them and run again",
         )
     return settings
+
+
+def _sound_part(table: dict[str, Any], errors: list[Any]) -> dict[str, Any]:
+    """The settings without what is at fault, so that the rest can be held against itself."""
+    sound = copy.deepcopy(table)
+    for item in errors:
+        loc = item["loc"]
+        if loc[0] == "variables" and loc[2:3] == ("criteria",):
+            _stand_in(sound["variables"].get(loc[1], {}), loc[3:4])
+            continue
+        depth = 3 if loc[0] == "variables" else 2
+        *above, last = loc if item["type"] == "extra_forbidden" else loc[:depth]
+        node: Any = sound
+        for part in above:
+            node = node.get(part, {}) if isinstance(node, dict) else {}
+        if isinstance(node, dict):
+            node.pop(last, None)
+    for key, field, value in (("runs", "files", ""), ("products", "folder", "")):
+        sound.setdefault(key, {}).setdefault(field, value)
+    if not sound.get("variables"):
+        sound["variables"] = {"": {"criteria": [{"tolerance": 1.0}]}}
+    return sound
+
+
+def _stand_in(variable: dict[str, Any], position: tuple[int, ...]) -> None:
+    """Put a sound criterion where one is at fault; the others keep their numbers."""
+    criteria = variable.get("criteria")
+    if position and isinstance(criteria, list):
+        criteria[position[0]] = {"name": f"\0{position[0]}", "tolerance": 1.0}
+    else:
+        variable["criteria"] = [{"tolerance": 1.0}]
 
 
 def _cross_checks(settings: Settings) -> list[str]:
@@ -116,15 +156,21 @@ def _cross_checks(settings: Settings) -> list[str]:
             except EnsembleHorizonError as error:
                 found.append(f"{kind}.{name}: expected {error.expected}, found {error.found}")
     for name, variable in settings.variables.items():
+        labels: set[str] = set()
         for number, item in enumerate(variable.criteria):
             key = f"variables.{name}.criteria[{number}]"
             if item.climatology_fraction is not None and settings.climatology is None:
                 found.append(f"{key}.climatology_fraction: needs a [climatology] file")
             if variable.units is not None or not has_text(item):
                 try:
-                    criterion_of(item, variable.units or "1", key)
+                    criterion = criterion_of(item, variable.units or "1", key)
                 except EnsembleHorizonError as error:
                     found.append(f"{error.culprit}: expected {error.expected}, found {error.found}")
+                    continue
+                label = item.name or criterion.label
+                if label in labels:
+                    found.append(f"{key}.name: a second {label!r}; every criterion has its own")
+                labels.add(label)
     return found
 
 

@@ -49,9 +49,14 @@ class VariableTable(Table):
     def _one_source(self) -> VariableTable:
         if self.source is not None and self.speed is not None:
             raise ValueError("either source or speed, not both")
-        if self.plausible is not None and self.plausible[0] >= self.plausible[1]:
-            raise ValueError("plausible = [lowest, highest] with lowest below highest")
         return self
+
+    @field_validator("plausible")
+    @classmethod
+    def _ascending(cls, value: tuple[float, float] | None) -> tuple[float, float] | None:
+        if value is not None and not value[0] < value[1]:
+            raise ValueError("[lowest, highest] with lowest below highest")
+        return value
 
 
 class RegionTable(Table):

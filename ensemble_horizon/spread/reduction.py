@@ -11,7 +11,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from ensemble_horizon.spread.moments import beyond_median, member_deviations, member_variance
+from ensemble_horizon.spread.moments import beyond_median, member_deviations
 
 _SLAB = 8192
 
@@ -105,7 +105,7 @@ def reduce_block(values: np.ndarray, reduction: Reduction, points: np.ndarray | 
     summary = empty_summary(reduction, members, leads, size)
     site_from, site_to = _locate(reduction.sites, points)
     sample_from, sample_to = _locate(reduction.sample, points)
-    located = [(*_locate(region.index, points), region.weight) for region in reduction.regions]
+    parts = [_part(region, points) for region in reduction.regions]
     for lead in range(leads):
         field_values = values[:, lead]
         summary.site_values[lead][:, site_to] = field_values[:, site_from]
@@ -114,22 +114,80 @@ def reduce_block(values: np.ndarray, reduction: Reduction, points: np.ndarray | 
         if present.sum() < 2:
             continue
         kept = field_values if present.all() else field_values[present]
-        variance, _ = member_variance(kept)
-        if summary.variance is not None:
-            summary.variance[lead] = variance
-        beyond = [beyond_median(kept, distance) for distance in reduction.beyond]
-        if summary.share is not None:
-            for number, far in enumerate(beyond):
-                count = np.isfinite(kept).sum(axis=0)
-                with np.errstate(invalid="ignore", divide="ignore"):
-                    summary.share[number, lead] = np.where(
-                        count > 0, far.sum(axis=0) / count, np.nan
-                    )
-        for place, (source, target, weight) in enumerate(located):
-            _reduce_region(
-                summary, lead, place, present, kept, variance, beyond, source, weight[target]
-            )
+        _reduce_spread(summary, lead, np.flatnonzero(present), kept, parts)
+        for number, distance in enumerate(reduction.beyond):
+            _reduce_shares(summary, lead, number, present, kept, distance, parts)
     return summary
+
+
+@dataclass(frozen=True)
+class _Part:
+    """The part of a region that lies in a window: positions there, and their weights."""
+
+    position: np.ndarray
+    weight: np.ndarray
+
+    def within(self, first: int, stop: int) -> tuple[np.ndarray | slice, np.ndarray]:
+        """Positions counted from ``first``, and weights, of the points before ``stop``."""
+        low, high = np.searchsorted(self.position, [first, stop])
+        weight = self.weight[low:high]
+        if high - low == stop - first:
+            return slice(None), weight
+        return self.position[low:high] - first, weight
+
+
+def _part(region: RegionWeights, points: np.ndarray | None) -> _Part:
+    position, target = _locate(region.index, points)
+    return _Part(position, region.weight[target])
+
+
+def _reduce_spread(
+    summary: Summary, lead: int, rows: np.ndarray, values: np.ndarray, parts: list[_Part]
+) -> None:
+    """Variance at every point, and sums and inner products over regions, in one go."""
+    size = values.shape[1]
+    grams = np.zeros((len(parts), rows.size, rows.size))
+    for first in range(0, size, _SLAB):
+        stop = min(first + _SLAB, size)
+        deviation, count = member_deviations(values[:, first:stop])
+        with np.errstate(invalid="ignore", divide="ignore"):
+            total = np.einsum("mp,mp->p", deviation, deviation)
+            variance = np.where(count > 1, total / (count - 1), np.nan)
+        if summary.variance is not None:
+            summary.variance[lead, first:stop] = variance
+        for place, part in enumerate(parts):
+            chosen, weight = part.within(first, stop)
+            if weight.size == 0:
+                continue
+            local = variance[chosen].astype(float)
+            known = np.isfinite(local)
+            weight = np.where(known, weight, 0.0)
+            summary.region_sum[lead, place] += weight @ np.where(known, local, 0.0)
+            summary.region_weight[lead, place] += weight.sum()
+            scaled = deviation[:, chosen] * np.sqrt(weight).astype(deviation.dtype)
+            grams[place] += scaled @ scaled.T
+    summary.gram[lead][np.ix_(np.arange(len(parts)), rows, rows)] += grams
+
+
+def _reduce_shares(
+    summary: Summary,
+    lead: int,
+    number: int,
+    present: np.ndarray,
+    values: np.ndarray,
+    distance: float,
+    parts: list[_Part],
+) -> None:
+    far = beyond_median(values, distance)
+    count = np.isfinite(values).sum(axis=0)
+    if summary.share is not None:
+        with np.errstate(invalid="ignore", divide="ignore"):
+            share = far.sum(axis=0) / count
+        summary.share[number, lead] = np.where(count > 0, share, np.nan)
+    rows = np.flatnonzero(present)
+    for place, part in enumerate(parts):
+        weight = np.where(count[part.position] > 1, part.weight, 0.0)
+        summary.region_beyond[number, lead, place, rows] += far[:, part.position] @ weight
 
 
 def empty_summary(reduction: Reduction, members: int, leads: int, size: int) -> Summary:
@@ -171,44 +229,10 @@ def _note_health(summary: Summary, lead: int, values: np.ndarray) -> np.ndarray:
     return np.asarray(np.isfinite(low))
 
 
-def _reduce_region(
-    summary: Summary,
-    lead: int,
-    place: int,
-    present: np.ndarray,
-    values: np.ndarray,
-    variance: np.ndarray,
-    beyond: list[np.ndarray],
-    source: np.ndarray | slice,
-    weight: np.ndarray,
-) -> None:
-    local = variance[source].astype(float)
-    known = np.isfinite(local)
-    weight = weight if known.all() else np.where(known, weight, 0.0)
-    summary.region_sum[lead, place] += weight @ np.where(known, local, 0.0)
-    summary.region_weight[lead, place] += weight.sum()
-    rows = np.flatnonzero(present)
-    gram = np.zeros((rows.size, rows.size))
-    chosen = values[:, source]
-    for first in range(0, weight.size, _SLAB):
-        piece = slice(first, first + _SLAB)
-        deviation, _ = member_deviations(chosen[:, piece])
-        deviation = deviation * np.sqrt(weight[piece]).astype(deviation.dtype)
-        gram += deviation @ deviation.T
-    summary.gram[lead, place][np.ix_(rows, rows)] += gram
-    for number, far in enumerate(beyond):
-        summary.region_beyond[number, lead, place, rows] += far[:, source] @ weight
-
-
-def _locate(
-    index: np.ndarray, points: np.ndarray | None
-) -> tuple[np.ndarray | slice, np.ndarray | slice]:
+def _locate(index: np.ndarray, points: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
     """Positions of wanted points within a window, and which of the wanted they are."""
     if points is None:
-        whole = index.size > 0 and index[-1] - index[0] + 1 == index.size
-        if whole and np.all(np.diff(index) == 1):
-            return slice(int(index[0]), int(index[-1]) + 1), slice(None)
-        return index, slice(None)
+        return index, np.arange(index.size)
     position = np.minimum(np.searchsorted(points, index), points.size - 1)
     target = np.flatnonzero(points[position] == index)
     return position[target], target

@@ -22,7 +22,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
-from scipy import special, stats
+from scipy import special
 
 from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.spread.moments import member_deviations
@@ -66,9 +66,14 @@ class LeadNoise:
         (0.7939, 1.3704)
         """
         tail = (1 - confidence) / 2
-        low = np.sqrt(self.dof / stats.chi2.ppf(1 - tail, self.dof))
-        high = np.sqrt(self.dof / stats.chi2.ppf(tail, self.dof))
+        low = np.sqrt(self.dof / chi_square_quantile(1 - tail, self.dof))
+        high = np.sqrt(self.dof / chi_square_quantile(tail, self.dof))
         return low, high
+
+
+def chi_square_quantile(probability: np.ndarray | float, dof: np.ndarray | float) -> np.ndarray:
+    """Quantile of the chi-square distribution; scipy.stats is slow to load and to call."""
+    return np.asarray(2 * special.gammaincinv(np.asarray(dof) / 2, probability))
 
 
 def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
@@ -163,8 +168,10 @@ def pooled_kurtosis(values: np.ndarray) -> float:
     if not varying.any():
         return 0.0
     chosen = complete[:, :, varying]
-    variance = chosen.var(axis=1, ddof=1)
-    fourth = stats.kurtosis(chosen, axis=1, bias=False) * variance**2
+    second, raw = (chosen**2).mean(axis=1), (chosen**4).mean(axis=1)
+    variance = second * members / (members - 1)
+    fourth = (members + 1) * raw - 3 * (members - 1) * second**2
+    fourth *= members**2 / ((members - 1) * (members - 2) * (members - 3))
     # E[k2^2] = sigma^4 (1 + 2/(M-1)) + k4/M
     square = (variance**2 - fourth / members) / (1 + 2 / (members - 1))
     mean = float(np.mean(fourth.sum(axis=1) / np.maximum(square.sum(axis=1), 1e-300)))
@@ -202,7 +209,7 @@ def pooled_noise(
         departure = np.where(np.isfinite(variances), relative_size - 1, 0.0)
         relative = _long_run_covariance(departure) / starts
         tail = 1 - (1 - confidence) / 2
-        inflation = float(stats.t.ppf(tail, starts - 1) / special.ndtri(tail))
+        inflation = float(special.stdtrit(starts - 1, tail) / special.ndtri(tail))
     else:
         relative = np.zeros((mean.shape[0], mean.shape[0]))
         for size, noise in zip(relative_size.mean(axis=2), noises, strict=True):

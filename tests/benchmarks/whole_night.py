@@ -266,8 +266,9 @@ def report(folder: Path, points: int, repeat: int) -> None:
     print(f"(d) with intervals at each point           {d:8.2f}  peak {d_memory:.2f} GiB")
     print(f"c / a {c / a:.2f}    b / c {b / c:.1f}    d / c {d / c:.2f}    d / a {d / a:.2f}")
     print(
-        f"fit of one point: curve_fit {each * 1e6:.0f} us, here {fit_seconds / points * 1e6:.2f} us "
-        f"on one core, ratio {each / (fit_seconds / points):.0f}; "
+        f"fit of one point: curve_fit {each * 1e6:.0f} us, here "
+        f"{fit_seconds / points * 1e6:.2f} us on one core, "
+        f"ratio {each / (fit_seconds / points):.0f}; "
         f"residual sum of squares at worst {worse:+.1e} of curve_fit's"
     )
 

@@ -122,19 +122,16 @@ def test_a_crossing_too_late_to_have_lasted_is_not_counted():
 
 
 def brute_force(lead, values, level, hold):
-    """The definition, spelled out: the first crossing after which no value falls below."""
+    """The definition, spelled out: the first crossing that nothing takes back within the hold."""
     for k in range(len(lead)):
         if values[k] < level or (k > 0 and values[k - 1] >= level):
             continue
-        if k == 0:
-            time = lead[0]
-        else:
-            time = np.interp(level, values[k - 1 : k + 1], lead[k - 1 : k + 1])
-        window = values[(lead > time - 1e-9) & (lead <= time + hold + 1e-9)]
-        if lead[-1] >= time + hold - 1e-9 and (window[window.size > 0 :] >= level).all():
-            stays = values[(lead >= lead[k]) & (lead <= time + hold + 1e-9)]
-            beyond = np.flatnonzero(lead >= time + hold - 1e-9)[0]
-            if (stays >= level).all() and (values[k : beyond + 1] >= level).all():
+        bracket = slice(max(k - 1, 0), k + 1)
+        time = np.interp(level, values[bracket], lead[bracket])
+        for later in range(k, len(lead)):
+            if values[later] < level:
+                break
+            if lead[later] >= time + hold - 1e-9:
                 return np.nan if k == 0 else time
     return np.nan
 

@@ -51,6 +51,7 @@ def write_member(
     hours: Sequence[float] | None = None,
     latitudes: np.ndarray = LATITUDES,
     longitudes: np.ndarray = LONGITUDES,
+    realization: int | None = None,
 ) -> Path:
     """One member: variables (time, latitude, longitude) with CF attributes, 64 bits."""
     count = next(iter(fields.values())).shape[0]
@@ -66,6 +67,10 @@ def write_member(
             variable = file.createVariable(name, "f8", dims)
             variable.setncatts({"standard_name": name, "units": f"hours since {start}"})
             variable[...] = values
+        if realization is not None:
+            variable = file.createVariable("realization", "i4", ())
+            variable.setncatts({"standard_name": "realization", "units": "1"})
+            variable[...] = realization
         for name, values in fields.items():
             variable = file.createVariable(
                 name, "f8", ("time", "latitude", "longitude"), fill_value=-9999.0
@@ -94,11 +99,14 @@ class Night:
     def member(self, number: int) -> Path:
         return self.folder / f"m{number:02d}.nc"
 
-    def write(self, values: np.ndarray | None = None, name: str = "t2", **options) -> np.ndarray:
+    def write(
+        self, values: np.ndarray | None = None, name: str = "t2", numbered: bool = False, **options
+    ) -> np.ndarray:
         """Members m00.nc, m01.nc, ... from values (member, lead, latitude, longitude)."""
         values = growing() if values is None else values
         for number, fields in enumerate(values):
-            write_member(self.member(number), {name: fields}, **options)
+            realization = number if numbered else None
+            write_member(self.member(number), {name: fields}, realization=realization, **options)
         return values
 
     def settings(

@@ -58,6 +58,41 @@ def test_a_striped_member_stops_the_night(night, growing, refusal):
     assert night.written() == []
 
 
+@pytest.mark.parametrize("first", [0, 5, 11])
+def test_a_member_without_a_whole_lead_is_dropped_and_named(night, growing, first):
+    values = growing()
+    values[2, first] = np.nan
+    night.write(values)
+    night.settings()
+    result = night.estimate()
+    assert result.exit_code == 0, result.stderr
+    assert {row["members"] for row in night.rows()} == {"5"}
+    kept = np.delete(values, 2, axis=0)
+    np.testing.assert_allclose(night.spread()[0], area_spread(kept), rtol=1e-6)
+    assert "member 2" in result.stderr
+
+
+def test_a_member_without_a_whole_lead_stops_the_night(night, growing, refusal):
+    values = growing()
+    values[2, 5] = np.nan
+    night.write(values)
+    night.settings(runs='incomplete = "stop"')
+    refusal(night.estimate(), 3, "member 2", "t2")
+    assert night.written() == []
+
+
+def test_a_member_whose_second_half_is_missing_is_dropped(night, growing):
+    """A file that was made whole and filled only as far as the run came."""
+    values = growing()
+    values[1, 6:] = np.nan
+    night.write(values)
+    night.settings()
+    (row,) = night.estimated()
+    assert row["members"] == "5"
+    kept = np.delete(values, 1, axis=0)
+    np.testing.assert_allclose(night.spread()[0], area_spread(kept), rtol=1e-6)
+
+
 @pytest.mark.parametrize("policy", ["drop", "use", "stop"])
 def test_a_land_mask_common_to_all_members_is_no_fault(night, growing, policy):
     values = growing()

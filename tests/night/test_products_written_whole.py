@@ -10,8 +10,9 @@ import pytest
 
 CHILD = """
 import resource, sys
-resource.setrlimit(resource.RLIMIT_FSIZE, (int(sys.argv[1]), int(sys.argv[1])))
 from ensemble_horizon.cli import main
+import ensemble_horizon.cli.estimate
+resource.setrlimit(resource.RLIMIT_FSIZE, (int(sys.argv[1]), int(sys.argv[1])))
 main(sys.argv[2:])
 """
 
@@ -82,7 +83,8 @@ def small_disk(folder: Path, size: int):
     try:
         yield
     finally:
-        subprocess.run(["umount", str(folder)], check=True)
+        # Lazily, because HDF5 keeps a file open that it could not finish.
+        subprocess.run(["umount", "-l", str(folder)], check=True)
 
 
 @pytest.mark.parametrize("size", [4, 32, 64])
@@ -122,7 +124,8 @@ def test_files_that_may_not_grow(night, limit):
     assert done.returncode == 2, done.stderr
     assert "Traceback" not in done.stderr
     assert done.stderr.startswith("ensemble-horizon: ")
-    assert "File too large" in done.stderr or "too large" in done.stderr
+    assert str(night.products) in done.stderr
+    assert "permission" not in done.stderr  # there is permission, but no room
     assert [name for name in night.written() if not (night.folder / name).is_dir()] == []
 
 

@@ -45,6 +45,35 @@ folder = "out"
     assert night.written() == []
 
 
+def test_mistakes_of_spelling_and_of_sense_at_once(night, refusal):
+    night.write()
+    night.settings(
+        """
+[variables.t2]
+units = "K"
+plausible = [340, 180]
+hold = "long"
+criteria = [{tolerance = "5 kg"}, {tolerence = 2.0}, {name = "a", tolerance = 1.5},
+    {name = "a", tolerance = 2.0}, {climatology_fraction = 0.5}, {name = "b", tolerance = "1 s"}]
+[variables.wind]
+speed = "u10"
+criteria = []
+""",
+        more="[regions.a]\nsouth = 60\nnorth = 45\n[regions.b]\nsuoth = 60\n"
+        "[sites.b]\nlatitude = 95\nlongitude = 3",
+    )
+    refusal(
+        night.estimate(), 2,
+        "variables.t2.plausible", "variables.t2.hold", "variables.t2.criteria[0].tolerance",
+        "variables.t2.criteria[1].tolerence: unknown key", "variables.t2.criteria[3].name",
+        "variables.t2.criteria[4].climatology_fraction", "variables.t2.criteria[5].tolerance",
+        "variables.wind.speed", "variables.wind.criteria",
+        "regions.a", "regions.b.suoth: unknown key", "sites.b: a region has the same name",
+        "sites.b: expected", "found 13:",
+    )  # fmt: skip
+    assert night.written() == []
+
+
 def test_an_unknown_key_without_a_near_one_lists_the_known(night, refusal):
     night.settings(more="[growth]\nzzz = 1")
     refusal(night.estimate(), 2, "growth.zzz: unknown key", "confidence", "law", "scale")
