@@ -126,6 +126,11 @@ def _install(common: Any) -> None:
     _shared = common
 
 
+def _start_worker(common: Any) -> None:
+    threadpool_limits(limits=1)
+    _install(common)
+
+
 def _start_pool(workers: int, common: Any) -> ProcessPoolExecutor:
     context = multiprocessing.get_context(_start_method())
     if context.get_start_method() == "forkserver":
