@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import gc
 import importlib
 from typing import Any
 
@@ -50,4 +51,7 @@ def group() -> None:
 
 def main(arguments: list[str] | None = None) -> Any:
     """Run the command line; the entry point of the package."""
-    return group.main(args=arguments, prog_name="ensemble-horizon")
+    try:
+        return group.main(args=arguments, prog_name="ensemble-horizon")
+    finally:
+        gc.freeze()  # the process ends: searching all loaded libraries for cycles takes its time

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
+from ensemble_horizon.night.engine import Engine, usable_cores
 from ensemble_horizon.night.estimate import Estimate, Progress, estimate, silent
-from ensemble_horizon.products import PlaceMark, write_products
+from ensemble_horizon.products import Drawing, PlaceMark, write_products
 from ensemble_horizon.settings import Settings
 
 
@@ -24,14 +26,26 @@ def estimate_and_write(
         if the folder cannot be written; nothing half-written is left.
     """
     found = estimate(settings, progress)
+    workers = settings.engine.workers or usable_cores()
+
+    def draw(drawings: Sequence[Drawing]) -> None:
+        with Engine(min(workers, len(drawings))) as engine:
+            for done, _ in enumerate(engine.run(_draw, drawings), start=1):
+                progress("figures", done, len(drawings))
+
     paths = write_products(
         settings.path(settings.products.folder),
         found.results,
         provenance(settings, found),
         figures=settings.products.figures,
         places=_marks(settings),
+        draw=draw,
     )
     return found, paths
+
+
+def _draw(drawing: Drawing) -> None:
+    drawing.draw()
 
 
 def provenance(settings: Settings, found: Estimate) -> dict[str, Any]:

@@ -14,14 +14,14 @@ from ensemble_horizon.spread.sampling import (
     LEAST_STARTS,
     mean_over_starts,
     noise_from_gram,
-    pooled_kurtosis,
     pooled_noise,
 )
 
 
-def curves_of_start(summary: Summary, variable: Variable, places: Places) -> list[Curve]:
+def curves_of_start(
+    summary: Summary, variable: Variable, places: Places, kurtosis: float
+) -> list[Curve]:
     """Curves of all places of one start, regions first."""
-    kurtosis = pooled_kurtosis(summary.sample_values)
     curves = [
         _region_curve(summary, variable, places, number, kurtosis)
         for number in range(len(places.regions))

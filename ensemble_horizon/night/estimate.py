@@ -6,6 +6,7 @@ import logging
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from threading import Thread
 from time import monotonic
 
 import numpy as np
@@ -34,12 +35,14 @@ from ensemble_horizon.night.variables import (
     resolve_places,
     resolve_variable,
 )
+from ensemble_horizon.products import load_plotting
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.faults import Effect
 from ensemble_horizon.runs.report import name_members
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sample import SampleLayout
+from ensemble_horizon.spread.sampling import pooled_kurtosis
 
 ALL_STARTS = "all"
 _SMALL = 48 * 2**20  # bytes below which worker processes take longer to start than they save
@@ -96,7 +99,7 @@ def estimate(settings: Settings, progress: Progress = silent) -> Estimate:
         catalogue, tuple(item.source(places, layout, size, mapped) for item in variables)
     )
     job = _Job(settings, found, context, places, layout, progress)
-    with Engine(_workers(settings, context), context) as engine:
+    with Engine(_workers(settings, context), context) as engine, _plotting_aside(settings):
         results = [job.variable(engine, number, item) for number, item in enumerate(variables)]
     return Estimate(results, places, catalogue, [*found.faults, *job.faults])
 
@@ -137,11 +140,12 @@ class _Job:
         pooled = PooledFields(self.layout)
         for start in range(starts):
             summary = self._read(engine, number, variable, start)
-            lines.append(curves_of_start(summary, variable, self.places))
+            kurtosis = pooled_kurtosis(summary.sample_values)
+            lines.append(curves_of_start(summary, variable, self.places, kurtosis))
             members.append(members_of_start(summary))
             if self.mode == "none":
                 continue
-            noise = noise_of_start(summary, self.layout)
+            noise = noise_of_start(summary, self.layout, kurtosis)
             if self.mode == "pooled":
                 pooled.add(summary, noise)
             else:
@@ -310,6 +314,20 @@ def _workers(settings: Settings, context: ReadingContext) -> int:
     size = int(np.prod(catalogue.grid.shape, dtype=int)) * len(catalogue.members)
     size *= 4 * catalogue.leads.size * catalogue.starts.size * len(context.variables)
     return 1 if size < _SMALL else usable_cores()
+
+
+@contextmanager
+def _plotting_aside(settings: Settings) -> Iterator[None]:
+    """Load the plotting library while the workers read; it is there when it is needed."""
+    if not settings.products.figures:
+        yield
+        return
+    loading = Thread(target=load_plotting, daemon=True)
+    loading.start()
+    try:
+        yield
+    finally:
+        loading.join()
 
 
 @contextmanager

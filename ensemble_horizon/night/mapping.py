@@ -23,7 +23,6 @@ from ensemble_horizon.spread.sampling import (
     LeadNoise,
     mean_over_starts,
     noise_from_points,
-    pooled_kurtosis,
     pooled_noise,
 )
 
@@ -50,9 +49,8 @@ class Fields:
     noise: FieldNoise
 
 
-def noise_of_start(summary: Summary, layout: SampleLayout) -> FieldNoise:
+def noise_of_start(summary: Summary, layout: SampleLayout, kurtosis: float) -> FieldNoise:
     """Noise of the maps of one start, from its sample points."""
-    kurtosis = pooled_kurtosis(summary.sample_values)
     blocks = tuple(
         noise_from_points(summary.sample_values[:, :, layout.block_of_sample == block], kurtosis)
         for block in range(layout.blocks)

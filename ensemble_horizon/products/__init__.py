@@ -21,6 +21,7 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``maps``           horizon maps
 ``curve_panel``    one panel of growth curves
 ``curve_figures``  growth curves, place by place
+``drawing``        the figures, one record each
 ``folder``         all products together
 =================  =============================================================
 """
@@ -29,6 +30,7 @@ from __future__ import annotations
 
 from ensemble_horizon.products.coast import coastlines
 from ensemble_horizon.products.curve_file import write_horizon_file
+from ensemble_horizon.products.drawing import Drawing, draw_in_turn, load_plotting
 from ensemble_horizon.products.folder import moved_together, write_products
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
 from ensemble_horizon.products.map_file import MapFile, map_file, write_map_file
@@ -37,13 +39,16 @@ from ensemble_horizon.products.tables import limits_table, write_horizon_table
 from ensemble_horizon.products.writing import written_whole
 
 __all__ = [
+    "Drawing",
     "Limit",
     "MapFile",
     "PlaceMark",
     "VariableResult",
     "coastlines",
+    "draw_in_turn",
     "limits",
     "limits_table",
+    "load_plotting",
     "map_file",
     "moved_together",
     "write_horizon_file",

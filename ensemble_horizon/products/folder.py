@@ -6,23 +6,19 @@ import contextlib
 import os
 import secrets
 import shutil
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-import xarray as xr
-
 from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.products.curve_file import write_horizon_file
-from ensemble_horizon.products.limits import VariableResult, start_labels
+from ensemble_horizon.products.drawing import Drawing, draw_in_turn, drawings_of
+from ensemble_horizon.products.limits import VariableResult
 from ensemble_horizon.products.map_file import write_map_file
-from ensemble_horizon.products.netcdf import valid_name
 from ensemble_horizon.products.places import PlaceMark
 from ensemble_horizon.products.tables import COLUMN_NOTES, write_horizon_table
-from ensemble_horizon.products.wording import iso_start
 from ensemble_horizon.products.writing import disk_errors, refuse_folder
-from ensemble_horizon.vocabulary import CAUTION, CRITERION, PLACE, START, STATUS_MEANING
+from ensemble_horizon.vocabulary import CAUTION, STATUS_MEANING
 
 FIGURES = "figures"
 
@@ -34,6 +30,7 @@ def write_products(
     *,
     figures: bool = True,
     places: Sequence[PlaceMark] = (),
+    draw: Callable[[Sequence[Drawing]], None] = draw_in_turn,
 ) -> list[Path]:
     """Write all products of an estimate into ``folder``.
 
@@ -54,6 +51,8 @@ def write_products(
         Whether to draw.
     places : sequence of PlaceMark
         Regions and sites to show on the maps.
+    draw : callable
+        Draws all the figures it is given; in this process by default.
 
     Returns
     -------
@@ -82,7 +81,7 @@ def write_products(
         if maps:
             write_map_file(aside / "horizon_maps.nc", maps, provenance)
         if figures:
-            _draw(aside / FIGURES, found, places)
+            draw(list(drawings_of(found, aside / FIGURES, places)))
         names = [path.relative_to(aside) for path in written_files(aside)]
         (aside / "README.txt").write_text(_readme(names), encoding="utf-8")
         names.append(Path("README.txt"))
@@ -163,56 +162,6 @@ def _keep(old: Path, copy: Path) -> None:
         copy.hardlink_to(old)
     except OSError:
         shutil.copy2(old, copy)
-
-
-def _draw(folder: Path, results: Sequence[VariableResult], places: Sequence[PlaceMark]) -> None:
-    # The plotting library is slow to load and not needed by those who only want numbers.
-    from ensemble_horizon.products.curve_figures import draw_growth_curves  # noqa: PLC0415
-    from ensemble_horizon.products.maps import draw_horizon_map  # noqa: PLC0415
-    from ensemble_horizon.products.view import map_view  # noqa: PLC0415
-
-    taken: set[str] = set()
-    for result in results:
-        curves, maps = result.curves, result.maps
-        variable = valid_name(str(curves.attrs.get("variable", "variable")), taken)
-        if curves.sizes[PLACE] and curves.sizes[CRITERION]:
-            for position, stamp in enumerate(_stamps(curves)):
-                draw_growth_curves(
-                    curves, folder / f"{variable}_curves_{stamp}.png", start=position
-                )
-        if maps is None:
-            continue
-        names: set[str] = set()
-        criteria = [valid_name(str(label), names) for label in maps[CRITERION].values]
-        view = map_view(maps["horizon"].isel({START: 0, CRITERION: 0}))
-        members = int(curves["members"].max()) if "members" in curves else None
-        for position, stamp in enumerate(_stamps(maps)):
-            # One start in memory at a time, read once for all its criteria.
-            one = maps.isel({START: [position]}).compute()
-            for column, criterion in enumerate(criteria):
-                draw_horizon_map(
-                    one,
-                    folder / f"{variable}_map_{criterion}_{stamp}.png",
-                    criterion=column,
-                    places=places,
-                    members=maps.attrs.get("members", members),
-                    last_lead=float(curves["lead"].values[-1]),
-                    view=view,
-                )
-
-
-def _stamps(data: xr.Dataset) -> list[str]:
-    """Return the starts as parts of file names: ``20310105T00``, or the label where pooled."""
-    labels = start_labels(data)
-    starts: np.ndarray = data[START].values
-    stamps = []
-    for start, label in zip(starts, labels, strict=True):
-        text = iso_start(start, label)
-        short = text.replace("-", "").replace(":", "")
-        while short.endswith("00") and "T" in short and len(short) > len("20310105T00"):
-            short = short[:-2]
-        stamps.append(valid_name(short).removeprefix("v_"))
-    return stamps
 
 
 def _readme(names: Sequence[Path]) -> str:

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-MOST_POINTS = 4096
+MOST_POINTS = 2048
 MOST_BLOCKS = 8  # along each dimension
 _POINTS_PER_BLOCK = 48
 _MOST_BYTES = 128 * 2**20
@@ -50,7 +50,7 @@ def sample_layout(shape: tuple[int, ...], members: int, leads: int) -> SampleLay
     Examples
     --------
     >>> layout = sample_layout((361, 720), members=20, leads=41)
-    >>> layout.index.size <= 4096, layout.blocks
+    >>> layout.index.size <= 2048, layout.blocks
     (True, 64)
     """
     size = int(np.prod(shape, dtype=int))

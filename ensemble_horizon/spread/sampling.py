@@ -118,31 +118,31 @@ def noise_from_points(values: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
     """
     leads, members, points = values.shape
     deviation, count = member_deviations(values.transpose(1, 0, 2).reshape(members, -1))
-    deviation = deviation.reshape(members, leads, points).transpose(2, 1, 0).astype(float)
+    deviation = deviation.reshape(members, leads, points).transpose(2, 1, 0)
     with np.errstate(invalid="ignore", divide="ignore"):
         unit = deviation / np.sqrt((deviation**2).sum(axis=2, keepdims=True))
     n = np.maximum(count.reshape(leads, points).max(axis=1) - 1.0, 1.0)
-    pair = np.minimum(n[:, np.newaxis], n)
-    square = _unbiased_square((unit @ unit.transpose(0, 2, 1)) ** 2, pair + 1)
-    known = np.isfinite(square)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        correlation = np.where(known, square, 0.0).sum(axis=0) / known.sum(axis=0)
+    square = (unit @ unit.transpose(0, 2, 1)) ** 2
+    correlation = _unbiased_mean_square(square, np.minimum(n[:, np.newaxis], n) + 1)
     return LeadNoise(_widen(n, n, kurtosis), _as_correlation(correlation))
 
 
-def _unbiased_square(square: np.ndarray, members: np.ndarray) -> np.ndarray:
-    """Squared correlations freed of the bias of few members.
+def _unbiased_mean_square(square: np.ndarray, members: np.ndarray) -> np.ndarray:
+    """Mean (L, L) over K points of squared correlations (K, L, L), freed of small-sample bias.
 
     1 - (M-3)/(M-2) (1-r^2) 2F1(1, 1; M/2; 1-r^2) (Olkin and Pratt 1958, Annals of Mathematical
     Statistics, from memory), with the first terms of the series.
     """
-    rest = 1 - square
-    series = np.ones_like(square)
-    term = np.ones_like(square)
+    known = np.isfinite(square)
+    rest = np.where(known, 1 - square, 0)
+    number = np.maximum(known.sum(axis=0), 1)
+    power, total, factor = rest, rest.sum(axis=0), np.ones(members.shape)
     for order in range(1, 7):
-        term = term * rest * order / (members / 2 + order - 1)
-        series += term
-    return 1 - np.maximum(members - 3, 0) / np.maximum(members - 2, 1) * rest * series
+        power = power * rest
+        factor = factor * order / (members / 2 + order - 1)
+        total = total + factor * power.sum(axis=0)
+    mean = 1 - np.maximum(members - 3, 0) / np.maximum(members - 2, 1) * total / number
+    return np.where(known.any(axis=0), mean, 0.0)
 
 
 def pooled_kurtosis(values: np.ndarray) -> float:
