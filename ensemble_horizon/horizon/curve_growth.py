@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import special
 
+from ensemble_horizon.growth.growth import FEWEST_POINTS
 from ensemble_horizon.growth.law import Law
 from ensemble_horizon.growth.laws import LAWS
-from ensemble_horizon.growth.selection import select_law
+from ensemble_horizon.growth.selection import NO_LAW, Selection, select_law
 from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
 from ensemble_horizon.spread.sampling import LeadNoise, chi_square_quantile
 
@@ -55,7 +56,7 @@ def growth_of_curves(
     The interval is first order: the noise of ln(spread) between leads carried through the
     derivative of the fit. It is conditional on the law.
     """
-    selection = select_law(lead, spreads, None if law == "auto" else [law], scale=scale)
+    selection = select_where_enough(lead, spreads, law, scale)
     found = [_nothing(lead) for _ in noises]
     for record, rows, parameters in chosen_groups(selection):
         for row, own in zip(rows, parameters, strict=True):
@@ -63,6 +64,20 @@ def growth_of_curves(
                 lead, spreads[row], noises[row], record, own[np.newaxis], scale, confidence
             )
     return found
+
+
+def select_where_enough(lead: np.ndarray, spreads: np.ndarray, law: str, scale: str) -> Selection:
+    """The law of each of N curves (N, L), none where fewer than five leads can be used.
+
+    With about as many leads as parameters a law passes through any points and says nothing.
+    """
+    if lead.size < FEWEST_POINTS:
+        return Selection((), np.full(spreads.shape[0], NO_LAW), ())
+    selection = select_law(lead, spreads, None if law == "auto" else [law], scale=scale)
+    with np.errstate(invalid="ignore"):
+        usable = (spreads > 0) if scale == "log" else np.isfinite(spreads)
+    enough = usable.sum(axis=1) >= FEWEST_POINTS
+    return replace(selection, chosen=np.where(enough, selection.chosen, NO_LAW))
 
 
 def _growth_of(

@@ -137,18 +137,22 @@ def judge(
 ) -> tuple[np.ndarray, np.ndarray]:
     """Horizon (N,) and status (N,) of N curves (L, N): numpy kernel.
 
-    The horizon is NaN unless the status is ``reached``. A curve needs two leads with a value, or
-    one at which the threshold is already exceeded; and a threshold. ``growing`` tells of the
-    curves at given positions whether they grow; it is asked only of those that do not cross.
+    The horizon is NaN unless the status is ``reached``. A curve needs two leads with a value (one,
+    where the run has no more), or one at which the threshold is already exceeded; and a threshold,
+    unless it does not grow. ``growing`` tells of the curves at given positions whether they grow;
+    it is asked only of those that do not cross.
     """
     crossing = first_crossing(lead, curves, threshold, hold)
     status = np.full(curves.shape[1], Status.reached, dtype=np.int8)
     rest = np.flatnonzero(~np.isfinite(crossing.time) & ~crossing.at_start)
     if rest.size:
-        status[rest] = np.where(growing(rest), Status.beyond_run, Status.no_growth)
+        # A single lead tells nothing of growth: its run ends before the threshold, no more.
+        grown = growing(rest) if lead.size > 1 else True
+        status[rest] = np.where(grown, Status.beyond_run, Status.no_growth)
     status[crossing.at_start] = Status.at_start
-    missing = ((crossing.points < 2) & ~crossing.at_start) | ~np.isfinite(threshold)
-    status[missing] = Status.no_data
+    few = (crossing.points < min(2, lead.size)) & ~crossing.at_start
+    aimless = ~np.isfinite(threshold) & (status != Status.no_growth)
+    status[few | aimless] = Status.no_data
     return np.where(status == Status.reached, crossing.time, np.nan), status
 
 
