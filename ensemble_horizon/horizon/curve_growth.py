@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy import special
 
+from ensemble_horizon.growth.fitting import TOLERANCE
 from ensemble_horizon.growth.growth import FEWEST_POINTS
 from ensemble_horizon.growth.law import Law
 from ensemble_horizon.growth.laws import LAWS
@@ -66,14 +67,21 @@ def growth_of_curves(
     return found
 
 
-def select_where_enough(lead: np.ndarray, spreads: np.ndarray, law: str, scale: str) -> Selection:
+def select_where_enough(
+    lead: np.ndarray,
+    spreads: np.ndarray,
+    law: str,
+    scale: str,
+    tolerance: float = TOLERANCE,
+) -> Selection:
     """The law of each of N curves (N, L), none where fewer than five leads can be used.
 
     With about as many leads as parameters a law passes through any points and says nothing.
     """
     if lead.size < FEWEST_POINTS:
         return Selection((), np.full(spreads.shape[0], NO_LAW), ())
-    selection = select_law(lead, spreads, None if law == "auto" else [law], scale=scale)
+    names = None if law == "auto" else [law]
+    selection = select_law(lead, spreads, names, scale=scale, tolerance=tolerance)
     with np.errstate(invalid="ignore"):
         usable = (spreads > 0) if scale == "log" else np.isfinite(spreads)
     enough = usable.sum(axis=1) >= FEWEST_POINTS

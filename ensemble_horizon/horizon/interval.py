@@ -23,7 +23,7 @@ from ensemble_horizon.horizon.crossing import Crossing, first_crossing
 from ensemble_horizon.spread.sampling import LeadNoise, chi_square_quantile
 
 _DRAWS = 2000
-_TABLE_DRAWS = 600
+_TABLE_DRAWS = 1200
 _SEED = 20  # fixed: the same input gives the same interval
 _STEEPNESS = np.array([0.02, 0.05, 0.1, 0.2, 0.4, 0.8, 1.6, 3.2, 6.4])
 _FAR = 8.0  # standard units from the threshold at which noise brings no crossing

@@ -10,13 +10,15 @@ import numpy as np
 from scipy import special
 
 from ensemble_horizon.growth.laws import LAWS
-from ensemble_horizon.growth.selection import Selection, select_law
+from ensemble_horizon.growth.selection import Selection
 from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
 from ensemble_horizon.horizon.criteria import Chance, Criterion, Levels
+from ensemble_horizon.horizon.curve_growth import select_where_enough
 from ensemble_horizon.horizon.horizon import judge
 from ensemble_horizon.horizon.interval import (
     Moves,
     MoveTable,
+    plain_moves,
     share_bounds,
     spread_bounds,
 )
@@ -40,7 +42,7 @@ class MapOptions:
     criteria : sequence of Criterion
     hold : float, in lead units
     law, scale : str
-        As `select_law` takes them; law "auto" for a choice by AICc.
+        As `select_where_enough` takes them; law "auto" for a choice by AICc.
     confidence : float or None
         None leaves the intervals out.
     members : int
@@ -94,16 +96,12 @@ def limits_of_points(batch: PointBatch, options: MapOptions) -> dict[str, np.nda
     """
     with np.errstate(invalid="ignore"):
         spread = np.sqrt(batch.variance.astype(np.float64))
-    names = None if options.law == "auto" else [options.law]
-    selection = select_law(
-        batch.lead, spread.T, names, scale=options.scale, tolerance=MAP_TOLERANCE
-    )
+    selection = select_where_enough(batch.lead, spread.T, options.law, options.scale, MAP_TOLERANCE)
     result = _growth_values(selection)
     if options.confidence is not None:
         result |= _rate_intervals(batch, spread, selection, options)
-    widening = _widening(batch, spread, selection, options)
     rows = [
-        _limit(batch, options, criterion, spread, result, selection, widening)
+        _limit(batch, options, criterion, spread, result, selection)
         for criterion in options.criteria
     ]
     result.pop("exact_saturation")
@@ -135,7 +133,6 @@ def _limit(
     spread: np.ndarray,
     growth: dict[str, np.ndarray],
     selection: Selection,
-    widening: np.ndarray | None,
 ) -> dict[str, np.ndarray]:
     number = spread.shape[1]
     levels = Levels(saturation=growth["exact_saturation"], climatology=batch.climatology)
@@ -162,9 +159,10 @@ def _limit(
             options.confidence, options.hold,
         )  # fmt: skip
     else:
-        moves = _moves(batch, threshold, time, selection)
-        if criterion.kind == "saturation_fraction" and widening is not None:
-            moves = Moves(moves.up * widening, moves.down * widening)
+        before = _lead_before(batch.lead, time)
+        moves = _moves(batch, threshold, before, selection)
+        if criterion.kind == "saturation_fraction":
+            moves = _moves_of_estimated_threshold(batch, spread, selection, options, moves, before)
         dof = batch.noise.dof
         low, high = spread_bounds(batch.lead, spread, threshold, dof, moves, options.hold)
     silent = (status == Status.no_data) | (status == Status.no_growth)
@@ -173,36 +171,50 @@ def _limit(
     return row
 
 
+def _lead_before(lead: np.ndarray, time: np.ndarray) -> np.ndarray:
+    """Position (N,) of the lead before each crossing; the last but one where there is none."""
+    crossing = np.where(np.isfinite(time), time, lead[-1])
+    return np.clip(np.searchsorted(lead, crossing) - 1, 0, lead.size - 2)
+
+
 def _moves(
-    batch: PointBatch, threshold: np.ndarray, time: np.ndarray, selection: Selection
+    batch: PointBatch, threshold: np.ndarray, before: np.ndarray, selection: Selection
 ) -> Moves:
     """Moves by the steepness of the fitted law where it reaches the threshold."""
     assert batch.table is not None
-    lead = batch.lead
-    crossing = np.where(np.isfinite(time), time, lead[-1])
-    before = np.clip(np.searchsorted(lead, crossing) - 1, 0, lead.size - 2)
     rate = np.full(threshold.size, np.nan)
     for law, rows, parameters in chosen_groups(selection):
         rate[rows] = law.growth_rate(parameters, threshold[rows])
-    step = np.diff(lead)[before]
+    step = np.diff(batch.lead)[before]
     noise = np.sqrt(special.polygamma(1, batch.noise.dof / 2) / 4)[before]
     steepness = np.where(np.isfinite(rate) & (rate > 0), rate * step / noise, 1.0)
     return batch.table.look_up(before, steepness)
 
 
-def _widening(
-    batch: PointBatch, spread: np.ndarray, selection: Selection, options: MapOptions
-) -> np.ndarray | None:
-    """Factor by which moves widen because the saturation level is itself estimated, or None."""
-    wanted = any(item.kind == "saturation_fraction" for item in options.criteria)
-    if options.confidence is None or not wanted:
-        return None
-    error = _errors("saturation", batch, spread, selection, options)
-    level = np.full(error.size, np.nan)
+def _moves_of_estimated_threshold(
+    batch: PointBatch,
+    spread: np.ndarray,
+    selection: Selection,
+    options: MapOptions,
+    moves: Moves,
+    before: np.ndarray,
+) -> Moves:
+    """Moves for a threshold that is itself estimated from the curve, by its saturation.
+
+    What counts is the noise of the curve less that of the threshold, and the two go together.
+    """
+    level = np.full(before.size, np.nan)
     for law, rows, parameters in chosen_groups(selection):
         level[rows] = law.saturation(parameters)
-    typical = np.median(np.diag(batch.noise.log_spread_covariance()))
-    return np.sqrt(1 + np.nan_to_num((error / level) ** 2) / typical)
+    variance, cross = _noise_of("saturation", batch, spread, selection, options)
+    own = np.diag(batch.noise.log_spread_covariance())[before]
+    shared = np.take_along_axis(cross, before[:, np.newaxis], axis=1)[:, 0] / level
+    extra = np.nan_to_num((variance / level**2 - 2 * shared) / own, nan=0.0, posinf=0.0)
+    quantile = plain_moves(options.confidence or 0.9, batch.noise.inflation).up
+    # First crossings come early by as much as before; only the scatter about that changes.
+    early, reach = (moves.down - moves.up) / 2, (moves.down + moves.up) / 2
+    reach = np.sqrt(np.maximum(reach**2 + quantile**2 * extra, 0.0))
+    return Moves(np.maximum(reach - early, 0.0), np.maximum(reach + early, 0.0))
 
 
 def _rate_intervals(
@@ -213,31 +225,36 @@ def _rate_intervals(
     for law, rows, parameters in chosen_groups(selection):
         rate[rows] = law.growth_rate(parameters)
     quantile = batch.noise.inflation * float(special.ndtri(1 - (1 - options.confidence) / 2))
-    reach = quantile * _errors("growth_rate", batch, spread, selection, options)
+    variance, _ = _noise_of("growth_rate", batch, spread, selection, options)
+    reach = quantile * np.sqrt(variance)
     return {
         "growth_rate_low": (rate - reach).astype(np.float32),
         "growth_rate_high": (rate + reach).astype(np.float32),
     }
 
 
-def _errors(
+def _noise_of(
     quantity: str,
     batch: PointBatch,
     spread: np.ndarray,
     selection: Selection,
     options: MapOptions,
-) -> np.ndarray:
-    """Standard error (N,) of a quantity of the law, from the noise of each point's block."""
-    error = np.full(selection.chosen.size, np.nan)
+) -> tuple[np.ndarray, np.ndarray]:
+    """Variance (N,) of a quantity of the law, and its covariance (N, L) with ln(spread).
+
+    From the noise of each point's block.
+    """
+    variance = np.full(selection.chosen.size, np.nan)
+    cross = np.full((selection.chosen.size, batch.lead.size), np.nan)
     for law, rows, parameters in chosen_groups(selection):
         usable = (spread[:, rows] > 0).T
         weight = quantity_sensitivity(law, quantity, parameters, batch.lead, usable, options.scale)
         for block in np.unique(batch.block[rows]):
             here = batch.block[rows] == block
-            covariance = batch.noises[block].log_spread_covariance()
-            variance = ((weight[here] @ covariance) * weight[here]).sum(axis=1)
-            error[rows[here]] = np.sqrt(np.maximum(variance, 0.0))
-    return error
+            shared = weight[here] @ batch.noises[block].log_spread_covariance()
+            cross[rows[here]] = shared
+            variance[rows[here]] = np.maximum((shared * weight[here]).sum(axis=1), 0.0)
+    return variance, cross
 
 
 def split_points(size: int, parts: int) -> Sequence[slice]:

@@ -75,7 +75,7 @@ class Engine:
         _install(None)
         self._limits.restore_original_limits()
         if self._pool is not None:
-            self._pool.shutdown(wait=kind is None, cancel_futures=True)
+            self._pool.shutdown(wait=True, cancel_futures=True)
             self._pool = None
 
     def run(self, function: Callable[[T], R], tasks: Sequence[T]) -> Iterator[tuple[int, R]]:

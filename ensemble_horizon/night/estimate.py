@@ -38,7 +38,8 @@ from ensemble_horizon.night.variables import (
 from ensemble_horizon.products import load_plotting
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.faults import Effect
-from ensemble_horizon.runs.report import name_members
+from ensemble_horizon.runs.report import and_more
+from ensemble_horizon.runs.verdict import name_members
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sample import SampleLayout
@@ -158,37 +159,44 @@ class _Job:
         return self._result(variable, lines, members, maps)
 
     def _read(self, engine: Engine, number: int, variable: Variable, start: int) -> Summary:
-        without: set[int] = set()
+        without: frozenset[int] = frozenset()
+        known: list[Fault] = []
         block_bytes = self.settings.engine.block_memory_mib * 2**20 // 3
         while True:
             with _timed(f"reading {variable.name} {self.catalogue.start_label(start)}"):
-                summary = read_start(
+                reading = read_start(
                     engine, self.context, number, start, block_bytes, self._advance,
                     tuple(sorted(without)),
                 )  # fmt: skip
-            faults = faults_of(summary, self.catalogue, variable.name, start, variable.plausible)
-            if not without:
-                self.faults += faults
+            faults = faults_of(reading, self.catalogue, variable, start, without)
+            faults = [item for item in faults if item not in known]
+            known += faults
+            self.faults += faults
             bad = self._unusable(faults) - without
-            if not bad:
-                self._require_enough(summary, variable, start)
-                return summary
             without |= bad
+            self._require_enough(reading.summary, variable, start, without)
+            if not bad:
+                return reading.summary
             self._total += self.catalogue.leads.size
-            log.warning("%s: reading again without %s", variable.name, self._names(without))
+            log.warning(
+                "%s at %s: reading again without %s",
+                variable.name, self.catalogue.start_label(start), self._names(without),
+            )  # fmt: skip
 
     def _unusable(self, faults: list[Fault]) -> set[int]:
         policy = self.settings.runs.incomplete
         serious = [item for item in faults if item.effect is not Effect.note]
         for item in serious:
-            log.warning("member %s, %s: %s", item.member, item.variable, item.message)
+            log.warning(
+                "member %s at %s, %s: %s", item.member, item.start, item.variable, item.message
+            )
         if serious and policy == "stop":
             first = serious[0]
             raise InputError(
                 f"member {first.member} at {first.start}",
                 expected="members without faults, as runs.incomplete = 'stop' asks",
                 found=f"{first.variable}: {first.message}"
-                + (f", and {len(serious) - 1} more faults" if len(serious) > 1 else ""),
+                + and_more(len(serious) - 1),
                 remedy="mend the files, or set runs.incomplete to 'drop' or 'use'",
             )
         drop = [i for i in serious if policy == "drop" or i.effect is Effect.wrong]
@@ -196,15 +204,28 @@ class _Job:
             self.catalogue.members.index(item.member) for item in drop if item.member is not None
         }
 
-    def _require_enough(self, summary: Summary, variable: Variable, start: int) -> None:
-        left, least = members_of_start(summary), self.settings.runs.minimum_members
-        if left < least:
-            raise InputError(
-                f"{variable.name} at {self.catalogue.start_label(start)}",
-                expected=f"at least {least} usable members (runs.minimum_members)",
-                found=f"{left}",
-                remedy="mend the files named by the survey, or lower runs.minimum_members",
-            )
+    def _require_enough(
+        self, summary: Summary, variable: Variable, start: int, without: frozenset[int]
+    ) -> None:
+        usable = np.isfinite(summary.low).any(axis=0)
+        usable[list(without)] = False
+        left, least = int(usable.sum()), self.settings.runs.minimum_members
+        if left >= least:
+            return
+        label = self.catalogue.start_label(start)
+        causes = [
+            f"member {item.member}: {item.message}"
+            for item in self.faults
+            if (item.variable, item.start) == (variable.name, label)
+            and item.effect is not Effect.note
+        ]
+        because = f"; {causes[0]}{and_more(len(causes) - 1)}" if causes else ""
+        raise InputError(
+            f"{variable.name} at {label}",
+            expected=f"at least {least} usable members (runs.minimum_members)",
+            found=f"{left}{because}",
+            remedy="mend the files named by the survey, or lower runs.minimum_members",
+        )
 
     def _names(self, positions: set[int]) -> str:
         return name_members([self.catalogue.members[i] for i in sorted(positions)])

@@ -4,32 +4,44 @@ from __future__ import annotations
 
 import numpy as np
 
+from ensemble_horizon.night.reading import Damage, Reading
+from ensemble_horizon.night.variables import Variable
 from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.runs.faults import Fault
+from ensemble_horizon.runs.report import name_leads
 from ensemble_horizon.spread.reduction import Summary
+
+Found = tuple[str, int, int | None, str]
 
 
 def faults_of(
-    summary: Summary,
+    reading: Reading,
     catalogue: Catalogue,
-    variable: str,
+    variable: Variable,
     start: int,
-    plausible: tuple[float, float] | None,
+    without: frozenset[int] = frozenset(),
 ) -> list[Fault]:
     """Faults of the members of one start, found while their values were reduced.
 
     Parameters
     ----------
-    summary : Summary
-    variable : str
-        Name in the settings, for the messages.
-    plausible : (lowest, highest), optional
-        In the units of the files.
+    reading : Reading
+    variable : Variable
+        Its name in the settings, its units and its plausible range go into the messages.
+    without : frozenset of int
+        Members by position that were left out of the reading.
     """
-    here = _here(summary)
-    found = _missing_cells(summary, here)
-    if plausible is not None:
-        found += _implausible(summary, plausible)
+    summary = reading.summary
+    here = np.isfinite(summary.low)
+    held = np.ones_like(here)
+    for part in variable.parts:
+        held &= catalogue.present(part)[start]
+    held[:, list(without)] = False
+    for place in reading.damage:
+        held[place] = False
+    found = _unreadable(reading.damage, catalogue.leads)
+    found += _missing_cells(summary, held, here, catalogue.leads)
+    found += _implausible(summary, variable, catalogue.leads)
     found += _identical(summary, here, catalogue.members)
     return [
         Fault(
@@ -38,48 +50,67 @@ def faults_of(
             start=catalogue.start_label(start),
             lead=None if lead is None else float(catalogue.leads[lead]),
             message=message,
-            variable=variable,
+            variable=variable.name,
         )
         for kind, member, lead, message in found
     ]
 
 
-Found = tuple[str, int, int | None, str]
-
-
-def _here(summary: Summary) -> np.ndarray:
-    """(T, M) whether a member has any value at a lead."""
-    return np.isfinite(summary.low)
-
-
-def _missing_cells(summary: Summary, here: np.ndarray) -> list[Found]:
-    """Members with more gaps than the mask that most members share."""
+def _unreadable(damage: Damage, leads: np.ndarray) -> list[Found]:
     found: list[Found] = []
+    for member in sorted({member for _, member in damage}):
+        bad = sorted(lead for lead, other in damage if other == member)
+        message = f"{name_leads(leads[bad])} cannot be read: {damage[bad[0], member]}"
+        found.append(("unreadable-data", member, bad[0], message))
+    return found
+
+
+def _missing_cells(
+    summary: Summary, held: np.ndarray, here: np.ndarray, leads: np.ndarray
+) -> list[Found]:
+    """Members with more gaps than the mask that most members share.
+
+    held, here : (T, M) whether the files hold the member at a lead, and whether it has any value
+    """
+    found: list[Found] = []
+    here = here & held
     usual = np.zeros(here.shape[0], dtype=np.int64)
     for lead in range(here.shape[0]):
         if here[lead].any():
             usual[lead] = np.median(summary.gaps[lead][here[lead]])
-    extra = here & (summary.gaps > usual[:, np.newaxis])
+    # A lead at which no member has a value is nobody's fault.
+    told = here.any(axis=1)[:, np.newaxis]
+    extra = held & told & (summary.gaps > usual[:, np.newaxis])
     for member in np.flatnonzero(extra.any(axis=0)):
-        leads = np.flatnonzero(extra[:, member])
-        most = int(summary.gaps[leads, member].max())
-        message = f"{most} cells without a value, more than most members, at {leads.size} leads"
-        found.append(("missing-cells", int(member), int(leads[0]), message))
+        bad = np.flatnonzero(extra[:, member])
+        most = int(summary.gaps[bad, member].max())
+        empty = np.flatnonzero(extra[:, member] & ~here[:, member])
+        if empty.size == bad.size:
+            message = f"no value at all at {name_leads(leads[empty])}"
+        else:
+            cells = "1 cell" if most == 1 else f"{most} cells"
+            message = f"{cells} without a value, more than most members, at {name_leads(leads[bad])}"
+        found.append(("missing-cells", int(member), int(bad[0]), message))
     return found
 
 
-def _implausible(summary: Summary, plausible: tuple[float, float]) -> list[Found]:
+def _implausible(summary: Summary, variable: Variable, leads: np.ndarray) -> list[Found]:
+    if variable.plausible is None:
+        return []
+    lowest, highest = variable.plausible
     found: list[Found] = []
     with np.errstate(invalid="ignore"):
-        outside = (summary.low < plausible[0]) | (summary.high > plausible[1])
+        outside = (summary.low < lowest) | (summary.high > highest)
     for member in np.flatnonzero(outside.any(axis=0)):
-        leads = np.flatnonzero(outside[:, member])
-        low, high = summary.low[leads, member].min(), summary.high[leads, member].max()
+        bad = np.flatnonzero(outside[:, member])
+        ends = summary.low[bad, member].min(), summary.high[bad, member].max()
+        low, high = sorted(variable.in_results(end) for end in ends)
+        least, most = sorted(variable.in_results(end) for end in (lowest, highest))
         message = (
-            f"values from {low:.6g} to {high:.6g}, outside the plausible {plausible[0]:.6g} to "
-            f"{plausible[1]:.6g} (units of the files), at {leads.size} leads"
+            f"values from {low:.6g} to {high:.6g}, outside the plausible {least:.6g} to "
+            f"{most:.6g} {variable.units}, at {name_leads(leads[bad])}"
         )
-        found.append(("implausible-values", int(member), int(leads[0]), message))
+        found.append(("implausible-values", int(member), int(bad[0]), message))
     return found
 
 

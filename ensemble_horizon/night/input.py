@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import logging
+import re
 from collections.abc import Callable
 from dataclasses import dataclass
 
@@ -11,7 +13,12 @@ from ensemble_horizon.errors import InputError, SettingsError
 from ensemble_horizon.night.variables import levels_of, source_names
 from ensemble_horizon.runs import Catalogue, Fault, SurveyReport, read_catalogue, survey_runs
 from ensemble_horizon.runs.units import converter
+from ensemble_horizon.runs.verdict import fault_lines
 from ensemble_horizon.settings import Settings
+
+_DATE = re.compile(r"\d{4}-\d\d(-\d\d([T ]\d\d(:?\d\d)*)?)?Z?")
+
+log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -38,12 +45,8 @@ def open_input(settings: Settings, progress: Callable[[int, int], None] | None =
     catalogue = choose_starts(settings, find_runs(settings, progress))
     report = survey(settings, catalogue, content=False)
     if not report.usable:
-        raise InputError(
-            f"runs {settings.runs.files!r}",
-            expected="usable runs",
-            found="; ".join(report.reasons) or report.summary(),
-            remedy="run the survey command to see every fault",
-        )
+        raise _not_usable(settings, report)
+    _warn(settings, report)
     kept = catalogue.without(report.drop, report.drop_at)
     short = set(report.short_starts)
     if short:
@@ -52,15 +55,52 @@ def open_input(settings: Settings, progress: Callable[[int, int], None] | None =
     return Input(kept, report)
 
 
+def _not_usable(settings: Settings, report: SurveyReport) -> InputError:
+    expected = "runs without faults, as runs.incomplete = 'stop' asks"
+    remedy = "run the survey command to see every fault"
+    if len(report.short_starts) == len(report.starts):
+        least = settings.runs.minimum_members
+        expected = f"usable runs of at least {least} members (runs.minimum_members)"
+        remedy += ", or lower runs.minimum_members"
+    return InputError(
+        f"runs {settings.runs.files!r}",
+        expected=expected,
+        found="; ".join(report.reasons) or report.summary(),
+        remedy=remedy,
+    )
+
+
+def _warn(settings: Settings, report: SurveyReport) -> None:
+    """Log what the headers lack, and what follows from it."""
+    if not report.faults:
+        return
+    log.warning("runs: %s", report.summary())
+    for line in fault_lines(report.faults):
+        log.warning("runs: %s", line)
+    if report.missing:
+        here = len(report.members)
+        log.warning(
+            "runs: %d members are there, where %d were expected", here, here + len(report.missing)
+        )
+    if report.short_starts:
+        log.warning(
+            "runs: fewer than %d usable members (runs.minimum_members) at %s, left out",
+            settings.runs.minimum_members, ", ".join(report.short_starts),
+        )  # fmt: skip
+
+
 def find_runs(settings: Settings, progress: Callable[[int, int], None] | None = None) -> Catalogue:
     """The catalogue of all files that the settings name."""
-    catalogue = read_catalogue(
-        settings.run_files(),
-        variables=source_names(settings),
-        level=levels_of(settings) or None,
-        lagged=settings.runs.lagged,
-        progress=progress,
-    )
+    try:
+        catalogue = read_catalogue(
+            settings.run_files(),
+            variables=source_names(settings),
+            level=levels_of(settings) or None,
+            lagged=settings.runs.lagged,
+            progress=progress,
+        )
+    except InputError as error:
+        raise _with_keys(settings, error) from error
     control = settings.runs.control
     if control is not None and control not in catalogue.members:
         raise SettingsError(
@@ -70,6 +110,25 @@ def find_runs(settings: Settings, progress: Callable[[int, int], None] | None = 
             remedy="name the unperturbed member as the files do, or take the key out",
         )
     return catalogue
+
+
+def _with_keys(settings: Settings, error: InputError) -> InputError:
+    """The error, with the keys of the settings that name an absent variable."""
+    if not error.expected.startswith("the variable "):
+        return error
+    keys = []
+    for name, table in settings.variables.items():
+        sources = table.speed or (table.source or name,)
+        if any(repr(source) in error.expected for source in sources):
+            keys.append(f"variables.{name}.{'speed' if table.speed else 'source'}")
+    if not keys:
+        return error
+    return InputError(
+        error.culprit,
+        expected=error.expected,
+        found=error.found,
+        remedy=f"{error.remedy}; the key is {' or '.join(keys)}",
+    )
 
 
 def survey(
@@ -109,7 +168,9 @@ def choose_starts(settings: Settings, catalogue: Catalogue) -> Catalogue:
                 expected=f"starts that are there: {', '.join(labels[:6])}"
                 + (" and more" if len(labels) > 6 else ""),
                 found=repr(text),
-                remedy="write starts as ISO 8601, for instance 2031-02-14T00",
+                remedy="take one of those, or \"latest\" or \"all\""
+                if _DATE.fullmatch(text)
+                else "write starts as ISO 8601, for instance 2031-02-14T00",
             )
         chosen += found
     return catalogue.subset(starts=np.unique(chosen))

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from itertools import product
 
 import numpy as np
 
+from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.engine import Engine, shared
 from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.spread.reduction import Reduction, Summary, empty_summary, reduce_block
@@ -50,24 +51,55 @@ class Block:
     without: tuple[int, ...] = ()  # members not to be used, by position
 
 
-def read_block(block: Block) -> Summary:
+# Why a member cannot be read, by (lead, member), both by position.
+Damage = dict[tuple[int, int], str]
+
+
+@dataclass
+class Reading:
+    """One start of one variable, and the fields that could not be read; those count as NaN."""
+
+    summary: Summary
+    damage: Damage = field(default_factory=dict)
+
+
+def read_block(block: Block) -> Reading:
     """Read one block of all members and reduce it: runs in a worker."""
     context: ReadingContext = shared()
     variable = context.variables[block.variable]
     catalogue = context.catalogue
-    leads = range(*block.leads)
-    window = tuple(slice(*bounds) for bounds in block.window)
-    parts = [
-        catalogue.read(name, block.start, list(leads), slice(None), window)
-        for name in variable.parts
-    ]
+    damage: Damage = {}
+    parts = [_read_part(catalogue, name, block, damage) for name in variable.parts]
     values = parts[0] if len(parts) == 1 else np.hypot(parts[0], parts[1], out=parts[0])
     values = values.reshape(*values.shape[:2], -1)
     if block.without:
         values[list(block.without)] = np.nan
-    return reduce_block(
-        values, variable.reduction, window_points(catalogue.grid.shape, block.window)
-    )
+    points = window_points(catalogue.grid.shape, block.window)
+    return Reading(reduce_block(values, variable.reduction, points), damage)
+
+
+def _read_part(catalogue: Catalogue, name: str, block: Block, damage: Damage) -> np.ndarray:
+    """Values (member, lead, *window); field by field where a file does not let itself be read."""
+    leads = list(range(*block.leads))
+    window = tuple(slice(*bounds) for bounds in block.window)
+    try:
+        return catalogue.read(name, block.start, leads, slice(None), window)
+    except InputError:
+        shape = [stop - first for first, stop in block.window]
+        members = len(catalogue.members)
+        values = np.full((members, len(leads), *shape), np.nan, dtype=catalogue.dtype(name))
+    for member in set(range(members)) - set(block.without):
+        try:
+            values[member] = catalogue.read(name, block.start, leads, member, window)[0]
+        except InputError:
+            for row, lead in enumerate(leads):
+                try:
+                    part = catalogue.read(name, block.start, lead, member, window)
+                    values[member, row] = part[0, 0]
+                except InputError as error:
+                    path = catalogue.file_of_member(name, block.start, member) or error.culprit
+                    damage[lead, member] = f"{error.found} [{path}]"
+    return values
 
 
 def read_start(
@@ -78,7 +110,7 @@ def read_start(
     block_bytes: int,
     advance: Callable[[int], None],
     without: tuple[int, ...] = (),
-) -> Summary:
+) -> Reading:
     """Read one start of one variable through the engine.
 
     Parameters
@@ -95,13 +127,14 @@ def read_start(
     catalogue = context.catalogue
     reduction = context.variables[variable].reduction
     members, leads = len(catalogue.members), catalogue.leads.size
-    summary = empty_summary(reduction, members, leads, reduction.size)
+    found = Reading(empty_summary(reduction, members, leads, reduction.size))
     for number, part in engine.run(read_block, blocks):
         block = blocks[number]
         points = window_points(catalogue.grid.shape, block.window)
-        summary.add(part, slice(*block.leads), points)
+        found.summary.add(part.summary, slice(*block.leads), points)
+        found.damage |= part.damage
         advance(block.leads[1] - block.leads[0])
-    return summary
+    return found
 
 
 def plan_blocks(

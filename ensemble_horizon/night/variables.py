@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import logging
 from dataclasses import dataclass
 
 import numpy as np
 
-from ensemble_horizon.errors import ArgumentError, SettingsError
+from ensemble_horizon.errors import ArgumentError, InputError, SettingsError
 from ensemble_horizon.horizon.criteria import Chance, Criterion
 from ensemble_horizon.night.reading import SourceVariable
 from ensemble_horizon.runs import Catalogue
@@ -24,6 +25,8 @@ from ensemble_horizon.spread.reduction import Reduction, RegionWeights
 from ensemble_horizon.spread.sample import SampleLayout, sample_layout
 
 SERIES = "series"
+
+log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -61,8 +64,8 @@ class Variable:
         ``units`` are those of the results.
     parts : tuple of str
         Source names.
-    factor : float
-        Turns a difference in the units of the files into one in ``units``.
+    factor, offset : float
+        Turn a value in the units of the files into one in ``units``; a difference by the factor.
     plausible : (lowest, highest) in the units of the files, or None
     criteria : dict of label to Criterion, in ``units``
     climatology : (P,) climatological standard deviation in ``units``, or None
@@ -77,6 +80,11 @@ class Variable:
     hold: float
     criteria: dict[str, Criterion]
     climatology: np.ndarray | None
+    offset: float = 0.0
+
+    def in_results(self, value: float) -> float:
+        """A value in the units of the files, such as a plausible one, in those of the results."""
+        return value * self.factor + self.offset
 
     @property
     def distances(self) -> tuple[float, ...]:
@@ -144,6 +152,7 @@ def resolve_variable(settings: Settings, catalogue: Catalogue, name: str) -> Var
     if table.plausible is not None:
         low, high = ((value - offset) / factor for value in table.plausible)
         plausible = (min(low, high), max(low, high))
+    _warn_of_hold(name, table.hold, catalogue)
     default = str(headers[0].attrs.get("long_name") or name.replace("_", " "))
     return Variable(
         name=name,
@@ -155,7 +164,17 @@ def resolve_variable(settings: Settings, catalogue: Catalogue, name: str) -> Var
         hold=table.hold,
         criteria=settings.criteria(name, units),
         climatology=_climatology(settings, catalogue, name, units),
+        offset=offset,
     )
+
+
+def _warn_of_hold(name: str, hold: float, catalogue: Catalogue) -> None:
+    run = float(catalogue.leads[-1] - catalogue.leads[0])
+    if hold > run:
+        log.warning(
+            "variables.%s.hold: %g %s can never pass within the run of %g, so no limit is reached",
+            name, hold, catalogue.lead_units, run,
+        )  # fmt: skip
 
 
 def _climatology(
@@ -167,9 +186,36 @@ def _climatology(
     ):
         return None
     source = table.names.get(name, settings.variables[name].source or name)
-    field = open_field(settings.path(table.file), source, catalogue.grid)
+    try:
+        field = open_field(settings.path(table.file), source, catalogue.grid)
+    except InputError as error:
+        if not error.expected.startswith("the variable "):
+            raise
+        raise InputError(
+            error.culprit,
+            expected=f"the climatology of {name}, {error.expected}",
+            found=error.found,
+            remedy=f"give climatology.names.{name} the name that the variable has in that file",
+        ) from error
+    what = f"climatology {source!r} in {table.file}"
     own = str(field.attrs.get("units", units))
-    scale = abs(difference_scale(own, units, f"climatology {source!r} in {table.file}"))
+    try:
+        scale = abs(difference_scale(own, units, what))
+    except SettingsError as error:
+        raise InputError(
+            what,
+            expected=f"a standard deviation in units that convert to {units!r}",
+            found=f"{own!r} in the file",
+            remedy="correct the units attribute of the file, or name another variable of it "
+            f"under climatology.names.{name}",
+        ) from error
+    if (field.values < 0).any():
+        raise InputError(
+            what,
+            expected="a standard deviation, which is never below zero",
+            found=f"{float(np.nanmin(field.values)):g}",
+            remedy="put the climatological standard deviation there, not an anomaly or a mean",
+        )
     size = int(np.prod(catalogue.grid.shape, dtype=int))
     return np.broadcast_to(field.values.ravel() * scale, (size,)).astype(float)
 

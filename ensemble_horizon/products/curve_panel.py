@@ -79,7 +79,7 @@ def fit_note(panel: Panel) -> str:
         band = interval(*ends, first.horizon_units) if np.isfinite(ends).all() else ""
         parts.append(f"doubles in {duration(first.doubling_time, first.horizon_units)} {band}")
     if first.law:
-        parts.append(f"{first.law} law")
+        parts.append("no law fitted" if first.law == "none" else f"{first.law} law")
     if first.members is not None:
         parts.append(f"{first.members} members")
     return " · ".join(part.strip() for part in parts) or "no law fitted"

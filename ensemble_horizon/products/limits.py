@@ -36,7 +36,8 @@ class Limit:
     """One horizon with all that belongs to it; NaN where there is no number.
 
     ``low`` and ``high`` are the ends of the interval: ``high`` is infinite where it lies beyond the
-    run. ``index`` is the position (start, place, criterion) in the curves it came from.
+    run. ``law`` is "none" where none was fitted, and empty where that is not known. ``index`` is
+    the position (start, place, criterion) in the curves it came from.
     """
 
     start: str
@@ -183,7 +184,7 @@ def _laws(curves: xr.Dataset) -> list[list[str]]:
         return [[""] * curves.sizes[PLACE]] * curves.sizes[START]
     names = law_names(curves["law"])
     return [
-        [names.get(int(value), "") if np.isfinite(value) else "" for value in row]
+        [names.get(int(value)) or "none" if np.isfinite(value) else "" for value in row]
         for row in _table(curves, "law")
     ]
 

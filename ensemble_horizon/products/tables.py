@@ -42,7 +42,7 @@ COLUMN_NOTES = {
     "criterion": "name of the criterion in the settings",
     "threshold": "what the spread is held against (a probability for a chance criterion)",
     "threshold_units": "units of the threshold",
-    "horizon": "the limit; empty unless the status is reached or at_start",
+    "horizon": "the limit; empty unless the status is reached",
     "low": "lower end of the interval of the horizon; empty where there is none",
     "high": "upper end; empty where there is none, or where it lies beyond the run "
     "(then low is given and high is not)",
@@ -51,7 +51,7 @@ COLUMN_NOTES = {
     "projected": "where the fitted law places a limit that the run did not reach: an "
     "extrapolation, never mixed with horizon",
     "doubling_time": "time in which a small spread doubles under the fitted law",
-    "law": "the law of growth that was fitted",
+    "law": "the law of growth that was fitted; none where there was no fit",
     "members": "ensemble members used",
 }
 
@@ -160,7 +160,7 @@ def limits_table(results: Iterable[VariableResult], *, most: int | None = None) 
             Text(criterion_text(row)),
             Text(row.text, style=_STYLE.get(row.status, "")),
             Text(duration(row.doubling_time, row.horizon_units)),
-            Text(row.law or "–"),
+            Text({"none": "no fit", "": "–"}.get(row.law, row.law)),
             Text("–" if row.members is None else str(row.members)),
         ]
         table.add_row(*([Text(row.start_text)] if several else []), *cells)

@@ -30,6 +30,7 @@ KINDS: dict[str, Effect] = {
     "implausible-values": Effect.wrong,
     "infinite-values": Effect.wrong,
     "constant-fields": Effect.wrong,
+    "constant-everywhere": Effect.note,
     "identical-members": Effect.wrong,
     "duplicate-lead": Effect.wrong,
     "time-mismatch": Effect.wrong,

@@ -68,7 +68,7 @@ def _expand(text: str) -> list[FoundFile]:
     if is_template(text):
         return _expand_template(text)
     if glob.has_magic(text):
-        names = [name for name in _glob(text) if not Path(name).is_dir()]
+        names = _glob(text)
         if not names:
             raise InputError(
                 f"glob {text!r}",
@@ -85,7 +85,7 @@ def _expand_template(text: str) -> list[FoundFile]:
     found = []
     for name in _glob(template.pattern):
         parts = template.match(name)
-        if parts is not None and not Path(name).is_dir():
+        if parts is not None:
             found.append(FoundFile(name, parts))
     if not found:
         raise InputError(
@@ -98,8 +98,14 @@ def _expand_template(text: str) -> list[FoundFile]:
 
 
 def _glob(pattern: str) -> list[str]:
+    """Names that match; folders only where the pattern asks for a suffix, so that nobody took
+    them for anything but files: the reader reports those.
+    """
     # The names must stay spelt as the pattern spells them, which Path.glob does not promise.
-    return glob.glob(pattern, recursive=True)  # noqa: PTH207
+    names = glob.glob(pattern, recursive=True)  # noqa: PTH207
+    if Path(pattern).suffix:
+        return names
+    return [name for name in names if not Path(name).is_dir()]
 
 
 def _nearby(pattern: str) -> str:

@@ -6,7 +6,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 from ensemble_horizon.runs.faults import Fault
-from ensemble_horizon.runs.verdict import NOT_USABLE, USABLE, Label, in_order
+from ensemble_horizon.runs.verdict import NOT_USABLE, USABLE, Label, in_order, name_members
 
 
 @dataclass(frozen=True)
@@ -126,18 +126,17 @@ class SurveyReport:
         }
 
 
-def name_members(members: Sequence[Label]) -> str:
-    """Members in words.
+def and_more(faults: int) -> str:
+    """How many faults were not listed, in words.
 
     Examples
     --------
-    >>> name_members([3]), name_members([3, 7]), name_members([1, 2, 5])
-    ('member 3', 'members 3 and 7', 'members 1, 2 and 5')
+    >>> and_more(0), and_more(1), and_more(5)
+    ('', ', and 1 more fault', ', and 5 more faults')
     """
-    texts = [str(member) for member in members]
-    if len(texts) == 1:
-        return f"member {texts[0]}"
-    return f"members {', '.join(texts[:-1])} and {texts[-1]}"
+    if faults < 1:
+        return ""
+    return f", and {faults} more fault" + ("s" if faults > 1 else "")
 
 
 def name_leads(leads: Iterable[float]) -> str:

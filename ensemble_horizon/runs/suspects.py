@@ -10,7 +10,8 @@ import numpy as np
 from ensemble_horizon.runs.catalogue import Catalogue
 from ensemble_horizon.runs.content import Content
 from ensemble_horizon.runs.faults import Fault
-from ensemble_horizon.runs.report import name_leads, name_members
+from ensemble_horizon.runs.report import name_leads
+from ensemble_horizon.runs.verdict import name_members
 
 Pair = tuple[float, float] | None
 
@@ -82,24 +83,29 @@ def _values(catalogue: Catalogue, content: Content, pair: Pair) -> Iterator[Faul
         yield _fault("infinite-values", catalogue, content, member, bad, message)
     if pair is None:
         return
+    units = catalogue.variables[content.variable].units
+    unit = f" {units} in the units of the file" if units else ""
     for member in np.flatnonzero((content.outside > 0).any(axis=0)):
         bad = content.outside[:, member] > 0
         low, high = content.low[bad, member].min(), content.high[bad, member].max()
+        count = int(content.outside[bad, member].sum())
         message = (
             f"{content.variable!r} goes from {low:.6g} to {high:.6g} at "
             f"{name_leads(catalogue.leads[bad])}, outside the plausible {pair[0]:g} to {pair[1]:g}"
-            f" ({int(content.outside[bad, member].sum())} cells)"
+            f"{unit} ({count} {'cell' if count == 1 else 'cells'})"
         )
         yield _fault("implausible-values", catalogue, content, member, bad, message)
 
 
 def _constant(catalogue: Catalogue, content: Content, _: Pair) -> Iterator[Fault]:
-    """Members that are one number throughout, where others are not."""
+    """Members that are one number throughout; where all are, there is none to be blamed."""
     if content.size < 2:
         return
     read = content.digest >= 0
     flat = (content.constant | ~read).all(axis=0) & read.any(axis=0)
     if flat.all():
+        if np.isfinite(content.low).any():
+            yield _all_constant(catalogue, content)
         return
     for member in np.flatnonzero(flat):
         value = content.low[:, member][read[:, member]][0]
@@ -107,6 +113,18 @@ def _constant(catalogue: Catalogue, content: Content, _: Pair) -> Iterator[Fault
             continue
         message = f"{content.variable!r} is {value:g} everywhere and at every lead"
         yield _fault("constant-fields", catalogue, content, member, read[:, member], message)
+
+
+def _all_constant(catalogue: Catalogue, content: Content) -> Fault:
+    low, high = np.nanmin(content.low), np.nanmax(content.high)
+    numbers = f"{low:g}" if low == high else f"from {low:g} to {high:g}"
+    return Fault(
+        "constant-everywhere",
+        start=catalogue.start_label(content.start),
+        variable=content.variable,
+        message=f"every field of {content.variable!r} is constant, at every lead and in every "
+        f"member ({numbers}): there is no spread to measure over the grid",
+    )
 
 
 def _identical(catalogue: Catalogue, content: Content, _: Pair) -> Iterator[Fault]:

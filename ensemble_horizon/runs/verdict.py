@@ -80,9 +80,7 @@ def judge(
     )
     left = {start: len(held[start] - out[start]) for start in held}
     short = tuple(start for start in held if left[start] < minimum_members)
-    reasons = [fault.line() for fault in faults]
-    if len(reasons) > _REASONS:
-        reasons = [*reasons[:_REASONS], f"and {len(reasons) - _REASONS} more"]
+    reasons = fault_lines(faults)
     verdict = USABLE
     if incomplete == "stop" and faults:
         verdict, reasons = NOT_USABLE, ["a fault stops the job, as asked", *reasons]
@@ -93,9 +91,38 @@ def judge(
         verdict, reasons = NOT_USABLE, [reason, *reasons]
     elif drop or drop_at or missing or missing_at or lost or short:
         verdict = USABLE_WITHOUT
+    else:
+        reasons = []  # what is kept all the same stands among the faults
     return Verdict(
         verdict, drop, drop_at, missing, missing_at, lost, short, tuple(dict.fromkeys(reasons))
     )
+
+
+def fault_lines(faults: Sequence[Fault]) -> list[str]:
+    """The first faults, a line each; members that are not there at all share one."""
+    absent = [f for f in faults if f.kind == "missing-member" and f.start is None]
+    lines = [fault.line() for fault in faults if len(absent) < 2 or fault not in absent]
+    if len(absent) > 1:
+        labels = [fault.member for fault in absent if fault.member is not None]
+        lines = [f"{name_members(labels)} are missing: no file holds them", *lines]
+    lines = list(dict.fromkeys(lines))
+    if len(lines) > _REASONS:
+        return [*lines[:_REASONS], f"and {len(lines) - _REASONS} more"]
+    return lines
+
+
+def name_members(members: Sequence[Label]) -> str:
+    """Members in words.
+
+    Examples
+    --------
+    >>> name_members([3]), name_members([3, 7]), name_members([1, 2, 5])
+    ('member 3', 'members 3 and 7', 'members 1, 2 and 5')
+    """
+    texts = [str(member) for member in members]
+    if len(texts) == 1:
+        return f"member {texts[0]}"
+    return f"members {', '.join(texts[:-1])} and {texts[-1]}"
 
 
 def in_order(labels: set[Label]) -> list[Label]:
