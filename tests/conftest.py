@@ -16,6 +16,9 @@ import xarray as xr
 
 from ensemble_horizon.runs import close_files
 
+# Collected for doctests they would be taken for one another.
+collect_ignore_glob = ["conftest.py", "*/conftest.py"]
+
 Truth = np.ndarray
 
 

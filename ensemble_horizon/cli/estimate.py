@@ -26,5 +26,5 @@ def command(config: str, quiet: bool) -> None:
         return
     screen = console()
     screen.print(limits_table(found.results))
-    folder = settings.path(settings.products.folder)
+    folder = settings.path(settings.products.folder).resolve()
     screen.print(f"{len(paths)} products in {folder}", highlight=False, soft_wrap=True)

@@ -42,8 +42,18 @@ def command(
             " ".join(target),
             expected="usable runs",
             found="; ".join(report.reasons[:1]) or report.summary(),
-            remedy="mend or leave out the files that the report names",
+            remedy="mend or leave out the files that the report names"
+            + (", or lower runs.minimum_members" if _too_few(target, report) else ""),
         )
+
+
+def _too_few(target: tuple[str, ...], report: SurveyReport) -> bool:
+    """Whether a key of the settings decided."""
+    return _has_settings(target) and len(report.short_starts) == len(report.starts)
+
+
+def _has_settings(target: tuple[str, ...]) -> bool:
+    return len(target) == 1 and target[0].endswith(".toml")
 
 
 def _survey(
@@ -52,7 +62,7 @@ def _survey(
     headers_only: bool,
     advance: Callable[[int, int], None],
 ) -> SurveyReport:
-    if len(target) == 1 and target[0].endswith(".toml"):
+    if _has_settings(target):
         settings = read_settings(target[0])
         catalogue = choose_starts(settings, find_runs(settings))
         return survey(settings, catalogue, content=not headers_only, progress=advance)

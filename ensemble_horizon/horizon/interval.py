@@ -172,8 +172,12 @@ def move_table(
 
     The crossing is taken midway between two leads.
     """
-    draws = _noise_draws(noise, _TABLE_DRAWS)
     size = lead.size
+    if size < 2:
+        plain = plain_moves(confidence, noise.inflation)
+        shape = (size, _STEEPNESS.size)
+        return MoveTable(np.full(shape, plain.up), np.full(shape, plain.down))
+    draws = _noise_draws(noise, _TABLE_DRAWS)
     up = np.empty((size, _STEEPNESS.size))
     down = np.empty_like(up)
     for before in range(size):

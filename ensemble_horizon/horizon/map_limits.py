@@ -158,6 +158,11 @@ def _limit(
             batch.lead, curves, options.members, criterion.probability,
             options.confidence, options.hold,
         )  # fmt: skip
+    elif batch.lead.size < 2:  # no crossing between leads that a table could tell of
+        plain = plain_moves(options.confidence, batch.noise.inflation)
+        low, high = spread_bounds(
+            batch.lead, spread, threshold, batch.noise.dof, plain, options.hold
+        )
     else:
         before = _lead_before(batch.lead, time)
         moves = _moves(batch, threshold, before, selection)

@@ -53,7 +53,7 @@ def reach(
     >>> fit = xr.Dataset({"initial_error": 1.0, "growth_rate": 0.5, "law": ((), 0)})
     >>> fit.law.attrs["flag_meanings"] = "exponential"; fit.law.attrs["flag_values"] = [0]
     >>> bought = reach(fit, tolerance=8.0, error_factor=[2.0])
-    >>> round(float(bought.gained), 4)  # ln 2 / 0.5
+    >>> round(bought.gained.item(), 4)  # ln 2 / 0.5
     1.3863
     """
     sizes = [require_positive(item, "tolerance") for item in np.atleast_1d(tolerance)]

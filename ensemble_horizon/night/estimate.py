@@ -11,13 +11,12 @@ from time import monotonic
 
 import numpy as np
 
-from ensemble_horizon.errors import InputError
 from ensemble_horizon.horizon.curve_growth import growth_of_curves
 from ensemble_horizon.horizon.curve_limits import Curve, limits_of_curve
 from ensemble_horizon.horizon.map_limits import MapOptions
 from ensemble_horizon.night.curves import curves_of_start, members_of_start, pool_starts
 from ensemble_horizon.night.engine import Engine, usable_cores
-from ensemble_horizon.night.health import faults_of
+from ensemble_horizon.night.health import faults_of, require_enough, stopped_by
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import Fields, PooledFields, map_fields, noise_of_start
 from ensemble_horizon.night.reading import ReadingContext, read_start
@@ -38,7 +37,6 @@ from ensemble_horizon.night.variables import (
 from ensemble_horizon.products import load_plotting
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.faults import Effect
-from ensemble_horizon.runs.report import and_more
 from ensemble_horizon.runs.verdict import name_members
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.reduction import Summary
@@ -180,7 +178,7 @@ class _Job:
             self._total += self.catalogue.leads.size
             log.warning(
                 "%s at %s: reading again without %s",
-                variable.name, self.catalogue.start_label(start), self._names(without),
+                variable.name, self.catalogue.start_label(start), self._names(set(without)),
             )  # fmt: skip
 
     def _unusable(self, faults: list[Fault]) -> set[int]:
@@ -188,17 +186,10 @@ class _Job:
         serious = [item for item in faults if item.effect is not Effect.note]
         for item in serious:
             log.warning(
-                "member %s at %s, %s: %s", item.member, item.start, item.variable, item.message
+                "member %s, %s at %s: %s", item.member, item.variable, item.start, item.message
             )
         if serious and policy == "stop":
-            first = serious[0]
-            raise InputError(
-                f"member {first.member} at {first.start}",
-                expected="members without faults, as runs.incomplete = 'stop' asks",
-                found=f"{first.variable}: {first.message}"
-                + and_more(len(serious) - 1),
-                remedy="mend the files, or set runs.incomplete to 'drop' or 'use'",
-            )
+            raise stopped_by(serious)
         drop = [i for i in serious if policy == "drop" or i.effect is Effect.wrong]
         return {
             self.catalogue.members.index(item.member) for item in drop if item.member is not None
@@ -207,25 +198,12 @@ class _Job:
     def _require_enough(
         self, summary: Summary, variable: Variable, start: int, without: frozenset[int]
     ) -> None:
-        usable = np.isfinite(summary.low).any(axis=0)
-        usable[list(without)] = False
-        left, least = int(usable.sum()), self.settings.runs.minimum_members
-        if left >= least:
-            return
         label = self.catalogue.start_label(start)
-        causes = [
-            f"member {item.member}: {item.message}"
-            for item in self.faults
-            if (item.variable, item.start) == (variable.name, label)
-            and item.effect is not Effect.note
-        ]
-        because = f"; {causes[0]}{and_more(len(causes) - 1)}" if causes else ""
-        raise InputError(
-            f"{variable.name} at {label}",
-            expected=f"at least {least} usable members (runs.minimum_members)",
-            found=f"{left}{because}",
-            remedy="mend the files named by the survey, or lower runs.minimum_members",
-        )
+        causes = [i for i in self.faults if (i.variable, i.start) == (variable.name, label)]
+        require_enough(
+            summary, f"{variable.name} at {label}", causes, without,
+            self.settings.runs.minimum_members,
+        )  # fmt: skip
 
     def _names(self, positions: set[int]) -> str:
         return name_members([self.catalogue.members[i] for i in sorted(positions)])

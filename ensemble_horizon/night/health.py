@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
+from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.reading import Damage, Reading
 from ensemble_horizon.night.variables import Variable
 from ensemble_horizon.runs import Catalogue
-from ensemble_horizon.runs.faults import Fault
-from ensemble_horizon.runs.report import name_leads
+from ensemble_horizon.runs.faults import Effect, Fault
+from ensemble_horizon.runs.report import and_more, name_leads
 from ensemble_horizon.spread.reduction import Summary
 
 Found = tuple[str, int, int | None, str]
@@ -56,6 +59,38 @@ def faults_of(
     ]
 
 
+def stopped_by(serious: Sequence[Fault]) -> InputError:
+    """The refusal of runs that must be without faults."""
+    first = serious[0]
+    return InputError(
+        f"member {first.member} at {first.start}",
+        expected="members without faults, as runs.incomplete = 'stop' asks",
+        found=f"{first.variable}: {first.message}" + and_more(len(serious) - 1),
+        remedy="mend the files, or set runs.incomplete to 'drop' or 'use'",
+    )
+
+
+def require_enough(
+    summary: Summary, what: str, faults: Sequence[Fault], without: frozenset[int], least: int
+) -> None:
+    """Refuse a start that is left with fewer than ``least`` members, and say what took them."""
+    usable = np.isfinite(summary.low).any(axis=0)
+    usable[list(without)] = False
+    left = int(usable.sum())
+    if left >= least:
+        return
+    causes = [i for i in faults if i.effect is not Effect.note]
+    because = ""
+    if causes:
+        because = f"; member {causes[0].member}: {causes[0].message}{and_more(len(causes) - 1)}"
+    raise InputError(
+        what,
+        expected=f"at least {least} usable members (runs.minimum_members)",
+        found=f"{left}{because}",
+        remedy="mend the files named by the survey, or lower runs.minimum_members",
+    )
+
+
 def _unreadable(damage: Damage, leads: np.ndarray) -> list[Found]:
     found: list[Found] = []
     for member in sorted({member for _, member in damage}):
@@ -79,8 +114,8 @@ def _missing_cells(
         if here[lead].any():
             usual[lead] = np.median(summary.gaps[lead][here[lead]])
     # A lead at which no member has a value is nobody's fault.
-    told = here.any(axis=1)[:, np.newaxis]
-    extra = held & told & (summary.gaps > usual[:, np.newaxis])
+    told = np.asarray(here.any(axis=1))
+    extra = held & told[:, np.newaxis] & (summary.gaps > usual[:, np.newaxis])
     for member in np.flatnonzero(extra.any(axis=0)):
         bad = np.flatnonzero(extra[:, member])
         most = int(summary.gaps[bad, member].max())
@@ -89,7 +124,9 @@ def _missing_cells(
             message = f"no value at all at {name_leads(leads[empty])}"
         else:
             cells = "1 cell" if most == 1 else f"{most} cells"
-            message = f"{cells} without a value, more than most members, at {name_leads(leads[bad])}"
+            message = (
+                f"{cells} without a value, more than most members, at {name_leads(leads[bad])}"
+            )
         found.append(("missing-cells", int(member), int(bad[0]), message))
     return found
 

@@ -74,7 +74,8 @@ def _warn(settings: Settings, report: SurveyReport) -> None:
     """Log what the headers lack, and what follows from it."""
     if not report.faults:
         return
-    log.warning("runs: %s", report.summary())
+    usable = report.summary() if report.reasons else "usable as is, gaps and all"
+    log.warning("runs: %s", usable)
     for line in fault_lines(report.faults):
         log.warning("runs: %s", line)
     if report.missing:
@@ -168,7 +169,7 @@ def choose_starts(settings: Settings, catalogue: Catalogue) -> Catalogue:
                 expected=f"starts that are there: {', '.join(labels[:6])}"
                 + (" and more" if len(labels) > 6 else ""),
                 found=repr(text),
-                remedy="take one of those, or \"latest\" or \"all\""
+                remedy='take one of those, or "latest" or "all"'
                 if _DATE.fullmatch(text)
                 else "write starts as ISO 8601, for instance 2031-02-14T00",
             )

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 import xarray as xr
@@ -12,10 +13,13 @@ from ensemble_horizon.errors import InputError, SettingsError
 from ensemble_horizon.growth import LAWS, doubling_at
 from ensemble_horizon.horizon import reach
 from ensemble_horizon.products.netcdf import valid_name
+from ensemble_horizon.runs.handles import diagnose
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.vocabulary import PLACE, START
 
 _SIZES = 6
+_NEEDED = {"law", "spread", "initial_error", "saturation", "growth_rate", "doubling_time",
+           "place_name"}  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -56,20 +60,18 @@ def reach_of_products(
     """
     path = settings.path(settings.products.folder) / "horizons.nc"
     if variable not in settings.variables:
-        raise _unknown("variable", variable, list(settings.variables))
+        raise _unknown("--variable", variable, list(settings.variables))
     try:
         with xr.open_dataset(path, decode_timedelta=False) as stored:
             fits = _fits(stored.load(), list(settings.variables), variable)
-    except (OSError, ValueError) as error:
-        raise InputError(
-            str(path),
-            expected="the products of an estimate",
-            found=getattr(error, "strerror", None) or str(error),
-            remedy="run the estimate command with this settings file first",
-        ) from error
+    except (OSError, ValueError, RuntimeError) as error:
+        raise _no_products(path, diagnose(str(path), error).found) from error
+    lacking = _NEEDED - set(map(str, fits.variables))
+    if lacking:
+        raise _no_products(path, f"no fits of {variable}, which the last estimate did not know")
     names = [str(name) for name in fits["place_name"].values]
     if place is not None and place not in names:
-        raise _unknown("place", place, names)
+        raise _unknown("--place", place, names)
     chosen = [number for number, name in enumerate(names) if place in (None, name)]
     return [_answer(fits.isel({PLACE: number}), variable, tolerances, factors) for number in chosen]
 
@@ -106,6 +108,15 @@ def _answer(
         bought=bought,
         sizes=sizes,
         doubling=doubling,
+    )
+
+
+def _no_products(path: Path, found: str) -> InputError:
+    return InputError(
+        str(path),
+        expected="the products of an estimate with these settings",
+        found=found,
+        remedy="run the estimate command with this settings file first",
     )
 
 

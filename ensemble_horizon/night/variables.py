@@ -172,8 +172,8 @@ def _warn_of_hold(name: str, hold: float, catalogue: Catalogue) -> None:
     run = float(catalogue.leads[-1] - catalogue.leads[0])
     if hold > run:
         log.warning(
-            "variables.%s.hold: %g %s can never pass within the run of %g, so no limit is reached",
-            name, hold, catalogue.lead_units, run,
+            "variables.%s.hold: %g %s cannot pass within a run of %g %s, so no limit is reached",
+            name, hold, catalogue.lead_units, run, catalogue.lead_units,
         )  # fmt: skip
 
 

@@ -10,7 +10,7 @@ from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.errors import ArgumentError, ProductError
 from ensemble_horizon.products.curve_file import write_horizon_file
 from ensemble_horizon.products.drawing import Drawing, draw_in_turn, drawings_of
 from ensemble_horizon.products.limits import VariableResult
@@ -21,6 +21,15 @@ from ensemble_horizon.products.writing import disk_errors, refuse_folder
 from ensemble_horizon.vocabulary import CAUTION, STATUS_MEANING
 
 FIGURES = "figures"
+README = "README.txt"
+
+_TITLE = "Products of Ensemble Horizon"
+_LIST = "Files"  # the lines below it tell the next estimate which files are products
+_NOTES = {
+    "horizons.csv": "one row per start, variable, place and criterion",
+    "horizons.nc": "curves, fits and limits of regions and sites (CF-1.11)",
+    "horizon_maps.nc": "limits and fits per grid point (CF-1.11)",
+}
 
 
 def write_products(
@@ -37,7 +46,8 @@ def write_products(
     ``horizons.csv``, ``horizons.nc``, ``README.txt``, and where there are maps ``horizon_maps.nc``;
     with ``figures`` a map per variable, criterion and start and the growth curves per variable and
     start in ``figures/``. The files are written to a hidden folder inside ``folder`` and moved into
-    place together at the end; if anything fails, what stood there before is put back.
+    place together at the end; products of an earlier estimate that have no successor go at the same
+    time. If anything fails, what stood there before is put back.
 
     Parameters
     ----------
@@ -74,7 +84,7 @@ def write_products(
             found="none",
             remedy="name a variable in the settings",
         )
-    with moved_together(folder) as aside:
+    with moved_together(folder, earlier_products(Path(folder))) as aside:
         write_horizon_table(aside / "horizons.csv", found)
         write_horizon_file(aside / "horizons.nc", found, provenance)
         maps = [result.maps for result in found if result.maps is not None]
@@ -83,17 +93,19 @@ def write_products(
         if figures:
             draw(list(drawings_of(found, aside / FIGURES, places)))
         names = [path.relative_to(aside) for path in written_files(aside)]
-        (aside / "README.txt").write_text(_readme(names), encoding="utf-8")
-        names.append(Path("README.txt"))
+        with disk_errors(aside / README):
+            (aside / README).write_text(_readme(names), encoding="utf-8")
+        names.append(Path(README))
     return [Path(folder) / name for name in names]
 
 
 @contextlib.contextmanager
-def moved_together(folder: str | os.PathLike[str]) -> Iterator[Path]:
+def moved_together(folder: str | os.PathLike[str], outdated: Sequence[Path] = ()) -> Iterator[Path]:
     """Give a hidden folder inside ``folder``; move its files out if the block succeeds.
 
-    Files of the same names are replaced. If a move fails, the moves before it are undone, and the
-    files that stood there before are put back.
+    Files of the same names are replaced, and those of ``outdated`` (below ``folder``) that have no
+    successor are removed. If a move fails, the moves before it are undone, and the files that stood
+    there before are put back.
 
     Raises
     ------
@@ -109,8 +121,16 @@ def moved_together(folder: str | os.PathLike[str]) -> Iterator[Path]:
             aside.mkdir(parents=True)
         yield aside
         with disk_errors(target):
-            _move_in(aside, target)
+            _move_in(aside, target, outdated)
         done = True
+    except ProductError as error:
+        # The hidden folder is nothing that the reader knows of.
+        culprit, found = (
+            text.replace(str(aside), str(target)) for text in (error.culprit, error.found)
+        )
+        raise ProductError(
+            culprit, expected=error.expected, found=found, remedy=error.remedy
+        ) from error.__cause__
     finally:
         shutil.rmtree(aside, ignore_errors=True)
         if not done:
@@ -126,7 +146,29 @@ def written_files(folder: Path) -> list[Path]:
     return sorted(files, key=lambda path: (len(path.relative_to(folder).parts), path.name))
 
 
-def _move_in(aside: Path, target: Path) -> None:
+def earlier_products(folder: Path) -> list[Path]:
+    """Products that the ``README.txt`` of an earlier estimate lists: all that is ours to remove.
+
+    Names relative to ``folder``; none where the file is missing or not one of ours.
+    """
+    try:
+        lines = (folder / README).read_text(encoding="utf-8").splitlines()
+    except (OSError, UnicodeDecodeError):
+        return []
+    if lines[:1] != [_TITLE] or _LIST not in lines:
+        return []
+    names = []
+    for line in lines[lines.index(_LIST) + 1 :]:
+        if not line.startswith("  "):
+            break
+        name = Path(line.strip().partition(": ")[0])
+        figure = name.parent == Path(FIGURES) and name.suffix == ".png"
+        if figure or name.as_posix() in _NOTES:
+            names.append(name)
+    return names
+
+
+def _move_in(aside: Path, target: Path, outdated: Sequence[Path]) -> None:
     files = [path.relative_to(aside) for path in written_files(aside)]
     before = aside / ".before"
     moved: list[Path] = []
@@ -144,6 +186,13 @@ def _move_in(aside: Path, target: Path) -> None:
                 _keep(place, before / name)
             moved.append(name)
             (aside / name).replace(place)
+        for name in outdated:
+            place = target / name
+            if name not in files and place.is_file():
+                (before / name).parent.mkdir(parents=True, exist_ok=True)
+                _keep(place, before / name)
+                moved.append(name)
+                place.unlink()
     except BaseException:
         for name in reversed(moved):
             with contextlib.suppress(OSError):
@@ -155,6 +204,9 @@ def _move_in(aside: Path, target: Path) -> None:
             with contextlib.suppress(OSError):
                 place.rmdir()
         raise
+    for folder in {(target / name).parent for name in outdated} - {target}:
+        with contextlib.suppress(OSError):
+            folder.rmdir()  # where nothing is left in it
 
 
 def _keep(old: Path, copy: Path) -> None:
@@ -165,14 +217,9 @@ def _keep(old: Path, copy: Path) -> None:
 
 
 def _readme(names: Sequence[Path]) -> str:
-    notes = {
-        "horizons.csv": "one row per start, variable, place and criterion",
-        "horizons.nc": "curves, fits and limits of regions and sites (CF-1.11)",
-        "horizon_maps.nc": "limits and fits per grid point (CF-1.11)",
-    }
-    lines = ["Products of Ensemble Horizon", "", CAUTION, "", "Files"]
+    lines = [_TITLE, "", CAUTION, "", _LIST]
     lines += [
-        f"  {name.as_posix()}" + (f": {notes[str(name)]}" if str(name) in notes else "")
+        f"  {name.as_posix()}" + (f": {_NOTES[str(name)]}" if str(name) in _NOTES else "")
         for name in names
     ]
     lines += ["", "Columns of horizons.csv"]

@@ -82,7 +82,9 @@ def product_error(target: Path, error: Exception) -> ProductError:
     """Say in plain words why ``target`` could not be written, and what helps."""
     code = error.errno if isinstance(error, OSError) else None
     folder = nearest_folder(target)
-    if code in (errno.ENOSPC, errno.EDQUOT) or (code is None and not _has_room(folder)):
+    # The HDF5 library reports a file that it has no room to create as one it has no permission for.
+    doubtful = code is None or (code == errno.EACCES and os.access(folder, os.W_OK | os.X_OK))
+    if code in (errno.ENOSPC, errno.EDQUOT) or (doubtful and not _has_room(folder)):
         expected, found = "room on the disk for the file", f"the disk of {folder} is full"
         remedy = "free some space there, or name a folder on another disk"
     elif code == errno.EROFS:
@@ -92,13 +94,16 @@ def product_error(target: Path, error: Exception) -> ProductError:
         expected, found = "a folder that can be written", f"no permission to write in {folder}"
         remedy = "ask for write permission there, or name another folder"
     elif code in (errno.ENOTDIR, errno.EEXIST):
-        expected, found = "a folder", f"a file stands in the way ({error})"
+        expected, found = "a folder", f"a file stands in the way ({_obstacle(target)})"
         remedy = "move that file away, or name another folder"
     elif code == errno.EISDIR:
         expected, found = "a file name", "a folder of that name"
         remedy = "move that folder away, or name another file"
+    elif code == errno.ENOENT:
+        expected, found = "a place that can be written", f"{folder}, where nothing can be made"
+        remedy = "name another folder"
     else:
-        expected, found = "a place that can be written", str(error) or type(error).__name__
+        expected, found = "a place that can be written", _words(error)
         remedy = "look at the disk and the folder, or name another folder"
     return ProductError(str(target), expected=expected, found=found, remedy=remedy)
 
@@ -144,6 +149,19 @@ def nearest_folder(target: Path) -> Path:
 
 def _has_room(folder: Path) -> bool:
     try:
-        return shutil.disk_usage(folder).free >= _ROOM_NEEDED
+        usage = shutil.disk_usage(folder)
     except OSError:
         return True
+    return usage.free >= _ROOM_NEEDED or usage.total == 0  # no disk at all, such as /proc
+
+
+def _obstacle(target: Path) -> Path:
+    """The file that stands where a folder is wanted, nearest to the root."""
+    found = [path for path in (target, *target.absolute().parents) if path.is_file()]
+    return found[-1] if found else target
+
+
+def _words(error: Exception) -> str:
+    """What went wrong, without error numbers and names of temporary files."""
+    text = error.strerror if isinstance(error, OSError) else str(error)
+    return text or type(error).__name__

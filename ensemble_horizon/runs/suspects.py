@@ -84,15 +84,14 @@ def _values(catalogue: Catalogue, content: Content, pair: Pair) -> Iterator[Faul
     if pair is None:
         return
     units = catalogue.variables[content.variable].units
-    unit = f" {units} in the units of the file" if units else ""
+    unit = f", in {units} as in the file" if units else ""
     for member in np.flatnonzero((content.outside > 0).any(axis=0)):
         bad = content.outside[:, member] > 0
         low, high = content.low[bad, member].min(), content.high[bad, member].max()
-        count = int(content.outside[bad, member].sum())
         message = (
             f"{content.variable!r} goes from {low:.6g} to {high:.6g} at "
             f"{name_leads(catalogue.leads[bad])}, outside the plausible {pair[0]:g} to {pair[1]:g}"
-            f"{unit} ({count} {'cell' if count == 1 else 'cells'})"
+            f" ({int(content.outside[bad, member].sum())} cells){unit}"
         )
         yield _fault("implausible-values", catalogue, content, member, bad, message)
 

@@ -68,7 +68,7 @@ def converter(from_units: str, to_units: str, what: str = "units") -> tuple[floa
             what,
             expected=f"units that {from_units!r} converts to",
             found=repr(to_units),
-            remedy="ask for units of the same kind as those of the file",
+            remedy=f"name units of the same kind as {from_units!r}",
         )
     ends = np.array([0.0, 1.0, 2.0])
     zero, one, two = (float(value) for value in source.convert(ends, target))

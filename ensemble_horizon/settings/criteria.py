@@ -88,7 +88,8 @@ def _amount(value: float | str, units: str, key: str) -> float:
                 found=repr(value),
                 remedy="write number, space, unit",
             )
-        return _above_zero(amount * difference_scale(unit.strip(), units, key), key)
+        # This way round, because what the settings ask for is what a message calls found.
+        return _above_zero(amount / difference_scale(units, unit.strip(), key), key)
     return _above_zero(float(value), key)
 
 
