@@ -12,8 +12,8 @@ float32, zlib level 4, one lead per chunk) and reports
     (d) the same with 90 percent intervals at every point,
 
 the peak memory of (c) and (d) over all their processes, and the fits alone. Each of (a), (c) and
-(d), and each kind of fit, is run several times and the smallest is kept. The numbers are for comparison with one
-another: absolute seconds depend on the machine.
+(d), and each kind of fit, is run several times and the smallest is kept. The numbers are for
+comparison with one another: absolute seconds depend on the machine.
 """
 
 from __future__ import annotations
