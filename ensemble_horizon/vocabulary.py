@@ -48,7 +48,7 @@ STATUS_MEANING = {
     Status.beyond_run: "not exceeded by the last lead (censored)",
     Status.at_start: "exceeded at the first lead",
     Status.no_growth: "the spread does not grow, so there is no limit to state",
-    Status.no_data: "too little data",
+    Status.no_data: "too little data, or the criterion rests on what is not known",
 }
 
 STATUS_ATTRIBUTES = {

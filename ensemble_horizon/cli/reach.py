@@ -38,7 +38,8 @@ def command(
 ) -> None:
     """Say how much lead a smaller initial error, or another tolerance, would buy.
 
-    Asks the laws that the last estimate with CONFIG fitted; run that first.
+    Asks the laws that the last estimate with CONFIG fitted, pooled over starts where there were
+    several; run that first.
     """
     for option, amounts in (("--tolerance", tolerances), ("--smaller", factors)):
         for amount in amounts:
@@ -57,8 +58,10 @@ def command(
     for answer in answers:
         screen.print(_bought(answer), _doubling(answer))
     screen.print(
-        "A law fitted to this run is taken beyond what the run shows wherever errors are smaller, "
-        "or leads longer, than in it.",
+        "Limits here are those of the fitted law; the estimate gives those of the measured curve, "
+        "so compare the gains. No limit: the law never comes to the tolerance from there, or it "
+        "saturates below. A law fitted to this run is taken beyond what the run shows wherever "
+        "errors are smaller, or leads longer, than in it.",
         CAUTION,
         style="italic",
     )
@@ -70,7 +73,7 @@ def _bought(answer: Reach) -> Table:
         if np.isfinite(answer.initial_error)
         else "no law could be fitted"
     )
-    title = f"{answer.place}, {answer.variable}: {fitted}"
+    title = f"{answer.place}, {answer.variable}, {answer.start}: {fitted}"
     table = Table(title=escape(title), title_justify="left")
     table.add_column(escape(f"tolerance ({answer.units})"), justify="right")
     for factor in answer.bought["error_factor"].values:

@@ -19,11 +19,13 @@ class Crossing:
     time : (N,) lead of the crossing, NaN where there is none
     at_start : (N,) bool, exceeded at the first lead that has a value; ``time`` is NaN there
     points : (N,) int, leads that have a value
+    first : (N,) the first of those leads, NaN where there is none
     """
 
     time: np.ndarray
     at_start: np.ndarray
     points: np.ndarray
+    first: np.ndarray
 
 
 def first_crossing(
@@ -61,6 +63,7 @@ def first_crossing(
     number = curves.shape[1]
     level = np.broadcast_to(np.asarray(threshold, dtype=float), (number,))
     previous_lead = np.full(number, np.nan)
+    first = np.full(number, np.nan)
     previous = np.full(number, np.nan)
     candidate = np.full(number, np.nan)
     time = np.full(number, np.nan)
@@ -81,7 +84,8 @@ def first_crossing(
                         positive, np.log(level / previous) / np.log(row / previous), share
                     )
                 step = share * (moment - previous_lead)
-                begun = np.where(points == 0, moment, previous_lead + step)
+                # Rounding must not place a crossing beyond the lead that shows it.
+                begun = np.where(points == 0, moment, np.minimum(previous_lead + step, moment))
                 candidate = np.where(opens, begun, candidate)
                 from_start = np.where(opens, points == 0, from_start)
             active = np.where(known, up, active)
@@ -92,6 +96,7 @@ def first_crossing(
             done |= lasts
             previous = np.where(known, row, previous)
             previous_lead = np.where(known, moment, previous_lead)
+            first = np.where(known & (points == 0), moment, first)
             points += known
     at_start = done & from_start
-    return Crossing(np.where(at_start, np.nan, time), at_start, points)
+    return Crossing(np.where(at_start, np.nan, time), at_start, points, first)

@@ -16,6 +16,7 @@ from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
 from ensemble_horizon.spread.sampling import LeadNoise, chi_square_quantile
 
 LN2 = float(np.log(2.0))
+_MOST_ERROR = 4.0  # times the size itself: beyond that the curve does not tell the size at all
 QUANTITIES = ("growth_rate", "initial_error", "saturation")
 
 
@@ -114,8 +115,13 @@ def _growth_of(
         values.update({quantity: value, f"{quantity}_low": low, f"{quantity}_high": high})
         if quantity == "saturation" and np.isfinite(value):
             pull = weight / value
-    for end, rate in (("", ""), ("_low", "_high"), ("_high", "_low")):
-        values[f"doubling_time{end}"] = _doubling(values[f"growth_rate{rate}"])
+    # The law's own doubling time: under the power law the rate falls while the error doubles.
+    middle = float(law.doubling_time(parameters)[0])
+    plain = _doubling(values["growth_rate"])
+    longer = middle / plain if 0 < plain < np.inf else 1.0
+    values["doubling_time"] = middle
+    for end, rate in (("_low", "_high"), ("_high", "_low")):
+        values[f"doubling_time{end}"] = longer * _doubling(values[f"growth_rate{rate}"])
     initial = law.initial_error(parameters)
     values["doubling_time_at_start"] = float(law.doubling_time(parameters, initial)[0])
     return Growth(law.name, law.value(parameters, lead)[0], values, parameters[0], pull)
@@ -136,6 +142,8 @@ def _size_interval(
     """
     if not (value > 0 and np.isfinite(value)):
         return float("nan"), float("nan")
+    if error > _MOST_ERROR * value:
+        return 0.0, float("inf")
     relative = 4 * max(error / value, 1e-6) ** 2
     half = (1 + np.sqrt(1 + 2 * relative)) / (2 * relative)  # inverse of trigamma, near enough
     bias = float(np.median(_log_bias(noise.dof / 2))) - float(_log_bias(np.array(half)))

@@ -64,7 +64,8 @@ def horizon(
     -------
     Dataset without ``lead``: ``horizon`` (lead units, NaN unless the status is ``reached``),
     ``status`` (int8 CF flags, see `Status`), ``threshold``, and with ``sampling`` also ``low`` and
-    ``high``, infinite where they lie beyond the run.
+    ``high``, infinite where they lie beyond the run, NaN where the status is ``no_growth`` or
+    ``no_data``.
 
     Raises
     ------
@@ -124,7 +125,9 @@ def horizon(
                 found="a sampling dataset, which speaks of spread",
                 remedy="leave it out; shares have a binomial interval of their own",
             )
-        data["low"], data["high"] = _bounds(lead, flat, threshold, noise, confidence, hold)
+        silent = (status == Status.no_data) | (status == Status.no_growth)
+        ends = _bounds(lead, flat, threshold, noise, confidence, hold)
+        data["low"], data["high"] = (np.where(silent, np.nan, end) for end in ends)
     return _labelled(data, curve, rest, values.shape[1:], dim, criterion)
 
 

@@ -76,6 +76,11 @@ def calibrated_moves(
         Derivative of ln(threshold) with respect to ln(curve) at each lead, where the threshold is
         itself estimated from the curve (a fraction of its saturation).
     """
+    there = np.isfinite(center)
+    if not there.all():
+        lead, center = lead[there], center[there]
+        noise = _part_of(noise, there)
+        threshold_pull = None if threshold_pull is None else threshold_pull[there]
     crossing = first_crossing(lead, center[:, np.newaxis], threshold, 0.0)
     moment = float(crossing.time[0])
     scale = np.sqrt(special.polygamma(1, noise.dof / 2) / 4)
@@ -92,13 +97,16 @@ def calibrated_moves(
         return Moves(plain.up * widen, plain.down * widen)
     if pull is None:
         chosen = _telling_leads(lead, distance, moment, hold)
-        part = LeadNoise(noise.dof[chosen], noise.correlation[chosen, chosen])
-        draws = _noise_draws(part, _DRAWS)
-    need = distance[chosen] - draws
+        draws = _noise_draws(_part_of(noise, chosen), _DRAWS)
+    scatter = -draws
     if pull is not None:
-        need = need + pull[:, np.newaxis] / scale
-    least = _least_move(lead[chosen], need, distance[chosen], moment, hold)
+        scatter = scatter + pull[:, np.newaxis] / scale
+    least = _least_move(lead[chosen], scatter, distance[chosen], moment, hold)
     return _quantiles(least * noise.inflation, confidence)
+
+
+def _part_of(noise: LeadNoise, chosen: slice | np.ndarray) -> LeadNoise:
+    return LeadNoise(noise.dof[chosen], noise.correlation[chosen][:, chosen], noise.inflation)
 
 
 def _telling_leads(lead: np.ndarray, distance: np.ndarray, moment: float, hold: float) -> slice:
@@ -110,14 +118,16 @@ def _telling_leads(lead: np.ndarray, distance: np.ndarray, moment: float, hold: 
 
 
 def _least_move(
-    lead: np.ndarray, need: np.ndarray, distance: np.ndarray, moment: float, hold: float
+    lead: np.ndarray, scatter: np.ndarray, distance: np.ndarray, moment: float, hold: float
 ) -> np.ndarray:
-    """c* (D,) from what each lead needs (D, L); the crossing itself lies between two leads."""
+    """c* (D,) from the distance of each lead (L,) to the threshold and its scatter (D, L).
+
+    The crossing itself lies between two leads, at no distance.
+    """
     after = int(np.searchsorted(lead, moment))
     share = (moment - lead[after - 1]) / (lead[after] - lead[after - 1])
-    freed = need[:, after - 1 : after + 1] - distance[after - 1 : after + 1]
-    at_crossing = (1 - share) * freed[:, 0] + share * freed[:, 1]
-    need = np.insert(need, after, at_crossing, axis=1)
+    at_crossing = (1 - share) * scatter[:, after - 1] + share * scatter[:, after]
+    need = np.insert(distance + scatter, after, at_crossing, axis=1)
     moments = np.insert(lead, after, moment)
     if hold > 0:
         windows = [(moments >= t) & (moments <= t + hold) for t in moments[: after + 1]]
@@ -170,7 +180,7 @@ def move_table(
 ) -> MoveTable:
     """Tabulate moves for curves that grow at a steady rate about their crossing.
 
-    The crossing is taken midway between two leads.
+    The crossing is taken midway between two leads; leads may be unevenly spaced.
     """
     size = lead.size
     if size < 2:
@@ -182,9 +192,10 @@ def move_table(
     down = np.empty_like(up)
     for before in range(size):
         step = float(lead[min(before + 1, size - 1)] - lead[min(before, size - 2)])
-        last = before + 2 + int(np.ceil(hold / step)) if hold > 0 else before + 1
-        chosen = np.arange(max(0, before - _REACH), min(max(last, before + 1), size))
-        moments = np.append((chosen - before - 0.5) * step, 0.0)
+        crossing = float(lead[before]) + step / 2
+        last = int(np.searchsorted(lead, crossing + hold, side="right"))
+        chosen = np.arange(max(0, before - _REACH), max(last, before + 1))
+        moments = np.append(lead[chosen] - crossing, 0.0)
         middle = 0.5 * (draws[:, before] + draws[:, min(before + 1, size - 1)])
         local = np.column_stack([draws[:, chosen], middle])
         order = np.argsort(moments, kind="stable")
@@ -225,7 +236,7 @@ def spread_bounds(
     lowered = _moved(curves, dof, np.asarray(moves.down))
     # Between two leads a growing error runs below the straight line: the later placing, here.
     down = first_crossing(lead, lowered, level, hold, geometric=True)
-    return _ends(lead, up, down, np.isfinite(level) & (up.points > 0))
+    return _ends(up, down, np.isfinite(level) & (up.points > 0))
 
 
 def _moved(curves: np.ndarray, dof: np.ndarray, z: np.ndarray) -> np.ndarray:
@@ -272,7 +283,7 @@ def share_bounds(
     low, high = share_band(shares, number, tail)
     up = first_crossing(lead, high, probability, hold)
     down = first_crossing(lead, low, probability, hold)
-    return _ends(lead, up, down, up.points > 0)
+    return _ends(up, down, up.points > 0)
 
 
 def share_band(
@@ -295,9 +306,7 @@ def _jeffreys(
     return np.where(shares > 0, low, shares), np.where(shares < 1, high, shares)
 
 
-def _ends(
-    lead: np.ndarray, up: Crossing, down: Crossing, known: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
+def _ends(up: Crossing, down: Crossing, known: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     low = np.where(up.at_start, 0.0, np.where(np.isfinite(up.time), up.time, np.inf))
-    high = np.where(down.at_start, lead[0], np.where(np.isfinite(down.time), down.time, np.inf))
+    high = np.where(down.at_start, down.first, np.where(np.isfinite(down.time), down.time, np.inf))
     return np.where(known, low, np.nan), np.where(known, high, np.nan)

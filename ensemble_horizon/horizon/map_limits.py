@@ -164,7 +164,7 @@ def _limit(
             batch.lead, spread, threshold, batch.noise.dof, plain, options.hold
         )
     else:
-        before = _lead_before(batch.lead, time)
+        before = _lead_before(batch.lead, time, status)
         moves = _moves(batch, threshold, before, selection)
         if criterion.kind == "saturation_fraction":
             moves = _moves_of_estimated_threshold(batch, spread, selection, options, moves, before)
@@ -176,9 +176,10 @@ def _limit(
     return row
 
 
-def _lead_before(lead: np.ndarray, time: np.ndarray) -> np.ndarray:
+def _lead_before(lead: np.ndarray, time: np.ndarray, status: np.ndarray) -> np.ndarray:
     """Position (N,) of the lead before each crossing; the last but one where there is none."""
     crossing = np.where(np.isfinite(time), time, lead[-1])
+    crossing[status == Status.at_start] = lead[0]
     return np.clip(np.searchsorted(lead, crossing) - 1, 0, lead.size - 2)
 
 

@@ -48,6 +48,7 @@ def _region_curve(
         # (A, T, M): share of the region's area where each member is beyond
         beyond = summary.region_beyond[:, :, number] / weight[:, np.newaxis]
     present = np.isfinite(summary.low)
+    beyond = beyond * present.sum(axis=1)[:, np.newaxis]
     climatology = float("nan")
     if variable.climatology is not None:
         local = variable.climatology[region.index]
@@ -107,11 +108,14 @@ def pool_starts(curves: Sequence[Curve], confidence: float) -> Curve:
     shares, numbers = {}, {}
     for distance in curves[0].shares:
         each = np.stack([curve.shares[distance] for curve in curves])
-        share = each.mean(axis=0)
-        worth = sum(curve.share_numbers[distance] for curve in curves)
+        known = np.isfinite(each)
+        starts = known.sum(axis=0)
+        share = mean_over_starts(each)
+        worth = np.sum([curve.share_numbers[distance] for curve in curves] * known, axis=0)
         if len(curves) >= LEAST_STARTS:
             with np.errstate(invalid="ignore", divide="ignore"):
-                between = share * (1 - share) / (each.var(axis=0, ddof=1) / len(curves))
+                scatter = np.where(known, (each - share) ** 2, 0.0).sum(axis=0) / (starts - 1)
+                between = share * (1 - share) / (scatter / starts)
             worth = np.fmin(worth, np.where(np.isfinite(between), between, worth))
         shares[distance], numbers[distance] = share, np.maximum(worth, 1.0)
     spread = np.sqrt(mean_over_starts(variances))

@@ -63,7 +63,11 @@ class Engine:
         self._limits = threadpool_limits(limits=1)
         _install(self._common)
         if self.workers > 1:
-            self._pool = _start_pool(self.workers, self._common)
+            try:
+                self._pool = _start_pool(self.workers, self._common)
+            except BaseException:
+                self.__exit__(None, None, None)
+                raise
         return self
 
     def __exit__(

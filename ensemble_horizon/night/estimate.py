@@ -153,7 +153,7 @@ class _Job:
                 maps.append(self._map(engine, fields, variable, members[-1], map_confidence))
         if self.mode == "pooled":
             fields = pooled.fields(settings.growth.confidence)
-            maps.append(self._map(engine, fields, variable, sum(members), map_confidence))
+            maps.append(self._map(engine, fields, variable, max(members), map_confidence))
         return self._result(variable, lines, members, maps)
 
     def _read(self, engine: Engine, number: int, variable: Variable, start: int) -> Summary:

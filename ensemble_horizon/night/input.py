@@ -104,12 +104,8 @@ def find_runs(settings: Settings, progress: Callable[[int, int], None] | None = 
         raise _with_keys(settings, error) from error
     control = settings.runs.control
     if control is not None and control not in catalogue.members:
-        raise SettingsError(
-            "runs.control",
-            expected=f"a member of the runs: {', '.join(map(str, catalogue.members))}",
-            found=repr(control),
-            remedy="name the unperturbed member as the files do, or take the key out",
-        )
+        there = ", ".join(map(str, catalogue.members))
+        log.warning("runs: the control (runs.control = %r) is not there, only %s", control, there)
     return catalogue
 
 

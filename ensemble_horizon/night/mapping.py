@@ -20,6 +20,7 @@ from ensemble_horizon.spread.moments import member_variance
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sample import SampleLayout
 from ensemble_horizon.spread.sampling import (
+    LEAST_STARTS,
     LeadNoise,
     mean_over_starts,
     noise_from_points,
@@ -51,15 +52,16 @@ class Fields:
 
 def noise_of_start(summary: Summary, layout: SampleLayout, kurtosis: float) -> FieldNoise:
     """Noise of the maps of one start, from its sample points."""
-    blocks = tuple(
-        noise_from_points(summary.sample_values[:, :, layout.block_of_sample == block], kurtosis)
-        for block in range(layout.blocks)
-    )
-    return FieldNoise(blocks, _typical(blocks))
+    blocks: list[LeadNoise | None] = []
+    for block in range(layout.blocks):
+        values = summary.sample_values[:, :, layout.block_of_sample == block]
+        told = (np.isfinite(values).sum(axis=1) > 1).any()
+        blocks.append(noise_from_points(values, kurtosis) if told else None)
+    return _field_noise(blocks, summary.sample_values.shape[0])
 
 
 class PooledFields:
-    """Fields averaged over starts as they come in; memory does not grow with the fields."""
+    """Fields averaged over starts as they come in; only the thin sample is kept of each start."""
 
     def __init__(self, layout: SampleLayout) -> None:
         self._layout = layout
@@ -85,7 +87,8 @@ class PooledFields:
         leads, members, points = summary.sample_values.shape
         flat = summary.sample_values.transpose(1, 0, 2).reshape(members, -1)
         self._samples.append(member_variance(flat)[0].reshape(leads, points))
-        self._noises.append(noise)
+        if len(self._noises) < LEAST_STARTS:  # with more starts the scatter between them counts
+            self._noises.append(noise)
 
     def fields(self, confidence: float) -> Fields:
         """What all starts together say."""
@@ -98,17 +101,15 @@ class PooledFields:
 
     def _noise(self, confidence: float) -> FieldNoise:
         samples = np.stack(self._samples)
-        known = np.isfinite(mean_over_starts(samples)).all(axis=0)
-        blocks = []
+        known = np.isfinite(mean_over_starts(samples)).any(axis=0)
+        blocks: list[LeadNoise | None] = []
         for block in range(self._layout.blocks):
             chosen = (self._layout.block_of_sample == block) & known
             members = [noise.blocks[block] for noise in self._noises]
             blocks.append(
-                pooled_noise(samples[:, :, chosen], members, confidence)
-                if chosen.any()
-                else members[0]
+                pooled_noise(samples[:, :, chosen], members, confidence) if chosen.any() else None
             )
-        return FieldNoise(tuple(blocks), _typical(blocks))
+        return _field_noise(blocks, samples.shape[1])
 
 
 def map_fields(
@@ -166,10 +167,14 @@ def _limits(task: tuple[PointBatch, MapOptions]) -> dict[str, np.ndarray]:
     return limits_of_points(*task)
 
 
-def _typical(blocks: Sequence[LeadNoise]) -> LeadNoise:
-    """The mean of the noise of blocks."""
-    return LeadNoise(
-        np.mean([noise.dof for noise in blocks], axis=0),
-        np.mean([noise.correlation for noise in blocks], axis=0),
-        float(np.mean([noise.inflation for noise in blocks])),
+def _field_noise(blocks: Sequence[LeadNoise | None], leads: int) -> FieldNoise:
+    """The noise of a field from that of its blocks; None marks a block without values."""
+    told = [noise for noise in blocks if noise is not None]
+    if not told:
+        told = [LeadNoise(np.ones(leads), np.eye(leads))]
+    whole = LeadNoise(
+        np.mean([noise.dof for noise in told], axis=0),
+        np.mean([noise.correlation for noise in told], axis=0),
+        float(np.mean([noise.inflation for noise in told])),
     )
+    return FieldNoise(tuple(whole if noise is None else noise for noise in blocks), whole)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -13,9 +14,12 @@ from ensemble_horizon.errors import InputError, SettingsError
 from ensemble_horizon.growth import LAWS, doubling_at
 from ensemble_horizon.horizon import reach
 from ensemble_horizon.products.netcdf import valid_name
+from ensemble_horizon.products.wording import start_text
 from ensemble_horizon.runs.handles import diagnose
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.vocabulary import PLACE, START
+
+log = logging.getLogger(__name__)
 
 _SIZES = 6
 _NEEDED = {"law", "spread", "initial_error", "saturation", "growth_rate", "doubling_time",
@@ -35,6 +39,7 @@ class Reach:
     law: str
     units: str
     lead_units: str
+    start: str
     initial_error: float
     last_lead: float
     bought: xr.Dataset
@@ -49,7 +54,9 @@ def reach_of_products(
     tolerances: Sequence[float],
     factors: Sequence[float],
 ) -> list[Reach]:
-    """Answers for one variable at one place, or at all of them, from the newest start.
+    """Answers for one variable at one place, or at all of them.
+
+    From the fit pooled over starts where the estimate had several.
 
     Raises
     ------
@@ -63,6 +70,8 @@ def reach_of_products(
         raise _unknown("--variable", variable, list(settings.variables))
     try:
         with xr.open_dataset(path, decode_timedelta=False) as stored:
+            if stored.attrs.get("settings") != settings.text:
+                log.warning("%s was made with other settings: estimate again to be sure", path)
             fits = _fits(stored.load(), list(settings.variables), variable)
     except (OSError, ValueError, RuntimeError) as error:
         raise _no_products(path, diagnose(str(path), error).found) from error
@@ -80,9 +89,15 @@ def _fits(stored: xr.Dataset, variables: list[str], variable: str) -> xr.Dataset
     taken: set[str] = set()
     prefixes = {name: valid_name(name, taken) for name in variables}
     prefix = f"{prefixes[variable]}_"
+    if f"{prefix}pooled_law" in stored:
+        prefix = f"{prefix}pooled_"
     own = {name: name.removeprefix(prefix) for name in map(str, stored) if name.startswith(prefix)}
     fits = stored[list(own)].rename(own)
     return fits.isel({START: -1}) if START in fits.dims else fits
+
+
+def _start_of(fit: xr.Dataset) -> str:
+    return start_text(fit[START].values[()]) if START in fit.coords else "all starts pooled"
 
 
 def _answer(
@@ -103,6 +118,7 @@ def _answer(
         law=law,
         units=str(fit["initial_error"].attrs.get("units", "1")),
         lead_units=str(fit["doubling_time"].attrs.get("units", "1")),
+        start=_start_of(fit),
         initial_error=initial,
         last_lead=float(fit["lead"].max()),
         bought=bought,

@@ -110,7 +110,7 @@ def _spread(axes: Axes, panel: Panel) -> None:
     axes.set_axisbelow(True)
     if not np.isfinite(spread).any():
         axes.set_yticks([])
-        words = "no curve: too little data"
+        words = "no curve: too little known"
         axes.text(
             0.5, 0.5, words, transform=axes.transAxes, ha="center", fontsize=9, color=SOFT_INK
         )
@@ -161,7 +161,7 @@ def _chance(axes: Axes, panel: Panel) -> None:
         axes.axhline(limit.threshold, color=colour_of(position), linewidth=1.0, zorder=2)
         if limit.status == Status.reached:
             _drop(axes, limit.horizon, 0.0, limit.threshold, position)
-    words = "chance" if drawn else "no chance: too little data"
+    words = "chance" if drawn else "no chance: too little known"
     axes.text(0.012, 0.9, words, transform=axes.transAxes, va="top", fontsize=7.5, color=SOFT_INK)
 
 
@@ -206,6 +206,13 @@ def _strip(axes: Axes, panel: Panel) -> None:
         elif limit.status == Status.beyond_run:
             axes.plot(last, position, ">", color=colour, markersize=6, clip_on=False)
             place, align = last - 1.5 * letter, "right"
+            if np.isfinite(limit.low) and limit.low < last:
+                bar, row = [limit.low, last], [position, position]
+                axes.plot(bar, row, color=colour, linewidth=4.5, alpha=0.4, solid_capstyle="butt")
+                place = limit.low - 1.5 * letter
+                if place - len(words) * letter < first:
+                    place = last - 1.5 * letter
+                    veil = {"boxstyle": "square,pad=0.1", "fc": "#f5f6f4e6", "ec": "none"}
         else:
             if limit.status == Status.at_start:
                 axes.plot(first, position, "<", color=colour, markersize=6, clip_on=False)

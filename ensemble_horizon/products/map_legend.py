@@ -16,7 +16,7 @@ STATUS_WORDS = {
     Status.beyond_run: "beyond the run",
     Status.at_start: "exceeded at the first lead",
     Status.no_growth: "no growth, so no limit",
-    Status.no_data: "too little data",
+    Status.no_data: "too little known",
 }
 _BAR = 18
 

@@ -105,18 +105,21 @@ def horizon_text(
     '54 h (47 to 63)'
     >>> horizon_text(Status.beyond_run, nan, nan, float("inf"), 310, 240, "hours")
     'beyond the run (> 240 h; law projects 310 h)'
+    >>> horizon_text(Status.beyond_run, nan, 112, float("inf"), nan, 240, "hours")
+    'beyond the run (> 240 h; perhaps from 112 h)'
     """
     if status == Status.reached:
         return f"{duration(horizon, units)} {interval(low, high, units)}".strip()
     if status == Status.beyond_run:
+        early = f"; perhaps from {duration(low, units)}" if np.isfinite(low) else ""
         law = f"; law projects {duration(projected, units)}" if np.isfinite(projected) else ""
-        return f"beyond the run (> {duration(last_lead, units)}{law})"
+        return f"beyond the run (> {duration(last_lead, units)}{law}{early})"
     if status == Status.at_start:
         lead = f" ({duration(horizon, units)})" if np.isfinite(horizon) and horizon > 0 else ""
         return f"exceeded at the first lead{lead}"
     if status == Status.no_growth:
         return "no growth, so no limit"
-    return "too little data"
+    return "too little known"
 
 
 def iso_start(start: Any, label: str = "") -> str:

@@ -47,7 +47,7 @@ def area_curve(
     >>> round(float(area_curve(field)), 4)
     3.5355
     """
-    space = _spatial_dimensions(field)
+    space = spatial_dimensions(field)
     latitude, longitude = grid_points({name: field[name] for name in (LATITUDE, LONGITUDE)})
     cells = None if area is None else area.transpose(*space).values
     flat = region_weights(region or Region("domain"), latitude, longitude, cells)
@@ -66,14 +66,21 @@ def site_curve(field: xr.DataArray, site: Site) -> xr.DataArray:
     ArgumentError
         if the nearest point lies beyond the site's reach.
     """
-    space = _spatial_dimensions(field)
+    space = spatial_dimensions(field)
     latitude, longitude = grid_points({name: field[name] for name in (LATITUDE, LONGITUDE)})
     index, _ = nearest_point(site, latitude, longitude)
     where = np.unravel_index(index, [field.sizes[name] for name in space])
     return field.isel(dict(zip(space, (int(i) for i in where), strict=True)))
 
 
-def _spatial_dimensions(field: xr.DataArray) -> tuple[str, ...]:
+def spatial_dimensions(field: xr.DataArray) -> tuple[str, ...]:
+    """Spatial dimensions of a field in the order of `grid_points`: those of its coordinates.
+
+    Raises
+    ------
+    ArgumentError
+        if the field has no latitude and longitude.
+    """
     if LATITUDE not in field.coords or LONGITUDE not in field.coords:
         raise ArgumentError(
             "field",

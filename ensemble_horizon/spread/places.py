@@ -12,6 +12,8 @@ from ensemble_horizon.checks import require_positive
 from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.vocabulary import LATITUDE, LONGITUDE
 
+# Degrees: coordinates in single precision miss the edge of a region by up to this much.
+_EDGE = 1e-4
 EARTH_RADIUS_KM = 6371.0  # mean radius, rounded (common practice)
 
 
@@ -45,22 +47,22 @@ class Region:
                 found=f"south = {self.south}, north = {self.north}",
                 remedy="correct the two latitudes",
             )
-        if self.west == self.east:
+        if abs(self.east - self.west) % 360 == 0 and self.east - self.west < 360:
             raise ArgumentError(
                 f"region {self.name!r}",
                 expected="west and east to differ (use -180 and 180 for the whole circle)",
-                found=f"west = east = {self.west}",
+                found=f"west = {self.west}, east = {self.east}, one and the same meridian",
                 remedy="correct the two longitudes",
             )
 
     def contains(self, latitude: np.ndarray | float, longitude: np.ndarray | float) -> np.ndarray:
         """Whether points lie in the box, edges included."""
         latitude, longitude = np.asarray(latitude), np.asarray(longitude)
-        inside = (latitude >= self.south) & (latitude <= self.north)
+        inside = (latitude >= self.south - _EDGE) & (latitude <= self.north + _EDGE)
         if self.east - self.west >= 360:
             return np.asarray(inside)
         width = (self.east - self.west) % 360
-        return np.asarray(inside & ((longitude - self.west) % 360 <= width))
+        return np.asarray(inside & ((longitude - self.west + _EDGE) % 360 <= width + 2 * _EDGE))
 
 
 @dataclass(frozen=True)
@@ -178,6 +180,7 @@ def nearest_point(site: Site, latitude: np.ndarray, longitude: np.ndarray) -> tu
         if the nearest point is further away than the site's reach.
     """
     distance = great_circle_km(site.latitude, site.longitude, latitude, longitude)
+    distance = np.where(np.isfinite(distance), distance, np.inf)  # grids with holes
     index = int(np.argmin(distance))
     reach = site.reach_km
     if reach is None:

@@ -61,11 +61,10 @@ class Summary:
     region_sum: np.ndarray  # (T, R) sum of weight x variance over points with a value
     region_weight: np.ndarray  # (T, R) sum of those weights
     gram: np.ndarray  # (T, R, M, M) weighted inner products of member deviations
-    region_beyond: np.ndarray  # (A, T, R, M) weighted share of points where the member is beyond
+    region_beyond: np.ndarray  # (A, T, R, M) weights where a member is beyond, over members there
     site_values: np.ndarray  # (T, M, S)
     sample_values: np.ndarray  # (T, M, K)
     gaps: np.ndarray  # (T, M) points without a value
-    common_gaps: np.ndarray  # (T,) points without a value in any member
     low: np.ndarray  # (T, M) smallest value
     high: np.ndarray  # (T, M) largest value
 
@@ -86,7 +85,6 @@ class Summary:
         ):
             np.copyto(kept, found, where=np.isfinite(found))
         self.gaps[leads] += part.gaps
-        self.common_gaps[leads] += part.common_gaps
         self.low[leads] = np.fmin(self.low[leads], part.low)
         self.high[leads] = np.fmax(self.high[leads], part.high)
 
@@ -186,7 +184,9 @@ def _reduce_shares(
         summary.share[number, lead] = np.where(count > 0, share, np.nan)
     rows = np.flatnonzero(present)
     for place, part in enumerate(parts):
-        weight = np.where(count[part.position] > 1, part.weight, 0.0)
+        # Over the members there, so that the sum over members is the share, gaps or not.
+        here = count[part.position]
+        weight = np.where(here > 1, part.weight / np.maximum(here, 1), 0.0)
         summary.region_beyond[number, lead, place, rows] += far[:, part.position] @ weight
 
 
@@ -206,7 +206,6 @@ def empty_summary(reduction: Reduction, members: int, leads: int, size: int) -> 
         site_values=np.full((leads, members, reduction.sites.size), np.nan),
         sample_values=np.full((leads, members, reduction.sample.size), np.nan, dtype=np.float32),
         gaps=np.zeros((leads, members), dtype=np.int64),
-        common_gaps=np.zeros(leads, dtype=np.int64),
         low=np.full((leads, members), np.nan),
         high=np.full((leads, members), np.nan),
     )
@@ -219,7 +218,6 @@ def _note_health(summary: Summary, lead: int, values: np.ndarray) -> np.ndarray:
         gaps = np.zeros(values.shape, dtype=bool)
         gaps[broken] = ~np.isfinite(values[broken])
         summary.gaps[lead] = gaps.sum(axis=1)
-        summary.common_gaps[lead] = gaps.all(axis=0).sum() if broken.all() else 0
         for member in np.flatnonzero(broken):
             finite = values[member][~gaps[member]]
             low[member], high[member] = (

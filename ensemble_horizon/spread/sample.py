@@ -57,16 +57,33 @@ def sample_layout(shape: tuple[int, ...], members: int, leads: int) -> SampleLay
     most = min(MOST_POINTS, max(64, _MOST_BYTES // (4 * members * leads)))
     along = int(np.clip(np.sqrt(size / _POINTS_PER_BLOCK), 1, MOST_BLOCKS))
     if len(shape) == 2:
-        step = int(np.ceil(np.sqrt(size / most)))
+        down, across = _steps(shape, most, along)
         chosen = np.zeros(shape, dtype=bool)
-        chosen[step // 2 :: step, step // 2 :: step] = True
+        chosen[down // 2 :: down, across // 2 :: across] = True
         rows = np.arange(shape[0]) * min(along, shape[0]) // shape[0]
         columns = np.arange(shape[1]) * min(along, shape[1]) // shape[1]
         block = rows[:, np.newaxis] * min(along, shape[1]) + columns
         point_block, index = block.ravel(), np.flatnonzero(chosen.ravel())
     else:
-        step = int(np.ceil(size / most))
+        step = max(1, min(int(np.ceil(size / most)), size // along**2))
         index = np.arange(step // 2, size, step)
         point_block = np.arange(size) * along**2 // size
     _, dense = np.unique(point_block, return_inverse=True)
     return SampleLayout(index, dense[index], dense)
+
+
+def _steps(shape: tuple[int, ...], most: int, along: int) -> tuple[int, int]:
+    """Steps down and across a grid for about ``most`` points, some of them in every block.
+
+    A step no longer than a block is wide meets every block; on a narrow grid the step along the
+    other dimension makes up for it.
+    """
+    equal = int(np.ceil(np.sqrt(shape[0] * shape[1] / most)))
+    widths = [size // min(along, size) for size in shape]
+    first, second = (0, 1) if widths[0] <= widths[1] else (1, 0)
+    step = [equal, equal]
+    step[first] = min(equal, widths[first])
+    lines = len(range(step[first] // 2, shape[first], step[first]))
+    needed = int(np.ceil(lines * shape[second] / most))
+    step[second] = min(max(equal, needed), widths[second])
+    return step[0], step[1]

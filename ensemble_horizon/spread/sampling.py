@@ -25,9 +25,11 @@ import xarray as xr
 from scipy import special
 
 from ensemble_horizon.checks import require_dimension
+from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.spread.curves import spatial_dimensions
 from ensemble_horizon.spread.moments import member_deviations
 from ensemble_horizon.spread.places import Region, grid_points, region_weights
-from ensemble_horizon.vocabulary import LATITUDE, LEAD, LONGITUDE, MEMBER
+from ensemble_horizon.vocabulary import LATITUDE, LEAD, LONGITUDE, MEMBER, START
 
 LEAST_STARTS = 5
 
@@ -103,6 +105,8 @@ def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
         cross = (square - product / pair) * pair**2 / np.maximum((pair - 1) * (pair + 2), 1.0)
         own = np.maximum(np.diag(cross), np.diag(product) * 1e-6)
         dof = n * np.maximum(np.diag(product) - 2 * own / n, own) / own
+        # No value or no spread at a lead: nothing to tell patterns by, but still a number.
+        dof = np.where(own > 0, dof, n)
         correlation = cross / np.sqrt(own[:, np.newaxis] * own)
     return LeadNoise(_widen(dof, n, kurtosis), _as_correlation(correlation))
 
@@ -159,11 +163,15 @@ def pooled_kurtosis(values: np.ndarray) -> float:
     From 20 Gaussian members one point scatters by sqrt(24/20); as leads and neighbouring points
     repeat one another, only one point in four and no lead counts towards the precision of the mean.
     """
+    values = _complete_members(values)
     _, members, points = values.shape
     if members < 5 or points == 0:
         return 0.0
     complete = values[:, :, np.isfinite(values).all(axis=(0, 1))].astype(float)
     complete = complete - complete.mean(axis=1, keepdims=True)
+    complete = complete[(complete != 0).any(axis=(1, 2))]  # leads that all members share
+    if complete.shape[0] == 0:
+        return 0.0
     varying = (complete**2).sum(axis=1).min(axis=0) > 0
     if not varying.any():
         return 0.0
@@ -177,6 +185,13 @@ def pooled_kurtosis(values: np.ndarray) -> float:
     mean = float(np.mean(fourth.sum(axis=1) / np.maximum(square.sum(axis=1), 1e-300)))
     error = np.sqrt(24 / members / max(1.0, varying.sum() / 4))
     return mean if mean > 2 * error else 0.0
+
+
+def _complete_members(values: np.ndarray) -> np.ndarray:
+    """Leads (L, M, K) at which any member has a value, and the members that have one at all."""
+    here = np.isfinite(values).any(axis=2)
+    leads = here.any(axis=1)
+    return values[leads][:, here[leads].all(axis=0)]
 
 
 def pooled_noise(
@@ -202,17 +217,20 @@ def pooled_noise(
     """
     starts = variances.shape[0]
     mean = mean_over_starts(variances)
+    known = np.isfinite(variances)
     with np.errstate(invalid="ignore", divide="ignore"):
         relative_size = np.nan_to_num(variances / mean, nan=0.0, posinf=0.0)
+    # A start counts for more in the mean of a lead that other starts lack.
+    share = starts / np.maximum(known.sum(axis=0), 1)
     inflation = 1.0
     if starts >= LEAST_STARTS:
-        departure = np.where(np.isfinite(variances), relative_size - 1, 0.0)
+        departure = np.where(known & (mean > 0), relative_size - 1, 0.0) * share
         relative = _long_run_covariance(departure) / starts
         tail = 1 - (1 - confidence) / 2
         inflation = float(special.stdtrit(starts - 1, tail) / special.ndtri(tail))
     else:
         relative = np.zeros((mean.shape[0], mean.shape[0]))
-        for size, noise in zip(relative_size.mean(axis=2), noises, strict=True):
+        for size, noise in zip((relative_size * share).mean(axis=2), noises, strict=True):
             part = size * np.sqrt(2 / noise.dof)
             relative += part[:, np.newaxis] * part * noise.correlation
         relative /= starts**2
@@ -256,6 +274,12 @@ def sampling(
     -------
     Dataset with ``dof`` (lead) and ``noise_correlation`` (lead, lead_other).
 
+    Raises
+    ------
+    ArgumentError
+        if lead or member is missing, there are several starts, space lacks latitude and longitude,
+        or the region holds no point.
+
     Examples
     --------
     >>> values = np.random.default_rng(1).normal(size=(4, 20))
@@ -265,14 +289,16 @@ def sampling(
     """
     require_dimension(ensemble, LEAD, "ensemble")
     require_dimension(ensemble, MEMBER, "ensemble")
-    data = ensemble.squeeze(drop=True) if "start" in ensemble.dims else ensemble
-    space = [name for name in data.dims if name not in (LEAD, MEMBER)]
+    data = _one_start(ensemble)
+    space: tuple[str, ...] = ()
+    if set(data.dims) > {LEAD, MEMBER}:
+        space = spatial_dimensions(data)
     values = data.transpose(LEAD, MEMBER, *space).values.astype(float)
     values = values.reshape(*values.shape[:2], -1)
     weights = np.ones(1)
     if space:
         latitude, longitude = grid_points({name: data[name] for name in (LATITUDE, LONGITUDE)})
-        cells = None if area is None else area.values
+        cells = None if area is None else area.transpose(*space).values
         weights = region_weights(region or Region("domain"), latitude, longitude, cells)
     kurtosis = pooled_kurtosis(values[:, :, weights > 0])
     gram = np.stack([_gram(field, weights) for field in values])
@@ -285,6 +311,19 @@ def sampling(
         },
         coords={LEAD: lead},
     )
+
+
+def _one_start(ensemble: xr.DataArray) -> xr.DataArray:
+    if START not in ensemble.dims:
+        return ensemble
+    if ensemble.sizes[START] != 1:
+        raise ArgumentError(
+            "ensemble",
+            expected="one start",
+            found=f"{ensemble.sizes[START]} starts",
+            remedy=f"choose one, for instance with .isel({START}=0)",
+        )
+    return ensemble.isel({START: 0}, drop=True)
 
 
 def _gram(field: np.ndarray, weights: np.ndarray) -> np.ndarray:

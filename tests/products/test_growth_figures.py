@@ -43,7 +43,7 @@ def test_every_status_is_in_words():
         "85 h (74 to 99)",
         "exceeded at the first lead",
         "no growth, so no limit",
-        "too little data",
+        "too little known",
     ):
         assert expected in words
     assert any(text.startswith("beyond the run (> 240 h; law projects") for text in words)
@@ -147,7 +147,7 @@ def test_curves_without_criteria_are_refused(tmp_path):
         (Status.reached, "54 h (47 to 63)"),
         (Status.at_start, "exceeded at the first lead (54 h)"),
         (Status.no_growth, "no growth, so no limit"),
-        (Status.no_data, "too little data"),
+        (Status.no_data, "too little known"),
     ],
 )
 def test_wording(status, expected):

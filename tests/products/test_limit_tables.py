@@ -113,7 +113,7 @@ def test_the_terminal_shows_the_shortest_first_and_the_caution_last():
         "(192 to beyond the run)",
         "beyond the run (> 240 h; law projects",
         "no growth, so no limit",
-        "too little data",
+        "too little known",
     ]
     places = [text.index(words) for words in order]
     assert places == sorted(places)

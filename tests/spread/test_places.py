@@ -94,3 +94,23 @@ def test_a_site_off_the_grid_is_refused_with_the_distance():
     latitude, longitude = np.array([50.0, 50.0, 51.0]), np.array([0.0, 1.0, 0.0])
     with pytest.raises(eh.ArgumentError, match=r"site 'far': expected a grid point within"):
         nearest_point(eh.Site("far", 40.0, 0.0), latitude, longitude)
+
+
+def test_edges_of_a_region_hold_in_single_precision():
+    region = eh.Region("bay", south=35.1, north=36.1, west=-10.1, east=-9.1)
+    latitude = np.array([35.1, 36.1], dtype=np.float32).astype(float)
+    longitude = np.array([349.9, 350.9], dtype=np.float32).astype(float)
+    assert region.contains(latitude, longitude).all()
+    assert not region.contains(35.5, 349.89)
+
+
+def test_a_region_of_no_width_is_refused():
+    with pytest.raises(eh.ArgumentError, match="one and the same meridian"):
+        eh.Region("line", west=180, east=-180)
+    assert eh.Region("circle", west=-180, east=180).contains(0.0, 12.0)
+
+
+def test_a_site_is_never_placed_on_a_hole_of_the_grid():
+    latitude = np.array([np.nan, 10.0, 11.0])
+    index, distance = nearest_point(eh.Site("pier", 10.0, 10.0), latitude, latitude)
+    assert (index, distance) == (1, 0.0)

@@ -161,3 +161,71 @@ def test_newey_west_equals_statsmodels():
 def test_deviations_sum_to_zero():
     deviation, _ = member_deviations(np.random.default_rng(10).normal(300, 1, size=(9, 100)))
     np.testing.assert_allclose(deviation.sum(axis=0), 0, atol=1e-10)
+
+
+def test_a_lead_without_spread_or_value_has_finite_noise():
+    # Runs from one analysis, or accumulations at lead zero: no spread; a lost lead: no value.
+    rng = np.random.default_rng(11)
+    values = rng.normal(size=(4, MEMBERS, 1))
+    values[0] = 5.0
+    values[2] = np.nan
+    gram = np.nan_to_num(gram_of(values))
+    noise = noise_from_gram(gram)
+    assert np.isfinite(noise.log_spread_covariance()).all()
+    np.testing.assert_allclose(noise.dof[[1, 3]], MEMBERS - 1)
+    np.testing.assert_allclose(noise.correlation[2, [0, 1, 3]], 0, atol=1e-7)
+
+
+def test_pooled_noise_counts_the_starts_that_have_a_lead():
+    # Var of a mean of n sample variances of M Gaussian members: 2 / (n (M - 1)) (any handbook).
+    rng = np.random.default_rng(12)
+    few = rng.chisquare(19, size=(4, 2, 1)) / 19
+    few[1:, 1] = np.nan
+    noise = LeadNoise(np.full(2, 19.0), np.eye(2))
+    assert pooled_noise(few, [noise] * 4, 0.9).dof[1] == pytest.approx(19)
+    many = rng.chisquare(19, size=(200, 2, 400)) / 19
+    many[::2, 1] = np.nan
+    found = pooled_noise(many, [noise] * 200, 0.9)
+    np.testing.assert_allclose(2 / found.dof, [2 / 19 / 200, 2 / 19 / 100], rtol=0.1)
+
+
+def test_heavy_tails_are_seen_beside_gaps_and_leads_without_spread():
+    values = np.random.default_rng(13).standard_t(5, size=(4, MEMBERS, 400))
+    whole = pooled_kurtosis(values)
+    assert whole > 1
+    gap = values.copy()
+    gap[2, 3] = np.nan  # one member at one lead
+    assert pooled_kurtosis(gap) == pytest.approx(pooled_kurtosis(np.delete(values, 3, axis=1)))
+    shared = values.copy()
+    shared[0] = 1.0
+    assert pooled_kurtosis(shared) == pytest.approx(pooled_kurtosis(values[1:]))
+    lost = values.copy()
+    lost[3] = np.nan
+    assert pooled_kurtosis(lost) == pytest.approx(pooled_kurtosis(values[:3]))
+
+
+def test_sampling_does_not_depend_on_the_order_of_dimensions():
+    rng = np.random.default_rng(14)
+    coords = {"lead": [0.0, 6.0], "latitude": np.linspace(0, 88, 6), "longitude": np.arange(8.0)}
+    dims = ("lead", "member", "latitude", "longitude")
+    members = xr.DataArray(rng.normal(size=(2, 10, 6, 8)), dims=dims, coords=coords)
+    area = xr.DataArray(
+        rng.uniform(1, 9, size=(6, 8)), dims=dims[2:], coords={k: coords[k] for k in dims[2:]}
+    )
+    turned = members.transpose("lead", "longitude", "member", "latitude")
+    for cells in (None, area):
+        expected = eh.sampling(members, area=cells)
+        other = None if cells is None else cells.transpose()
+        xr.testing.assert_allclose(eh.sampling(turned, area=other), expected)
+    xr.testing.assert_allclose(
+        eh.sampling(members.isel(lead=[0]).expand_dims(start=[0])),
+        eh.sampling(members.isel(lead=[0])),
+    )
+
+
+def test_sampling_refuses_several_starts():
+    members = xr.DataArray(
+        np.random.default_rng(15).normal(size=(2, 3, 5)), dims=("start", "lead", "member")
+    )
+    with pytest.raises(eh.ArgumentError, match=r"expected one start; found 2 starts"):
+        eh.sampling(members)
