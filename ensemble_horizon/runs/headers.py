@@ -14,7 +14,7 @@ from ensemble_horizon.runs.decoding import StoredVariable
 from ensemble_horizon.runs.files import FoundFile
 from ensemble_horizon.runs.grids import Grid, read_grid, space_roles
 from ensemble_horizon.runs.handles import LOCK, border, open_raw
-from ensemble_horizon.runs.levels import select_level
+from ensemble_horizon.runs.levels import refuse_other_level, select_level
 from ensemble_horizon.runs.moments import Moments, Wanted, read_moments
 from ensemble_horizon.runs.recognition import LEVEL, X, Y, recognise, recognise_name
 from ensemble_horizon.runs.times import Ticks
@@ -251,15 +251,15 @@ class HeaderReading:
                                                  values, self.wanted.level)))  # fmt: skip
             else:
                 fixed.append((axis, 0))
+        if LEVEL not in dim_roles.values():
+            found = [name for name, role in self.roles.items() if role == LEVEL]
+            alone = [self.variables[name] for name in found if not self._span(name)]
+            refuse_other_level(self.file.path, names, alone, self.wanted.level)
         space_dims = tuple(dim for dim in dims if dim in space)
-        source = Source(
-            self.file.path,
-            tuple(run_axes),
-            tuple(self.sizes[dims[axis]] for axis in run_axes),
-            tuple(axis for axis, dim in enumerate(dims) if dim in space),
-            tuple(fixed),
-        )
         run_dims = tuple(dims[axis] for axis in run_axes)
+        lengths = tuple(self.sizes[dim] for dim in run_dims)
+        space_axes = tuple(axis for axis, dim in enumerate(dims) if dim in space)
+        source = Source(self.file.path, tuple(run_axes), lengths, space_axes, tuple(fixed))
         moments = self._moments(run_dims, names[0])
         grid = read_grid(space_dims, space, self.sizes, places, self.known)
         headers = tuple(self._variable(name, source, moments) for name in names)

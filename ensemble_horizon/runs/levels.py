@@ -52,6 +52,37 @@ def select_level(
     return int(near[0])
 
 
+def refuse_other_level(
+    path: str, names: Sequence[str], alone: Sequence[StoredVariable], level: Level
+) -> None:
+    """Refuse a level asked by name of a variable without levels, unless it is the one there.
+
+    A level asked of all variables at once concerns only those that have some.
+
+    Parameters
+    ----------
+    alone : sequence
+        Scalar level coordinates of the file.
+
+    Raises
+    ------
+    InputError
+        If a level was asked for and none of the scalar ones has the value.
+    """
+    wanted = level.get(names[0]) if isinstance(level, Mapping) else None
+    if wanted is None:
+        return
+    values = np.array([float(np.asarray(item[...]).ravel()[0]) for item in alone])
+    if values.size and np.isclose(values, float(wanted), rtol=1e-5, atol=1e-9).any():
+        return
+    raise InputError(
+        path,
+        expected=f"the level {float(wanted):g} of {', '.join(map(repr, names))}",
+        found=f"one level only, {_listed(values, '')}" if values.size else "no levels at all",
+        remedy="leave the level out, or name a variable that has it",
+    )
+
+
 def _listed(values: np.ndarray, units: str) -> str:
     texts = [f"{value:g}" for value in values[:20]]
     more = ", ..." if values.size > 20 else ""

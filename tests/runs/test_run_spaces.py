@@ -126,6 +126,19 @@ def test_level_that_is_not_there(tmp_path, truth):
         open_runs(tmp_path / "a.nc", variables="t", level=700)
 
 
+def test_a_level_asked_of_a_variable_without_levels(tmp_path, truth):
+    with_levels(truth).isel(plev=0, drop=True).to_netcdf(tmp_path / "a.nc")
+    with pytest.raises(InputError, match=r"expected the level 850 of 't'; found no levels at all"):
+        open_runs(tmp_path / "a.nc", variables="t", level={"t": 850})
+
+
+def test_a_scalar_level_must_be_the_one_asked_for(tmp_path, truth):
+    with_levels(truth).isel(plev=1).to_netcdf(tmp_path / "a.nc")
+    assert open_runs(tmp_path / "a.nc", variables="t", level={"t": 850}).t.size
+    with pytest.raises(InputError, match=r"found one level only, 850"):
+        open_runs(tmp_path / "a.nc", variables="t", level={"t": 500})
+
+
 def test_one_level_needs_no_choice(tmp_path, truth):
     with_levels(truth).isel(plev=[2]).to_netcdf(tmp_path / "a.nc")
     opened = open_runs(tmp_path / "a.nc", variables="t")
