@@ -9,7 +9,7 @@ from typing import Any
 
 from ensemble_horizon.night.engine import Engine, usable_cores
 from ensemble_horizon.night.estimate import Estimate, Progress, estimate, silent
-from ensemble_horizon.products import Drawing, PlaceMark, write_products
+from ensemble_horizon.products import Drawing, PlaceMark, load_plotting, write_products
 from ensemble_horizon.settings import Settings
 
 
@@ -29,6 +29,7 @@ def estimate_and_write(
     workers = settings.engine.workers or usable_cores()
 
     def draw(drawings: Sequence[Drawing]) -> None:
+        load_plotting()  # once, before workers are made as copies of this process
         with Engine(min(workers, len(drawings))) as engine:
             for done, _ in enumerate(engine.run(_draw, drawings), start=1):
                 progress("figures", done, len(drawings))

@@ -6,7 +6,6 @@ import logging
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
-from threading import Thread
 from time import monotonic
 
 import numpy as np
@@ -34,7 +33,6 @@ from ensemble_horizon.night.variables import (
     resolve_places,
     resolve_variable,
 )
-from ensemble_horizon.products import load_plotting
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.faults import Effect
 from ensemble_horizon.runs.verdict import name_members
@@ -98,7 +96,7 @@ def estimate(settings: Settings, progress: Progress = silent) -> Estimate:
         catalogue, tuple(item.source(places, layout, size, mapped) for item in variables)
     )
     job = _Job(settings, found, context, places, layout, progress)
-    with Engine(_workers(settings, context), context) as engine, _plotting_aside(settings):
+    with Engine(_workers(settings, context), context) as engine:
         results = [job.variable(engine, number, item) for number, item in enumerate(variables)]
     return Estimate(results, places, catalogue, [*found.faults, *job.faults])
 
@@ -313,20 +311,6 @@ def _workers(settings: Settings, context: ReadingContext) -> int:
     size = int(np.prod(catalogue.grid.shape, dtype=int)) * len(catalogue.members)
     size *= 4 * catalogue.leads.size * catalogue.starts.size * len(context.variables)
     return 1 if size < _SMALL else usable_cores()
-
-
-@contextmanager
-def _plotting_aside(settings: Settings) -> Iterator[None]:
-    """Load the plotting library while the workers read; it is there when it is needed."""
-    if not settings.products.figures:
-        yield
-        return
-    loading = Thread(target=load_plotting, daemon=True)
-    loading.start()
-    try:
-        yield
-    finally:
-        loading.join()
 
 
 @contextmanager

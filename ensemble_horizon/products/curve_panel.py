@@ -212,7 +212,7 @@ def _strip(axes: Axes, panel: Panel) -> None:
                 place = limit.low - 1.5 * letter
                 if place - len(words) * letter < first:
                     place = last - 1.5 * letter
-                    veil = {"boxstyle": "square,pad=0.1", "fc": "#f5f6f4e6", "ec": "none"}
+                    veil = {"boxstyle": "square,pad=0.1", "fc": "#f5f6f480", "ec": "none"}
         else:
             if limit.status == Status.at_start:
                 axes.plot(first, position, "<", color=colour, markersize=6, clip_on=False)
