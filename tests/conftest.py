@@ -104,7 +104,8 @@ def glosea4_cubes() -> dict[int, object]:
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         for path in sorted(folder.glob("ensemble_*.pp")):
-            cubes[int(path.stem[-3:])] = iris.load_cube(str(path))
+            cubes[int(path.stem[-3:])] = cube = iris.load_cube(str(path))
+            cube.data  # noqa: B018 - reads the values now, with its warnings off
     return cubes
 
 

@@ -129,7 +129,7 @@ def iso_start(start: Any, label: str = "") -> str:
     --------
     >>> iso_start(np.datetime64("2031-01-05T00", "ns"))
     '2031-01-05T00:00:00'
-    >>> iso_start(np.datetime64("NaT"), "all")
+    >>> iso_start(np.datetime64("NaT", "ns"), "all")
     'all'
     """
     if is_pooled(start, label):
