@@ -16,7 +16,7 @@ from ensemble_horizon.checks import (
 )
 from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.growth import fit_growth
-from ensemble_horizon.horizon.criteria import Criterion, Levels, criterion_from
+from ensemble_horizon.horizon.criteria import Chance, Criterion, Levels, criterion_from
 from ensemble_horizon.horizon.crossing import first_crossing
 from ensemble_horizon.horizon.interval import calibrated_moves, spread_bounds
 from ensemble_horizon.horizon.trend import grows, share_grows
@@ -58,7 +58,8 @@ def horizon(
     sampling : Dataset, optional
         From `sampling`, for ``low`` and ``high``. One noise for all curves.
     confidence : float
-        Of the interval. It covers the scatter from having few members, not the model's own error.
+        Of the interval. It covers the scatter from having few members, not the model's own error,
+        and takes a saturation level as known.
 
     Returns
     -------
@@ -230,6 +231,9 @@ def _labelled(
     criterion: Criterion,
 ) -> xr.Dataset:
     lead_units = curve[dim].attrs.get("units", "1")
+    label = criterion.label
+    if isinstance(criterion, Chance):
+        label = f"chance {criterion.probability:g}"  # the distance is in the shares already
     units = criterion.threshold_units(str(curve.attrs.get("units", "1")))
     attributes: dict[str, dict[str, Any]] = {
         "horizon": {"long_name": "horizon", "units": lead_units},
@@ -242,5 +246,5 @@ def _labelled(
     return xr.Dataset(
         {name: (rest, values.reshape(shape), attributes[name]) for name, values in data.items()},
         coords=coords,
-        attrs={"criterion": criterion.label, "criterion_kind": criterion.kind},
+        attrs={"criterion": label, "criterion_kind": criterion.kind},
     )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import os
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -135,7 +136,7 @@ class Settings(Table):
 
     def path(self, name: str) -> Path:
         """A path of the settings, counted from the folder of the settings file."""
-        return self.base / name
+        return Path(os.path.normpath(self.base / name))
 
     def run_files(self) -> str | list[str]:
         """The ``files`` of ``[runs]``, counted from the folder of the settings file."""
