@@ -216,7 +216,8 @@ def _moves_of_estimated_threshold(
     own = np.diag(batch.noise.log_spread_covariance())[before]
     shared = np.take_along_axis(cross, before[:, np.newaxis], axis=1)[:, 0] / level
     extra = np.nan_to_num((variance / level**2 - 2 * shared) / own, nan=0.0, posinf=0.0)
-    quantile = plain_moves(options.confidence or 0.9, batch.noise.inflation).up
+    assert options.confidence is not None
+    quantile = plain_moves(options.confidence, batch.noise.inflation).up
     # First crossings come early by as much as before; only the scatter about that changes.
     early, reach = (moves.down - moves.up) / 2, (moves.down + moves.up) / 2
     reach = np.sqrt(np.maximum(reach**2 + quantile**2 * extra, 0.0))

@@ -176,7 +176,7 @@ class _Job:
             self._total += self.catalogue.leads.size
             log.warning(
                 "%s at %s: reading again without %s",
-                variable.name, self.catalogue.start_label(start), self._names(set(without)),
+                variable.name, self.catalogue.start_label(start), self._names(without),
             )  # fmt: skip
 
     def _unusable(self, faults: list[Fault]) -> set[int]:
@@ -203,7 +203,7 @@ class _Job:
             self.settings.runs.minimum_members,
         )  # fmt: skip
 
-    def _names(self, positions: set[int]) -> str:
+    def _names(self, positions: frozenset[int]) -> str:
         return name_members([self.catalogue.members[i] for i in sorted(positions)])
 
     def _advance(self, leads: int) -> None:
@@ -250,19 +250,15 @@ class _Job:
         )
         labels = [catalogue.start_label(start) for start in range(catalogue.starts.size)]
         starts = catalogue.starts
+        curve_labels, curve_starts = labels, starts
         if len(lines) > 1:
-            lines = [
-                *lines,
-                [pool_starts(same, growth.confidence) for same in zip(*lines, strict=True)],
-            ]
-            members = [*members, max(members)]
+            pooled = [pool_starts(same, growth.confidence) for same in zip(*lines, strict=True)]
+            lines, members = [*lines, pooled], [*members, max(members)]
+            curve_labels = [*labels, ALL_STARTS]
+            curve_starts = np.concatenate([starts, _no_start(starts)])
         rows = [
             self._rows(line, variable, count) for line, count in zip(lines, members, strict=True)
         ]
-        curve_labels, curve_starts = labels, starts
-        if len(lines) > len(labels):
-            curve_labels = [*labels, ALL_STARTS]
-            curve_starts = np.concatenate([starts, _no_start(starts)])
         curves = curves_dataset(frame, curve_starts, curve_labels, self.places.names, rows)
         grid = catalogue.grid
         space = (grid.dims, grid.shape, dict(grid.coords))

@@ -16,7 +16,6 @@ from ensemble_horizon.runs.units import converter, difference_scale, same_units
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.places import (
     Region,
-    Site,
     grid_points,
     nearest_point,
     region_weights,
@@ -38,13 +37,11 @@ class Places:
     regions : tuple of RegionWeights
     sites : tuple of str, names
     site_index : (S,) int into the flattened grid
-    site_distance_km : (S,) float
     """
 
     regions: tuple[RegionWeights, ...]
     sites: tuple[str, ...]
     site_index: np.ndarray
-    site_distance_km: np.ndarray
 
     @property
     def names(self) -> list[tuple[str, str]]:
@@ -237,20 +234,21 @@ def resolve_places(settings: Settings, catalogue: Catalogue) -> Places:
                 found=", ".join([*settings.regions, *settings.sites]),
                 remedy="take [regions] and [sites] out of the settings",
             )
-        return Places((), (SERIES,), np.zeros(1, dtype=int), np.zeros(1))
+        return Places((), (SERIES,), np.zeros(1, dtype=int))
     latitude, longitude = grid_points(catalogue.grid.coords)
     try:
         weights = tuple(_region(region, latitude, longitude) for region in regions)
-        nearest = [_site(site, latitude, longitude) for site in sites]
+        nearest = [nearest_point(site, latitude, longitude) for site in sites]
     except ArgumentError as error:
         raise SettingsError(
             error.culprit, expected=error.expected, found=error.found, remedy=error.remedy
         ) from error
+    for site, (_, distance) in zip(sites, nearest, strict=True):
+        log.info("site %s: the nearest grid point lies %.0f km away", site.name, distance)
     return Places(
         weights,
         tuple(site.name for site in sites),
         np.array([index for index, _ in nearest], dtype=int),
-        np.array([distance for _, distance in nearest], dtype=float),
     )
 
 
@@ -263,7 +261,3 @@ def _region(region: Region, latitude: np.ndarray, longitude: np.ndarray) -> Regi
     weights = region_weights(region, latitude, longitude)
     index = np.flatnonzero(weights)
     return RegionWeights(region.name, index, weights[index])
-
-
-def _site(site: Site, latitude: np.ndarray, longitude: np.ndarray) -> tuple[int, float]:
-    return nearest_point(site, latitude, longitude)

@@ -53,7 +53,7 @@ def test_the_share_of_a_region_is_the_mean_of_its_points_gaps_or_not():
     values[:10, :, : SIZE * 56 // 100] = np.nan
     region = RegionWeights("all", np.arange(SIZE), np.full(SIZE, 1 / SIZE))
     summary, _ = summary_of(values, regions=(region,), beyond=(2.0,))
-    places = Places((region,), (), np.empty(0, dtype=int), np.empty(0))
+    places = Places((region,), (), np.empty(0, dtype=int))
     chance = Chance(2.0, 0.2)
     variable = Variable("v", "v", "1", ("v",), 1.0, None, 0.0, {chance.label: chance}, None)
     curve = curves_of_start(summary, variable, places, 0.0)[0]
