@@ -122,7 +122,7 @@ def initial_states(members: int = MEMBERS) -> Array:
     square = np.tile(k**2 + l**2, 2)
     scale = np.exp(-square * PERTURBATION_SCALE**2 / (2 * np.pi) ** 2) / square
     planted = [
-        toys.perturb(CHANNEL, before, 1, norm=1.0e5, seed=SEED + member, scale=scale)[0]
+        toys.perturb(CHANNEL, before, 1, amplitude=1.0e5, seed=SEED + member, scale=scale)[0]
         for member in range(1, members)
     ]
     later = forward(np.stack([before, *planted]), BREEDING_DAYS, 24)[-1]
@@ -146,7 +146,7 @@ def climatology() -> dict[str, Array]:
     all along the channel, so samples are pooled along it and every longitude gets the same value.
     """
     start = forward(CHANNEL.default_state(), 10, 24)[-1]
-    apart = toys.perturb(CHANNEL, start, CLIMATOLOGY_RUNS, norm=2.0e6, seed=SEED)
+    apart = toys.perturb(CHANNEL, start, CLIMATOLOGY_RUNS, amplitude=2.0e6, seed=SEED)
     settled = forward(apart, CLIMATOLOGY_SKIP_DAYS, 24)[-1]
     states = forward(settled, CLIMATOLOGY_DAYS, 12)
     around = CHANNEL.coordinates()["longitude"][1]

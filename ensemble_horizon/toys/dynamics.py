@@ -10,8 +10,9 @@ import numpy as np
 import numpy.typing as npt
 
 from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.toys.norms import Array, Norm, scaled
 
-Array = npt.NDArray[np.float64]
+Time = float | Array
 
 # Hours in one unit of model time; a system without a physical clock has none.
 HOURS_PER_TIME_UNIT = {"day": 24.0, "hours": 1.0}
@@ -77,7 +78,7 @@ def parameter(
 
 @dataclass(frozen=True)
 class System(ABC):
-    """A system of ordinary differential equations dx/dt = f(x) with N variables.
+    """A system of ordinary differential equations dx/dt = f(x, t) with N variables.
 
     A subclass is a frozen dataclass whose fields are made with `parameter`. States are arrays
     ``(..., N)``: any number of leading axes (member, start, ...) is worked on at once.
@@ -88,8 +89,12 @@ class System(ABC):
         Name in the registry, one line for people, the publication.
     time_units : str
         ``"1"`` for a system without a physical clock, else ``"day"`` or ``"hours"``.
+    scheme : str
+        Key of `ensemble_horizon.toys.schemes.SCHEMES`.
     step : float
-        A time step at which fourth-order Runge-Kutta is accurate, in ``time_units``.
+        A time step at which that scheme is accurate, in ``time_units``.
+    spin_up : float
+        Time from `default_state` after which a run is on the attractor, in ``time_units``.
     published : tuple of PublishedValue
         What the literature states about the system.
     """
@@ -99,7 +104,9 @@ class System(ABC):
     source: ClassVar[str]
     time_units: ClassVar[str] = "1"
     state_units: ClassVar[str] = "1"
+    scheme: ClassVar[str] = "runge-kutta"
     step: ClassVar[float]
+    spin_up: ClassVar[float] = 0.0
     published: ClassVar[tuple[PublishedValue, ...]] = ()
 
     def __post_init__(self) -> None:
@@ -136,17 +143,31 @@ class System(ABC):
         """Return a state (N,) from which a run can begin."""
 
     @abstractmethod
-    def tendency(self, state: npt.ArrayLike) -> Array:
-        """Return dx/dt (..., N) of states (..., N), per ``time_units``."""
+    def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
+        """Return dx/dt (..., N) of states (..., N), per ``time_units``.
+
+        ``time`` broadcasts against the leading axes; only a system driven from outside uses it.
+        """
 
     @abstractmethod
-    def jacobian(self, state: npt.ArrayLike) -> Array:
+    def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the derivatives of the tendency, (..., N, N), at states (..., N)."""
 
-    def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike) -> Array:
+    def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the Jacobian at ``state`` applied to ``displacement``, both (..., N)."""
-        product = self.jacobian(state) @ np.asarray(displacement, dtype=float)[..., None]
+        product = self.jacobian(state, time) @ np.asarray(displacement, dtype=float)[..., None]
         return np.asarray(product[..., 0])
+
+    def norms(self) -> dict[str, Norm]:
+        """Return the norms in which a displacement of this system may be measured, by name."""
+        one = np.ones(self.size)
+        mean = one / np.sqrt(self.size)
+        return {
+            "euclidean": scaled("euclidean", self.state_units, "root of the sum of squares", one),
+            "area-weighted": scaled(
+                "area-weighted", self.state_units, "root mean square over the variables", mean
+            ),
+        }
 
     def coordinates(self) -> dict[str, tuple[str, Array, dict[str, str]]]:
         """Return spatial coordinates of the fields: name to (dimension, values, attributes)."""

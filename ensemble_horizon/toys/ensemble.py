@@ -9,8 +9,9 @@ import numpy.typing as npt
 import xarray as xr
 
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.toys.dynamics import Array, Field, System, require_states
+from ensemble_horizon.toys.dynamics import Field, System, require_states
 from ensemble_horizon.toys.integration import integrate
+from ensemble_horizon.toys.norms import Array
 from ensemble_horizon.vocabulary import (
     CONVENTIONS,
     COORDINATE_ATTRIBUTES,
@@ -64,7 +65,7 @@ def run_ensemble(
     --------
     >>> from ensemble_horizon import toys
     >>> lorenz = toys.system("lorenz-63")
-    >>> initial = toys.perturb(lorenz, lorenz.default_state(), 5, norm=1e-3, seed=1)
+    >>> initial = toys.perturb(lorenz, lorenz.default_state(), 5, amplitude=1e-3, seed=1)
     >>> run = run_ensemble(lorenz, initial, steps=200, every=100)
     >>> dict(run.sizes), run.lead.values.tolist(), run.lead.attrs["units"]
     ({'start': 1, 'lead': 3, 'member': 5}, [0.0, 1.0, 2.0], '1')

@@ -1,7 +1,8 @@
-"""Fixed-step fourth-order Runge-Kutta for whole ensembles, and its exact tangent."""
+"""Runs of whole ensembles: kept in memory, or handed on as they go."""
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from typing import NamedTuple
 
 import numpy as np
@@ -9,7 +10,9 @@ import numpy.typing as npt
 
 from ensemble_horizon.checks import require_positive
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.toys.dynamics import Array, System, require_states
+from ensemble_horizon.toys.dynamics import System, Time, require_states
+from ensemble_horizon.toys.norms import Array
+from ensemble_horizon.toys.schemes import step as one_step
 
 
 class Trajectory(NamedTuple):
@@ -19,47 +22,52 @@ class Trajectory(NamedTuple):
     states: Array
 
 
-def rk4_step(system: System, states: Array, dt: float) -> Array:
-    """Return states (..., N) one step of ``dt`` later, by classical fourth-order Runge-Kutta.
+def march(
+    system: System,
+    states: npt.ArrayLike,
+    steps: int,
+    dt: float | None = None,
+    every: int = 1,
+    time: Time = 0.0,
+) -> Iterator[Array]:
+    """Run all ``states`` forward and yield them (..., N) at every ``every``-th step.
+
+    The initial states come first; nothing is kept, so memory does not grow with the length of the
+    run. Parameters and errors are those of `integrate`.
 
     Examples
     --------
-    >>> from ensemble_horizon.toys.spiral import SpiralSink
-    >>> rk4_step(SpiralSink(decay=1.0, rotation=0.0), np.array([1.0, 0.0]), 0.1).round(7).tolist()
-    [0.9048375, 0.0]
+    >>> from ensemble_horizon.toys.systems.spiral import SpiralSink
+    >>> sink = SpiralSink(decay=1.0, rotation=0.0)
+    >>> [round(float(state[0]), 3) for state in march(sink, [1.0, 0.0], 20, 0.1, every=10)]
+    [1.0, 0.368, 0.135]
     """
-    k1 = system.tendency(states)
-    k2 = system.tendency(states + 0.5 * dt * k1)
-    k3 = system.tendency(states + 0.5 * dt * k2)
-    k4 = system.tendency(states + dt * k3)
-    return np.asarray(states + dt / 6.0 * (k1 + 2.0 * (k2 + k3) + k4))
+    current = require_states(system, states, "states")
+    length = system.step if dt is None else require_positive(dt, "dt")
+    require_count(every, "every")
+    require_count(steps, "steps")
+    if steps % every:
+        raise ArgumentError(
+            "steps",
+            expected=f"a multiple of every={every}",
+            found=str(steps),
+            remedy=f"take {steps - steps % every or every}",
+        )
+    return _march(system, current, steps, length, every, time)
 
 
-def tangent_step(
-    system: System, states: Array, displacements: Array, dt: float
-) -> tuple[Array, Array]:
-    """Return states and infinitesimal displacements one step later.
-
-    The displacements follow the derivative of `rk4_step` itself, not a separate discretisation of
-    the linearised equations, so the result is exact for the numerical model.
-
-    Parameters
-    ----------
-    states, displacements : array (..., N)
-        Broadcast against each other.
-    """
-    k1 = system.tendency(states)
-    d1 = system.tangent(states, displacements)
-    at2 = states + 0.5 * dt * k1
-    k2 = system.tendency(at2)
-    d2 = system.tangent(at2, displacements + 0.5 * dt * d1)
-    at3 = states + 0.5 * dt * k2
-    k3 = system.tendency(at3)
-    d3 = system.tangent(at3, displacements + 0.5 * dt * d2)
-    at4 = states + dt * k3
-    d4 = system.tangent(at4, displacements + dt * d3)
-    later = states + dt / 6.0 * (k1 + 2.0 * (k2 + k3) + system.tendency(at4))
-    return later, displacements + dt / 6.0 * (d1 + 2.0 * (d2 + d3) + d4)
+def _march(
+    system: System, current: Array, steps: int, dt: float, every: int, time: Time
+) -> Iterator[Array]:
+    yield current
+    for number in range(1, steps + 1):
+        # Overflow is looked for right below, where it can be told with its time and place.
+        with np.errstate(over="ignore", invalid="ignore"):
+            current = one_step(system, current, dt, time + (number - 1) * dt)
+        if not np.all(np.isfinite(current)):
+            raise _blown_up(system, current, number, dt)
+        if number % every == 0:
+            yield current
 
 
 def integrate(
@@ -68,6 +76,7 @@ def integrate(
     steps: int,
     dt: float | None = None,
     every: int = 1,
+    time: Time = 0.0,
 ) -> Trajectory:
     """Run all ``states`` forward together and keep every ``every``-th step.
 
@@ -82,11 +91,14 @@ def integrate(
         Length of a step in the system's ``time_units``; ``system.step`` if left out.
     every : int
         Steps from one kept state to the next.
+    time : float or array
+        Time of the initial states, an array broadcasting against their leading axes; it matters
+        only to systems driven from outside.
 
     Returns
     -------
     Trajectory
-        ``steps / every + 1`` kept times and states, the initial ones first.
+        ``steps / every + 1`` kept times (since the start) and states, the initial ones first.
 
     Raises
     ------
@@ -96,36 +108,37 @@ def integrate(
 
     Examples
     --------
-    >>> from ensemble_horizon.toys.lorenz import Lorenz63
+    >>> from ensemble_horizon.toys.systems.lorenz import Lorenz63
     >>> run = integrate(Lorenz63(), [[0.0, 1.0, 0.0], [0.0, 2.0, 0.0]], 100, every=50)
     >>> run.times.tolist(), run.states.shape
     ([0.0, 0.5, 1.0], (3, 2, 3))
     """
-    current = require_states(system, states, "states")
-    step = system.step if dt is None else require_positive(dt, "dt")
-    _require_count(every, "every")
-    _require_count(steps, "steps")
-    if steps % every:
-        raise ArgumentError(
-            "steps",
-            expected=f"a multiple of every={every}",
-            found=str(steps),
-            remedy=f"take {steps - steps % every or every}",
-        )
-    kept = np.empty((steps // every + 1, *current.shape))
-    kept[0] = current
-    # Overflow is looked for below, where it can be told with its time and place.
-    with np.errstate(over="ignore", invalid="ignore"):
-        for number in range(1, steps + 1):
-            current = rk4_step(system, current, step)
-            if not np.all(np.isfinite(current)):
-                raise _blown_up(system, current, number, step)
-            if number % every == 0:
-                kept[number // every] = current
-    return Trajectory(np.arange(kept.shape[0]) * (every * step), kept)
+    on_the_way = march(system, states, steps, dt, every, time)
+    first = next(on_the_way)
+    kept = np.empty((steps // every + 1, *first.shape))
+    kept[0] = first
+    for number, current in enumerate(on_the_way, start=1):
+        kept[number] = current
+    length = system.step if dt is None else dt
+    return Trajectory(np.arange(kept.shape[0]) * (every * length), kept)
 
 
-def _require_count(value: int, argument: str) -> None:
+def settled(system: System, states: npt.ArrayLike | None = None) -> Array:
+    """Return ``states`` (..., N), the default state if left out, after ``system.spin_up``.
+
+    Examples
+    --------
+    >>> from ensemble_horizon.toys.systems.lorenz import Lorenz63
+    >>> settled(Lorenz63()).shape
+    (3,)
+    """
+    current = require_states(system, system.default_state() if states is None else states, "states")
+    steps = round(system.spin_up / system.step)
+    return integrate(system, current, steps, every=steps).states[-1] if steps else current
+
+
+def require_count(value: int, argument: str) -> None:
+    """Raise `ArgumentError` unless ``value`` is a whole number of at least 1."""
     if isinstance(value, bool) or not isinstance(value, int | np.integer) or value < 1:
         raise ArgumentError(
             argument,

@@ -9,7 +9,8 @@ import numpy.typing as npt
 
 from ensemble_horizon.checks import require_choice, require_positive
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.toys.dynamics import Array, System, require_states
+from ensemble_horizon.toys.dynamics import System, require_states
+from ensemble_horizon.toys.norms import Array
 
 Directions = Callable[[System, Array, int, np.random.Generator], Array]
 
@@ -27,14 +28,15 @@ def perturb(
     state: npt.ArrayLike,
     members: int,
     *,
-    norm: float,
+    amplitude: float,
     seed: int,
+    norm: str = "euclidean",
     method: str = "gaussian",
     scale: npt.ArrayLike | None = None,
 ) -> Array:
     """Return ``members`` states (members, N) around ``state`` (N,).
 
-    Every member lies at the Euclidean distance ``norm`` from ``state``, exactly.
+    Every member lies at the distance ``amplitude`` from ``state`` in the chosen norm, exactly.
 
     Parameters
     ----------
@@ -43,10 +45,12 @@ def perturb(
         The control.
     members : int
         Number of perturbed states; the control is not one of them.
-    norm : float
-        Length of every displacement, in the units of the state.
+    amplitude : float
+        Length of every displacement, in the units of the norm.
     seed : int
         Seed of the random numbers; the same seed gives the same members.
+    norm : str
+        A key of ``system.norms()``.
     method : str
         A key of `PERTURBATIONS`.
     scale : array (N,), optional
@@ -59,8 +63,8 @@ def perturb(
 
     Examples
     --------
-    >>> from ensemble_horizon.toys.lorenz import Lorenz63
-    >>> states = perturb(Lorenz63(), [1.0, 2.0, 20.0], 4, norm=0.01, seed=7)
+    >>> from ensemble_horizon.toys.systems.lorenz import Lorenz63
+    >>> states = perturb(Lorenz63(), [1.0, 2.0, 20.0], 4, amplitude=0.01, seed=7)
     >>> states.shape, np.linalg.norm(states - [1.0, 2.0, 20.0], axis=-1).round(9).tolist()
     ((4, 3), [0.01, 0.01, 0.01, 0.01])
     """
@@ -79,11 +83,13 @@ def perturb(
             found=repr(members),
             remedy="correct the number of members",
         )
-    length = require_positive(norm, "norm", zero=True)
+    length = require_positive(amplitude, "amplitude", zero=True)
+    norms = system.norms()
+    measure = norms[require_choice(norm, norms, "norm")]
     directions = PERTURBATIONS[require_choice(method, PERTURBATIONS, "method")]
     displacement = directions(system, control, int(members), np.random.default_rng(seed))
     displacement = displacement * _require_scale(system, scale)
-    displacement *= length / np.linalg.norm(displacement, axis=-1, keepdims=True)
+    displacement *= length / measure.length(displacement)[..., None]
     return np.asarray(control + displacement)
 
 

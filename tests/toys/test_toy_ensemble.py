@@ -10,7 +10,7 @@ from ensemble_horizon.errors import ArgumentError
 def two_starts(system, members=4):
     start = system.default_state()
     norm = 0.01 * np.linalg.norm(start)
-    return np.stack([toys.perturb(system, start, members, norm=norm, seed=s) for s in (1, 2)])
+    return np.stack([toys.perturb(system, start, members, amplitude=norm, seed=s) for s in (1, 2)])
 
 
 def test_series_without_a_clock():

@@ -19,7 +19,7 @@ def test_spiral_follows_its_closed_form():
 
 def test_members_do_not_touch_each_other():
     lorenz = toys.system("lorenz-63")
-    initial = toys.perturb(lorenz, lorenz.default_state(), 6, norm=0.5, seed=1)
+    initial = toys.perturb(lorenz, lorenz.default_state(), 6, amplitude=0.5, seed=1)
     together = toys.integrate(lorenz, initial, 300).states
     alone = toys.integrate(lorenz, initial[4], 300).states
     assert np.array_equal(together[:, 4], alone)

@@ -8,7 +8,8 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
-from ensemble_horizon.toys.dynamics import Array, Field, PublishedValue, System, parameter
+from ensemble_horizon.toys.dynamics import Field, PublishedValue, System, Time, parameter
+from ensemble_horizon.toys.norms import Array
 from ensemble_horizon.vocabulary import CELL, COORDINATE_ATTRIBUTES, LATITUDE, LONGITUDE
 
 SPROTT = "Sprott, Chaos and Time-Series Analysis, numerical values (from memory)"
@@ -37,6 +38,7 @@ class Lorenz63(System):
     title: ClassVar[str] = "Lorenz 1963: convection in three variables"
     source: ClassVar[str] = "Lorenz 1963, J. Atmos. Sci. 20"
     step: ClassVar[float] = 0.01
+    spin_up: ClassVar[float] = 20.0
     published: ClassVar[tuple[PublishedValue, ...]] = (
         PublishedValue("leading_exponent", 0.906, 0.02, SPROTT),
         PublishedValue("exponents", (0.906, 0.0, -14.572), 0.02, SPROTT),
@@ -56,14 +58,14 @@ class Lorenz63(System):
         """Return the start of Lorenz's own integration, (0, 1, 0)."""
         return np.array([0.0, 1.0, 0.0])
 
-    def tendency(self, state: npt.ArrayLike) -> Array:
+    def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return dx/dt (..., 3)."""
         x, y, z = np.moveaxis(np.asarray(state, dtype=float), -1, 0)
         return np.stack(
             [self.sigma * (y - x), x * (self.rho - z) - y, x * y - self.beta * z], axis=-1
         )
 
-    def jacobian(self, state: npt.ArrayLike) -> Array:
+    def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the derivatives of the tendency, (..., 3, 3)."""
         x, y, z = np.moveaxis(np.asarray(state, dtype=float), -1, 0)
         matrix = np.zeros((*x.shape, 3, 3))
@@ -99,6 +101,7 @@ class Lorenz96(System):
     title: ClassVar[str] = "Lorenz 1996: waves on a latitude circle"
     source: ClassVar[str] = "Lorenz and Emanuel 1998, J. Atmos. Sci. 55"
     step: ClassVar[float] = 0.05
+    spin_up: ClassVar[float] = 20.0
     published: ClassVar[tuple[PublishedValue, ...]] = (
         PublishedValue("leading_exponent", 1.685, 0.03, LORENZ_EMANUEL),
         PublishedValue("positive_exponents", 13, 0, LORENZ_EMANUEL),
@@ -117,14 +120,14 @@ class Lorenz96(System):
         state[0] += 0.01
         return state
 
-    def tendency(self, state: npt.ArrayLike) -> Array:
+    def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return dx/dt (..., sites)."""
         x = np.asarray(state, dtype=float)
         ahead = np.roll(x, -1, axis=-1)
         behind = np.roll(x, 1, axis=-1)
         return np.asarray((ahead - np.roll(x, 2, axis=-1)) * behind - x + self.forcing)
 
-    def jacobian(self, state: npt.ArrayLike) -> Array:
+    def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the derivatives of the tendency, (..., sites, sites)."""
         x = np.asarray(state, dtype=float)
         here = np.arange(int(self.sites))

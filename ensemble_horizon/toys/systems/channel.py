@@ -18,8 +18,9 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
-from ensemble_horizon.toys.channel_basis import ChannelBasis, Gradient, Points
-from ensemble_horizon.toys.dynamics import Array, Field, System, parameter
+from ensemble_horizon.toys.dynamics import Field, System, Time, parameter
+from ensemble_horizon.toys.norms import Array, Norm, scaled
+from ensemble_horizon.toys.systems.channel_basis import ChannelBasis, Gradient, Points
 from ensemble_horizon.vocabulary import COORDINATE_ATTRIBUTES, LATITUDE, LONGITUDE
 
 EARTH_RADIUS = 6.371e6
@@ -68,6 +69,7 @@ class TwoLayerChannel(System):
     time_units: ClassVar[str] = "day"
     state_units: ClassVar[str] = "m2 s-1"
     step: ClassVar[float] = 1.0 / 24.0
+    spin_up: ClassVar[float] = 60.0
 
     @cached_property
     def basis(self) -> ChannelBasis:
@@ -147,6 +149,32 @@ class TwoLayerChannel(System):
         q[..., 1, :] += stretching
         return np.asarray(q)
 
+    def norms(self) -> dict[str, Norm]:
+        """Return the norms: area-weighted over both layers, and total energy, as a wind speed.
+
+        The total-energy norm is sqrt(2 E), so that a displacement without shear between the layers
+        has its root-mean-square wind as its norm.
+        """
+        vertical = np.stack([self._square, self._square + 2 * self.coupling])
+        weight = np.sqrt(0.5 * vertical)
+
+        def flatten(displacement: Array) -> Array:
+            return (_vertical_modes(self._split(displacement)) * weight).reshape(displacement.shape)
+
+        def restore(modes: Array) -> Array:
+            return _vertical_modes(self._split(modes) / weight).reshape(modes.shape)
+
+        mean = np.full(self.size, np.sqrt(0.5))
+        return {
+            **super().norms(),
+            "area-weighted": scaled(
+                "area-weighted", self.state_units, "root mean square over area and layers", mean
+            ),
+            "total-energy": Norm(
+                "total-energy", "m s-1", "root of twice the energy per mass", flatten, restore
+            ),
+        }
+
     def energy(self, state: npt.ArrayLike) -> Array:
         """Return total energy per unit mass (...), m2 s-2.
 
@@ -158,7 +186,7 @@ class TwoLayerChannel(System):
         """Return q^2 / 2 averaged over area and layers (...), s-2."""
         return np.asarray(0.25 * np.sum(self.vorticity(state) ** 2, axis=(-2, -1)))
 
-    def tendency(self, state: npt.ArrayLike) -> Array:
+    def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the change of the coefficients, (..., N), m2 s-1 per day."""
         psi, q = self._split(state), self.vorticity(state)
         points, weights = self._quadrature
@@ -166,7 +194,7 @@ class TwoLayerChannel(System):
         advection = self.basis.project(_determinant(flow, tracer), points, weights)
         return self._streamfunction(self._linear(psi, q, self.equilibrium) - advection)
 
-    def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike) -> Array:
+    def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the exact linearised tendency (..., N) of ``displacement`` about ``state``."""
         around, moved = np.asarray(state, dtype=float), np.asarray(displacement, dtype=float)
         # Grids carry the ensemble's axes in the middle, so both need the same number of them.
@@ -182,7 +210,7 @@ class TwoLayerChannel(System):
         advection = self.basis.project(turning, points, weights)
         return self._streamfunction(self._linear(psi_d, q_d, 0.0) - advection)
 
-    def jacobian(self, state: npt.ArrayLike) -> Array:
+    def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the derivatives of the tendency, (..., N, N), per day."""
         states = np.asarray(state, dtype=float)
         columns = self.tangent(states[..., None, :], np.eye(self.size))
@@ -268,6 +296,12 @@ class TwoLayerChannel(System):
         shear = -(q[..., 0, :] - q[..., 1, :]) / (self._square + 2 * self.coupling)
         psi = 0.5 * SECONDS_PER_DAY * np.stack([mean + shear, mean - shear], axis=-2)
         return psi.reshape(*psi.shape[:-2], -1)
+
+
+def _vertical_modes(layers: Array) -> Array:
+    """Return barotropic and baroclinic part of two layers (..., 2, n), or the layers of those."""
+    upper, lower = layers[..., 0, :], layers[..., 1, :]
+    return np.asarray(np.sqrt(0.5) * np.stack([upper + lower, upper - lower], axis=-2))
 
 
 def _determinant(flow: Gradient, tracer: Gradient) -> Array:

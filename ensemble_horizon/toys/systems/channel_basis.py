@@ -18,7 +18,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from ensemble_horizon.toys.dynamics import Array
+from ensemble_horizon.toys.norms import Array
 
 
 class Points(NamedTuple):

@@ -8,7 +8,8 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
-from ensemble_horizon.toys.dynamics import Array, PublishedValue, System, parameter
+from ensemble_horizon.toys.dynamics import PublishedValue, System, Time, parameter
+from ensemble_horizon.toys.norms import Array
 
 
 @dataclass(frozen=True)
@@ -47,11 +48,11 @@ class SpiralSink(System):
     def _matrix(self) -> Array:
         return np.array([[-self.decay, -self.rotation], [self.rotation, -self.decay]])
 
-    def tendency(self, state: npt.ArrayLike) -> Array:
+    def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return dx/dt (..., 2)."""
         return np.asarray(np.asarray(state, dtype=float) @ self._matrix().T)
 
-    def jacobian(self, state: npt.ArrayLike) -> Array:
+    def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the constant matrix, once per state: (..., 2, 2)."""
         leading = np.shape(state)[:-1]
         return np.broadcast_to(self._matrix(), (*leading, 2, 2)).copy()

@@ -5,10 +5,10 @@ from __future__ import annotations
 from dataclasses import fields
 
 from ensemble_horizon.checks import require_choice
-from ensemble_horizon.toys.channel import TwoLayerChannel
 from ensemble_horizon.toys.dynamics import System
-from ensemble_horizon.toys.lorenz import Lorenz63, Lorenz96
-from ensemble_horizon.toys.spiral import SpiralSink
+from ensemble_horizon.toys.systems.channel import TwoLayerChannel
+from ensemble_horizon.toys.systems.lorenz import Lorenz63, Lorenz96
+from ensemble_horizon.toys.systems.spiral import SpiralSink
 
 SYSTEMS: dict[str, type[System]] = {
     kind.name: kind for kind in (SpiralSink, Lorenz63, Lorenz96, TwoLayerChannel)
