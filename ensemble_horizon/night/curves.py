@@ -8,7 +8,7 @@ import numpy as np
 
 from ensemble_horizon.horizon.curve_limits import Curve
 from ensemble_horizon.night.variables import Places, Variable
-from ensemble_horizon.spread.moments import beyond_median, member_deviations, member_variance
+from ensemble_horizon.spread.moments import beyond_median, component_deviations, variance_of
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sampling import (
     LEAST_STARTS,
@@ -64,15 +64,17 @@ def _region_curve(
 def _site_curve(
     summary: Summary, variable: Variable, places: Places, number: int, kurtosis: float
 ) -> Curve:
-    values = summary.site_values[:, :, number]  # (T, M)
-    variance, _ = member_variance(values.T)
-    deviation = member_deviations(values.T)[0].T
-    noise = noise_from_gram(deviation[:, :, np.newaxis] * deviation[:, np.newaxis], kurtosis)
+    values = summary.site_values[:, :, number]  # (T, M, C)
+    first, *across = values.transpose(2, 1, 0)
+    deviations, count = component_deviations([first, *across])
+    variance = variance_of(deviations, count)
+    gram = sum(part.T[:, :, np.newaxis] * part.T[:, np.newaxis] for part in deviations)
+    noise = noise_from_gram(np.asarray(gram), kurtosis, one_place=bool(across))
     beyond = np.array(
-        [beyond_median(values.T, distance / variable.factor).T for distance in variable.distances],
+        [beyond_median(first, item / variable.factor, *across).T for item in variable.distances],
         dtype=float,
-    ).reshape(len(variable.distances), *values.shape)
-    shares, numbers = _shares(variable, beyond, np.isfinite(values))
+    ).reshape(len(variable.distances), *values.shape[:2])
+    shares, numbers = _shares(variable, beyond, np.isfinite(first.T))
     climatology = float("nan")
     if variable.climatology is not None:
         climatology = float(variable.climatology[places.site_index[number]])

@@ -37,9 +37,9 @@ from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.faults import Effect
 from ensemble_horizon.runs.verdict import name_members
 from ensemble_horizon.settings import Settings
+from ensemble_horizon.spread.kurtosis import pooled_kurtosis
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sample import SampleLayout
-from ensemble_horizon.spread.sampling import pooled_kurtosis
 
 ALL_STARTS = "all"
 _SMALL = 48 * 2**20  # bytes below which worker processes take longer to start than they save

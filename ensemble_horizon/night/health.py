@@ -145,7 +145,7 @@ def _implausible(summary: Summary, variable: Variable, leads: np.ndarray) -> lis
         least, most = sorted(variable.in_results(end) for end in (lowest, highest))
         message = (
             f"values from {low:.6g} to {high:.6g}, outside the plausible {least:.6g} to "
-            f"{most:.6g} {variable.units}, at {name_leads(leads[bad])}"
+            f"{most:.6g} {variable.value_units}, at {name_leads(leads[bad])}"
         )
         found.append(("implausible-values", int(member), int(bad[0]), message))
     return found
@@ -156,7 +156,7 @@ def _identical(summary: Summary, here: np.ndarray, labels: tuple[int | str, ...]
     values, low, high = summary.sample_values, summary.low, summary.high
     found: list[Found] = []
     copies: set[int] = set()
-    varied = np.ptp(np.nan_to_num(values), axis=(0, 2)) > 0
+    varied = np.ptp(np.nan_to_num(values), axis=(0, 2)).any(axis=-1)
     for second in range(values.shape[1]):
         for first in range(second):
             both = here[:, first] & here[:, second]

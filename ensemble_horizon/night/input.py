@@ -10,11 +10,17 @@ from dataclasses import dataclass
 import numpy as np
 
 from ensemble_horizon.errors import InputError, SettingsError
-from ensemble_horizon.night.variables import levels_of, source_names
+from ensemble_horizon.night.variables import (
+    LATITUDES,
+    levels_of,
+    position_geometry,
+    source_names,
+)
 from ensemble_horizon.runs import Catalogue, Fault, SurveyReport, read_catalogue, survey_runs
 from ensemble_horizon.runs.units import converter
 from ensemble_horizon.runs.verdict import fault_lines
 from ensemble_horizon.settings import Settings
+from ensemble_horizon.spread.displacements import SPHERE
 
 _DATE = re.compile(r"\d{4}-\d\d(-\d\d([T ]\d\d(:?\d\d)*)?)?Z?")
 
@@ -115,9 +121,8 @@ def _with_keys(settings: Settings, error: InputError) -> InputError:
         return error
     keys = []
     for name, table in settings.variables.items():
-        sources = table.speed or (table.source or name,)
-        if any(repr(source) in error.expected for source in sources):
-            keys.append(f"variables.{name}.{'speed' if table.speed else 'source'}")
+        if any(repr(source) in error.expected for source in table.sources(name)):
+            keys.append(f"variables.{name}.{table.source_key}")
     if not keys:
         return error
     return InputError(
@@ -174,12 +179,18 @@ def choose_starts(settings: Settings, catalogue: Catalogue) -> Catalogue:
 
 
 def _plausible(settings: Settings, catalogue: Catalogue) -> dict[str, tuple[float, float]]:
-    """Plausible ranges by source name; magnitudes of vectors bound both components."""
+    """Plausible ranges by source name; magnitudes of vectors bound both components.
+
+    Of positions on the sphere, the latitudes are known to lie between the poles.
+    """
     ranges: dict[str, tuple[float, float]] = {}
     for name, table in settings.variables.items():
+        geometry = position_geometry(settings, catalogue, name)
+        if geometry is not None and geometry.kind == SPHERE:
+            ranges[table.sources(name)[0]] = LATITUDES
         if table.plausible is None:
             continue
-        for part in table.speed or (table.source or name,):
+        for part in table.sources(name):
             units = catalogue.variables[part].units or ""
             factor, offset = (1.0, 0.0)
             if table.units is not None:

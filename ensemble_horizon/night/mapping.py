@@ -55,7 +55,7 @@ def noise_of_start(summary: Summary, layout: SampleLayout, kurtosis: float) -> F
     blocks: list[LeadNoise | None] = []
     for block in range(layout.blocks):
         values = summary.sample_values[:, :, layout.block_of_sample == block]
-        told = (np.isfinite(values).sum(axis=1) > 1).any()
+        told = (np.isfinite(values[..., 0]).sum(axis=1) > 1).any()
         blocks.append(noise_from_points(values, kurtosis) if told else None)
     return _field_noise(blocks, summary.sample_values.shape[0])
 
@@ -84,9 +84,8 @@ class PooledFields:
         self._count += known
         if self._share is not None and summary.share is not None:
             self._share += np.where(known, summary.share, 0)
-        leads, members, points = summary.sample_values.shape
-        flat = summary.sample_values.transpose(1, 0, 2).reshape(members, -1)
-        self._samples.append(member_variance(flat)[0].reshape(leads, points))
+        components = summary.sample_values.transpose(3, 1, 0, 2)
+        self._samples.append(member_variance(*components)[0])
         if len(self._noises) < LEAST_STARTS:  # with more starts the scatter between them counts
             self._noises.append(noise)
 

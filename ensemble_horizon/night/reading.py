@@ -23,7 +23,8 @@ class SourceVariable:
     name : str
         Name in the settings.
     parts : tuple of str
-        One source name, or the two components of a vector whose magnitude is meant.
+        One source name, or two: the components of a vector whose magnitude is meant, or, where
+        the reduction has a geometry, the coordinates of a position.
     reduction : Reduction
     """
 
@@ -70,12 +71,15 @@ def read_block(block: Block) -> Reading:
     catalogue = context.catalogue
     damage: Damage = {}
     parts = [_read_part(catalogue, name, block, damage) for name in variable.parts]
-    values = parts[0] if len(parts) == 1 else np.hypot(parts[0], parts[1], out=parts[0])
-    values = values.reshape(*values.shape[:2], -1)
+    reduction = variable.reduction
+    if len(parts) == 2 and reduction.geometry is None:
+        parts = [np.hypot(parts[0], parts[1], out=parts[0])]
+    parts = [values.reshape(*values.shape[:2], -1) for values in parts]
     if block.without:
-        values[list(block.without)] = np.nan
+        for values in parts:
+            values[list(block.without)] = np.nan
     points = window_points(catalogue.grid.shape, block.window)
-    return Reading(reduce_block(values, variable.reduction, points), damage)
+    return Reading(reduce_block(parts[0], reduction, points, *parts[1:]), damage)
 
 
 def _read_part(catalogue: Catalogue, name: str, block: Block, damage: Damage) -> np.ndarray:

@@ -14,16 +14,20 @@ from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.runs.fields import open_field
 from ensemble_horizon.runs.units import converter, difference_scale, same_units
 from ensemble_horizon.settings import Settings
+from ensemble_horizon.spread.displacements import SPHERE
 from ensemble_horizon.spread.places import (
     Region,
     grid_points,
     nearest_point,
     region_weights,
 )
+from ensemble_horizon.spread.positions import Geometry, geometry_of
 from ensemble_horizon.spread.reduction import Reduction, RegionWeights
 from ensemble_horizon.spread.sample import SampleLayout, sample_layout
+from ensemble_horizon.vocabulary import LATITUDE, LONGITUDE
 
 SERIES = "series"
+LATITUDES = (-90.0, 90.0)
 
 log = logging.getLogger(__name__)
 
@@ -63,6 +67,7 @@ class Variable:
         Source names.
     factor, offset : float
         Turn a value in the units of the files into one in ``units``; a difference by the factor.
+        Of positions on the sphere, the displacements in metres.
     plausible : (lowest, highest) in the units of the files, or None
     criteria : dict of label to Criterion, in ``units``
     climatology : (P,) climatological standard deviation in ``units``, or None
@@ -78,10 +83,16 @@ class Variable:
     criteria: dict[str, Criterion]
     climatology: np.ndarray | None
     offset: float = 0.0
+    geometry: str | None = None
 
     def in_results(self, value: float) -> float:
-        """A value in the units of the files, such as a plausible one, in those of the results."""
-        return value * self.factor + self.offset
+        """A value in the units of the files, such as a plausible one, in `value_units`."""
+        return value if self.geometry is not None else value * self.factor + self.offset
+
+    @property
+    def value_units(self) -> str:
+        """Units in which values are spoken of: of positions, those of the latitude."""
+        return "degrees_north" if self.geometry == SPHERE else self.units
 
     @property
     def distances(self) -> tuple[float, ...]:
@@ -94,7 +105,9 @@ class Variable:
     ) -> SourceVariable:
         """What the reading needs to know of this variable."""
         beyond = tuple(distance / self.factor for distance in self.distances)
-        reduction = Reduction(size, places.regions, places.site_index, sample.index, beyond, fields)
+        reduction = Reduction(
+            size, places.regions, places.site_index, sample.index, beyond, fields, self.geometry
+        )
         return SourceVariable(self.name, self.parts, reduction)
 
 
@@ -102,7 +115,7 @@ def source_names(settings: Settings) -> list[str]:
     """Source names that the settings ask for, each once."""
     names: list[str] = []
     for name, table in settings.variables.items():
-        names += list(table.speed) if table.speed else [table.source or name]
+        names += table.sources(name)
     return list(dict.fromkeys(names))
 
 
@@ -111,7 +124,7 @@ def levels_of(settings: Settings) -> dict[str, float]:
     found: dict[str, float] = {}
     for name, table in settings.variables.items():
         if table.level is not None:
-            for part in table.speed or (table.source or name,):
+            for part in table.sources(name):
                 if found.setdefault(part, table.level) != table.level:
                     raise SettingsError(
                         f"variables.{name}.level",
@@ -131,38 +144,77 @@ def resolve_variable(settings: Settings, catalogue: Catalogue, name: str) -> Var
         if units do not convert, or the climatology is not on the grid.
     """
     table = settings.variables[name]
-    parts = table.speed or (table.source or name,)
-    headers = [catalogue.variables[part] for part in parts]
-    file_units = headers[0].units or ""
-    if len(headers) == 2 and not same_units(file_units, headers[1].units or ""):
-        raise SettingsError(
-            f"variables.{name}.speed",
-            expected="two components in the same units",
-            found=f"{file_units!r} and {headers[1].units!r}",
-            remedy="name the two components of one vector",
-        )
+    parts = table.sources(name)
+    geometry = position_geometry(settings, catalogue, name)
+    file_units, factor, offset = _file_units(settings, catalogue, name), 1.0, 0.0
     units = table.units or file_units or "1"
-    factor, offset = (1.0, 0.0)
-    if table.units is not None:
-        factor, offset = converter(file_units, units, f"variables.{name}.units")
     plausible = None
+    if geometry is not None:
+        units = table.units or "m"
+        factor = geometry.metres * difference_scale("m", units, f"variables.{name}.units")
+        plausible = LATITUDES if geometry.kind == SPHERE else None
+    elif table.units is not None:
+        factor, offset = converter(file_units, units, f"variables.{name}.units")
     if table.plausible is not None:
         low, high = ((value - offset) / factor for value in table.plausible)
         plausible = (min(low, high), max(low, high))
     _warn_of_hold(name, table.hold, catalogue)
-    default = str(headers[0].attrs.get("long_name") or name.replace("_", " "))
+    own = catalogue.variables[parts[0]].attrs.get("long_name")
+    default = str(own or name.replace("_", " "))
     return Variable(
         name=name,
         long_name=table.label or (name.replace("_", " ") if len(parts) == 2 else default),
         units=units,
-        parts=tuple(parts),
+        parts=parts,
         factor=abs(factor),
         plausible=plausible,
         hold=table.hold,
         criteria=settings.criteria(name, units),
         climatology=_climatology(settings, catalogue, name, units),
         offset=offset,
+        geometry=None if geometry is None else geometry.kind,
     )
+
+
+def position_geometry(settings: Settings, catalogue: Catalogue, name: str) -> Geometry | None:
+    """The geometry of a position by the units of its coordinates; None for other variables.
+
+    Raises
+    ------
+    SettingsError, InputError
+        if the units are those of no position, or are missing in the files.
+    """
+    pair = settings.variables[name].position
+    if pair is None:
+        return None
+    units = [catalogue.variables[part].units or "" for part in pair]
+    try:
+        return geometry_of(units[0], units[1], f"variables.{name}.position")
+    except ArgumentError as error:
+        kind = SettingsError if all(units) else InputError
+        found = ", ".join(
+            f"{part!r} in {unit!r}" if unit else f"{part!r} without units"
+            for part, unit in zip(pair, units, strict=True)
+        )
+        raise kind(
+            error.culprit, expected=error.expected, found=found, remedy=error.remedy
+        ) from error
+
+
+def _file_units(settings: Settings, catalogue: Catalogue, name: str) -> str:
+    """Units of a scalar in the files, the same for both components of a vector."""
+    pair = settings.variables[name].speed
+    units = [
+        catalogue.variables[part].units or "" for part in settings.variables[name].sources(name)
+    ]
+    if pair is not None and not same_units(units[0], units[1]):
+        raise SettingsError(
+            f"variables.{name}.speed",
+            expected="two components in the same units",
+            found=f"{units[0]!r} and {units[1]!r}",
+            remedy="name the two components of one vector",
+        )
+    return units[0]
 
 
 def _warn_of_hold(name: str, hold: float, catalogue: Catalogue) -> None:
@@ -235,6 +287,8 @@ def resolve_places(settings: Settings, catalogue: Catalogue) -> Places:
                 remedy="take [regions] and [sites] out of the settings",
             )
         return Places((), (SERIES,), np.zeros(1, dtype=int))
+    if not {LATITUDE, LONGITUDE} <= set(catalogue.grid.coords):
+        return _everywhere(settings, catalogue)
     latitude, longitude = grid_points(catalogue.grid.coords)
     try:
         weights = tuple(_region(region, latitude, longitude) for region in regions)
@@ -250,6 +304,20 @@ def resolve_places(settings: Settings, catalogue: Catalogue) -> Places:
         tuple(site.name for site in sites),
         np.array([index for index, _ in nearest], dtype=int),
     )
+
+
+def _everywhere(settings: Settings, catalogue: Catalogue) -> Places:
+    """The whole domain of a grid without latitude and longitude: all points count alike."""
+    if settings.regions or settings.sites:
+        raise SettingsError(
+            "regions and sites",
+            expected="none, because the grid of the runs has no latitude and longitude",
+            found=", ".join([*settings.regions, *settings.sites]),
+            remedy="take them out of the settings, or add latitude and longitude to the files",
+        )
+    size = int(np.prod(catalogue.grid.shape, dtype=int))
+    whole = RegionWeights("domain", np.arange(size), np.full(size, 1 / size))
+    return Places((whole,), (), np.empty(0, dtype=int))
 
 
 def layout_of(catalogue: Catalogue) -> SampleLayout:

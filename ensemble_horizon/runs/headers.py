@@ -29,6 +29,7 @@ from ensemble_horizon.vocabulary import (
 )
 
 _RUN_ROLES = (LEAD, VALID, MEMBER, START)
+_PLACES = (LATITUDE, LONGITUDE, Y, X)
 _RUN_STANDARD_NAMES = {name for role in _RUN_ROLES for name in STANDARD_NAMES[role]}
 _REFERENCES = (
     "coordinates", "bounds", "climatology", "grid_mapping", "cell_measures",
@@ -139,11 +140,9 @@ class HeaderReading:
     def header(self) -> FileHeader:
         """The whole header."""
         names = self._data_names()
-        chosen = names
-        absent: tuple[str, ...] = ()
-        if self.wanted.variables is not None:
-            chosen = [name for name in self.wanted.variables if name in self.variables]
-            absent = tuple(name for name in self.wanted.variables if name not in self.variables)
+        asked = self.wanted.variables
+        chosen = names if asked is None else [name for name in asked if name in self.variables]
+        absent = tuple(name for name in asked or () if name not in self.variables)
         if not chosen:
             raise self._no_variable(names)
         groups: dict[tuple[tuple[str, ...], object], list[str]] = {}
@@ -175,7 +174,7 @@ class HeaderReading:
 
     def _coordinate_roles(self) -> dict[str, str]:
         """Role of each variable that can be a coordinate."""
-        referred = set(self._referred("coordinates"))
+        referred, asked = set(self._referred("coordinates")), self.wanted.variables or ()
         roles = {}
         for name, variable in self.variables.items():
             attributes = self.attributes[name]
@@ -185,7 +184,9 @@ class HeaderReading:
                 role in (LATITUDE, LONGITUDE)
                 or str(attributes.get("standard_name")) in _RUN_STANDARD_NAMES
             )
-            if role is not None and (own or flat):
+            # A latitude that is asked for is data, the position of a float, and no place.
+            data = role in _PLACES and name in asked and name not in variable.dimensions
+            if role is not None and (own or flat) and not data:
                 roles[name] = role
         return roles
 
@@ -285,9 +286,7 @@ class HeaderReading:
         listed = str(self.attributes[name].get("coordinates", "")).split()
         found: dict[str, list[str]] = {}
         for coordinate, role in self.roles.items():
-            if role in (LATITUDE, LONGITUDE, Y, X) and set(
-                self.variables[coordinate].dimensions
-            ) <= set(dims):
+            if role in _PLACES and set(self.variables[coordinate].dimensions) <= set(dims):
                 found.setdefault(role, []).append(coordinate)
         return {
             role: self.variables[min(names, key=lambda c: (c not in listed, c not in dims))]
@@ -302,8 +301,9 @@ class HeaderReading:
             lead_axis = moments.lead_axis
             lead = 1 if lead_axis is None else int(chunking[source.run_axes[lead_axis]])
             chunks = (lead, *(int(chunking[axis]) for axis in source.space_axes))
-        units = str(attributes.get("units", ""))
-        return VariableHeader(name, units, variable.dtype, attributes, chunks)
+        return VariableHeader(
+            name, str(attributes.get("units", "")), variable.dtype, attributes, chunks
+        )
 
     def _no_variable(self, names: list[str]) -> InputError:
         offered = ", ".join(names) or "none"
@@ -346,5 +346,4 @@ class HeaderReading:
 
 
 def _is_numeric(variable: StoredVariable) -> bool:
-    dtype = variable.dtype
-    return isinstance(dtype, np.dtype) and dtype.kind in "iuf"
+    return isinstance(variable.dtype, np.dtype) and variable.dtype.kind in "iuf"

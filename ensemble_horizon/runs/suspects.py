@@ -127,10 +127,25 @@ def _all_constant(catalogue: Catalogue, content: Content) -> Fault:
 
 
 def _identical(catalogue: Catalogue, content: Content, _: Pair) -> Iterator[Fault]:
-    """Pairs of members whose fields are equal to the bit at all, or at some, common leads."""
+    """Pairs of members whose fields are equal to the bit at all, or at some, common leads.
+
+    Leads at which all members are equal, as at the release of floats, tell nothing of pairs.
+    """
     telling = (content.digest >= 0) & (
         ~content.constant if content.size > 1 else np.ones_like(content.unreadable)
     )
+    one = np.where(telling, content.digest, content.digest.max(axis=1, keepdims=True))
+    shared = (np.ptp(one, axis=1) == 0) & (telling.sum(axis=1) > 2)
+    if shared.any() and not shared[telling.any(axis=1)].all():
+        telling[shared] = False
+        yield Fault(
+            "identical-leads",
+            start=catalogue.start_label(content.start),
+            lead=float(catalogue.leads[shared][0]),
+            message=f"all members are identical in {content.variable!r} at "
+            + name_leads(catalogue.leads[shared]),
+            variable=content.variable,
+        )
     copies: set[int] = set()
     for second in range(content.digest.shape[1]):
         for first in range(second):

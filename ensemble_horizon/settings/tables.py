@@ -39,6 +39,7 @@ class VariableTable(Table):
 
     source: str | None = None
     speed: tuple[str, str] | None = None
+    position: tuple[str, str] | None = None
     label: str | None = None
     units: str | None = None
     plausible: tuple[float, float] | None = None
@@ -48,9 +49,24 @@ class VariableTable(Table):
 
     @model_validator(mode="after")
     def _one_source(self) -> VariableTable:
-        if self.source is not None and self.speed is not None:
-            raise ValueError("either source or speed, not both")
+        keys = ("source", "speed", "position")
+        given = [key for key in keys if getattr(self, key) is not None]
+        if len(given) > 1:
+            raise ValueError(
+                f"either source or speed or position, not {' and '.join(given)} together"
+            )
+        if self.position is not None and self.plausible is not None:
+            raise ValueError(
+                "a position has no plausible range of its own; latitudes are held to -90 to 90"
+            )
         return self
+
+    @field_validator("position")
+    @classmethod
+    def _two_coordinates(cls, value: tuple[str, str] | None) -> tuple[str, str] | None:
+        if value is not None and value[0] == value[1]:
+            raise ValueError("two different variables, latitude and longitude or x and y")
+        return value
 
     @field_validator("plausible")
     @classmethod
@@ -58,6 +74,15 @@ class VariableTable(Table):
         if value is not None and not value[0] < value[1]:
             raise ValueError("[lowest, highest] with lowest below highest")
         return value
+
+    def sources(self, name: str) -> tuple[str, ...]:
+        """Names in the files of what the variable ``name`` is made from."""
+        return self.speed or self.position or (self.source or name,)
+
+    @property
+    def source_key(self) -> str:
+        """The key under which `sources` are named."""
+        return "speed" if self.speed else "position" if self.position else "source"
 
 
 class RegionTable(Table):

@@ -2,7 +2,8 @@
 
 A block is one start, a few leads and all members over one window of the grid. Nothing of the size
 of the ensemble leaves `reduce_block`: fields of spread variance, weighted sums for regions, the
-members' values at sites and at a thin sample of points.
+members' values at sites and at a thin sample of points. Positions become displacements here, and
+everything after it has a component axis: one component of a scalar, two of a displacement.
 """
 
 from __future__ import annotations
@@ -11,7 +12,8 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from ensemble_horizon.spread.moments import beyond_median, member_deviations
+from ensemble_horizon.spread.displacements import displacements, whole_positions
+from ensemble_horizon.spread.moments import beyond_median, component_deviations, variance_of
 
 _SLAB = 8192
 
@@ -42,6 +44,7 @@ class Reduction:
         Distances from the median, for chance criteria.
     fields : bool
         Whether fields at every point are wanted.
+    geometry : ``SPHERE`` or ``PLANE`` of positions, None for scalars
     """
 
     size: int
@@ -50,11 +53,21 @@ class Reduction:
     sample: np.ndarray = field(default_factory=lambda: np.empty(0, dtype=int))
     beyond: tuple[float, ...] = ()
     fields: bool = True
+    geometry: str | None = None
+
+    @property
+    def components(self) -> int:
+        """Components of a value: one of a scalar, two of a displacement."""
+        return 1 if self.geometry is None else 2
 
 
 @dataclass
 class Summary:
-    """What is left of T leads, M members, P points; R regions, A distances, S sites, K samples."""
+    """What is left of T leads, M members, P points; R regions, A distances, S sites, K samples.
+
+    C is the number of components. Of positions, gaps and extremes are those of the latitude (or x)
+    where the position is whole.
+    """
 
     variance: np.ndarray | None  # (T, P)
     share: np.ndarray | None  # (A, T, P) share of members beyond the distance
@@ -62,8 +75,8 @@ class Summary:
     region_weight: np.ndarray  # (T, R) sum of those weights
     gram: np.ndarray  # (T, R, M, M) weighted inner products of member deviations
     region_beyond: np.ndarray  # (A, T, R, M) weights where a member is beyond, over members there
-    site_values: np.ndarray  # (T, M, S)
-    sample_values: np.ndarray  # (T, M, K)
+    site_values: np.ndarray  # (T, M, S, C)
+    sample_values: np.ndarray  # (T, M, K, C)
     gaps: np.ndarray  # (T, M) points without a value
     low: np.ndarray  # (T, M) smallest value
     high: np.ndarray  # (T, M) largest value
@@ -89,32 +102,49 @@ class Summary:
         self.high[leads] = np.fmax(self.high[leads], part.high)
 
 
-def reduce_block(values: np.ndarray, reduction: Reduction, points: np.ndarray | None) -> Summary:
+def reduce_block(
+    values: np.ndarray,
+    reduction: Reduction,
+    points: np.ndarray | None,
+    across: np.ndarray | None = None,
+) -> Summary:
     """Reduce the members of a block.
 
     Parameters
     ----------
     values : (M, T, P) floats, NaN where there is no value
+        A scalar, or the latitude (or x) of positions.
     reduction : Reduction
     points : (P,) int, increasing, or None
         Which points of the flattened grid these are; None means all of them.
+    across : (M, T, P), for positions
+        The longitude (or y).
     """
     members, leads, size = values.shape
     summary = empty_summary(reduction, members, leads, size)
-    site_from, site_to = _locate(reduction.sites, points)
-    sample_from, sample_to = _locate(reduction.sample, points)
     parts = [_part(region, points) for region in reduction.regions]
+    single = [
+        (summary.site_values, *_locate(reduction.sites, points)),
+        (summary.sample_values, *_locate(reduction.sample, points)),
+    ]
     for lead in range(leads):
-        field_values = values[:, lead]
-        summary.site_values[lead][:, site_to] = field_values[:, site_from]
-        summary.sample_values[lead][:, sample_to] = field_values[:, sample_from]
-        present = _note_health(summary, lead, field_values)
+        fields = [values[:, lead]]
+        health = fields[0]
+        if reduction.geometry is not None:
+            assert across is not None
+            health = whole_positions(fields[0], across[:, lead], reduction.geometry)
+            fields = list(displacements(fields[0], across[:, lead], reduction.geometry))
+        for kept, source, target in single:
+            for component, field_values in enumerate(fields):
+                kept[lead, :, target, component] = field_values[:, source].T
+        present = _note_health(summary, lead, health)
         if present.sum() < 2:
             continue
-        kept = field_values if present.all() else field_values[present]
-        _reduce_spread(summary, lead, np.flatnonzero(present), kept, parts)
+        if not present.all():
+            fields = [field_values[present] for field_values in fields]
+        _reduce_spread(summary, lead, np.flatnonzero(present), fields, parts)
         for number, distance in enumerate(reduction.beyond):
-            _reduce_shares(summary, lead, number, present, kept, distance, parts)
+            _reduce_shares(summary, lead, number, present, fields, distance, parts)
     return summary
 
 
@@ -140,17 +170,15 @@ def _part(region: RegionWeights, points: np.ndarray | None) -> _Part:
 
 
 def _reduce_spread(
-    summary: Summary, lead: int, rows: np.ndarray, values: np.ndarray, parts: list[_Part]
+    summary: Summary, lead: int, rows: np.ndarray, fields: list[np.ndarray], parts: list[_Part]
 ) -> None:
     """Variance at every point, and sums and inner products over regions, in one go."""
-    size = values.shape[1]
+    size = fields[0].shape[1]
     grams = np.zeros((len(parts), rows.size, rows.size))
     for first in range(0, size, _SLAB):
         stop = min(first + _SLAB, size)
-        deviation, count = member_deviations(values[:, first:stop])
-        with np.errstate(invalid="ignore", divide="ignore"):
-            total = np.einsum("mp,mp->p", deviation, deviation)
-            variance = np.where(count > 1, total / (count - 1), np.nan)
+        deviations, count = component_deviations([values[:, first:stop] for values in fields])
+        variance = variance_of(deviations, count)
         if summary.variance is not None:
             summary.variance[lead, first:stop] = variance
         for place, part in enumerate(parts):
@@ -162,8 +190,9 @@ def _reduce_spread(
             weight = np.where(known, weight, 0.0)
             summary.region_sum[lead, place] += weight @ np.where(known, local, 0.0)
             summary.region_weight[lead, place] += weight.sum()
-            scaled = deviation[:, chosen] * np.sqrt(weight).astype(deviation.dtype)
-            grams[place] += scaled @ scaled.T
+            for deviation in deviations:
+                scaled = deviation[:, chosen] * np.sqrt(weight).astype(deviation.dtype)
+                grams[place] += scaled @ scaled.T
     summary.gram[lead][np.ix_(np.arange(len(parts)), rows, rows)] += grams
 
 
@@ -172,12 +201,12 @@ def _reduce_shares(
     lead: int,
     number: int,
     present: np.ndarray,
-    values: np.ndarray,
+    fields: list[np.ndarray],
     distance: float,
     parts: list[_Part],
 ) -> None:
-    far = beyond_median(values, distance)
-    count = np.isfinite(values).sum(axis=0)
+    far = beyond_median(fields[0], distance, *fields[1:])
+    count = np.isfinite(fields[0]).sum(axis=0)
     if summary.share is not None:
         with np.errstate(invalid="ignore", divide="ignore"):
             share = far.sum(axis=0) / count
@@ -193,7 +222,8 @@ def _reduce_shares(
 def empty_summary(reduction: Reduction, members: int, leads: int, size: int) -> Summary:
     """A summary with nothing in it yet."""
     regions, distances = len(reduction.regions), len(reduction.beyond)
-    fields = reduction.fields
+    fields, components = reduction.fields, reduction.components
+    sites, sample = reduction.sites.size, reduction.sample.size
     return Summary(
         variance=np.full((leads, size), np.nan, dtype=np.float32) if fields else None,
         share=np.full((distances, leads, size), np.nan, np.float32)
@@ -203,8 +233,8 @@ def empty_summary(reduction: Reduction, members: int, leads: int, size: int) -> 
         region_weight=np.zeros((leads, regions)),
         gram=np.zeros((leads, regions, members, members)),
         region_beyond=np.zeros((distances, leads, regions, members)),
-        site_values=np.full((leads, members, reduction.sites.size), np.nan),
-        sample_values=np.full((leads, members, reduction.sample.size), np.nan, dtype=np.float32),
+        site_values=np.full((leads, members, sites, components), np.nan),
+        sample_values=np.full((leads, members, sample, components), np.nan, dtype=np.float32),
         gaps=np.zeros((leads, members), dtype=np.int64),
         low=np.full((leads, members), np.nan),
         high=np.full((leads, members), np.nan),

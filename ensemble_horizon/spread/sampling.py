@@ -13,6 +13,10 @@ For Gaussian members with covariance S(s,t) between leads s and t (cells as vect
 and tr(S S) is estimated without bias from the members' inner products (Wishart moments; Bai and
 Saranadasa 1996, Statistica Sinica, from memory). Heavier tails enter as an excess kurtosis pooled
 over places: Var(V) = V^2 (2/(M-1) + kurtosis/M), the textbook variance of a sample variance.
+
+A position has two components, east and north, which enter like the cells of a region of two points:
+its variance has up to 2 (M - 1) degrees of freedom, and no more than M - 1 where the members lie
+along a line.
 """
 
 from __future__ import annotations
@@ -27,7 +31,8 @@ from scipy import special
 from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.spread.curves import spatial_dimensions
-from ensemble_horizon.spread.moments import member_deviations
+from ensemble_horizon.spread.kurtosis import pooled_kurtosis
+from ensemble_horizon.spread.moments import component_deviations, member_deviations
 from ensemble_horizon.spread.places import Region, grid_points, region_weights
 from ensemble_horizon.vocabulary import LATITUDE, LEAD, LONGITUDE, MEMBER, START
 
@@ -78,7 +83,7 @@ def chi_square_quantile(probability: np.ndarray | float, dof: np.ndarray | float
     return np.asarray(2 * special.gammaincinv(np.asarray(dof) / 2, probability))
 
 
-def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
+def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0, one_place: bool = False) -> LeadNoise:
     """Sampling noise from the members' inner products at each lead.
 
     Parameters
@@ -86,6 +91,9 @@ def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
     gram : (L, M, M) weighted inner products of the members' deviations from their mean
     kurtosis : float
         Excess kurtosis of the members, pooled over places; below zero counts as zero.
+    one_place : bool
+        Whether these are displacements at one place, whose two components share their tails; the
+        places of a region are far or near together.
 
     Examples
     --------
@@ -96,11 +104,17 @@ def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
     """
     present = np.einsum("lmm->lm", gram) > 0
     n = np.maximum(present.sum(axis=1) - 1.0, 1.0)
-    pair = np.minimum(n[:, np.newaxis], n)
     trace = np.einsum("lmm->l", gram) / n
     flat = gram.reshape(gram.shape[0], -1)
     square = flat @ flat.T / (n[:, np.newaxis] * n)
-    product = trace[:, np.newaxis] * trace
+    return _noise_of_traces(square, trace[:, np.newaxis] * trace, n, kurtosis, one_place)
+
+
+def _noise_of_traces(
+    square: np.ndarray, product: np.ndarray, n: np.ndarray, kurtosis: float, one_place: bool
+) -> LeadNoise:
+    """Noise from tr(S_s S_t) and tr(S_s) tr(S_t), both (L, L), of sample covariances S."""
+    pair = np.minimum(n[:, np.newaxis], n)
     with np.errstate(invalid="ignore", divide="ignore"):
         cross = (square - product / pair) * pair**2 / np.maximum((pair - 1) * (pair + 2), 1.0)
         own = np.maximum(np.diag(cross), np.diag(product) * 1e-6)
@@ -108,7 +122,8 @@ def noise_from_gram(gram: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
         # No value or no spread at a lead: nothing to tell patterns by, but still a number.
         dof = np.where(own > 0, dof, n)
         correlation = cross / np.sqrt(own[:, np.newaxis] * own)
-    return LeadNoise(_widen(dof, n, kurtosis), _as_correlation(correlation))
+    widened = _widen_together(dof, n, kurtosis) if one_place else _widen(dof, n, kurtosis)
+    return LeadNoise(widened, _as_correlation(correlation))
 
 
 def noise_from_points(values: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
@@ -116,17 +131,27 @@ def noise_from_points(values: np.ndarray, kurtosis: float = 0.0) -> LeadNoise:
 
     Parameters
     ----------
-    values : (L, M, K) members at K points of the neighbourhood
+    values : (L, M, K) members at K points of the neighbourhood, or (L, M, K, C) of C components:
+        with two, displacements, the degrees of freedom are pooled over the points as well
     kurtosis : float
         As in `noise_from_gram`.
     """
-    leads, members, points = values.shape
-    deviation, count = member_deviations(values.transpose(1, 0, 2).reshape(members, -1))
-    deviation = deviation.reshape(members, leads, points).transpose(2, 1, 0)
+    leads, members, points = values.shape[:3]
+    flat = values.reshape(leads, members, points, -1).transpose(3, 1, 0, 2)
+    parts, count = component_deviations([part.reshape(members, -1) for part in flat])
+    deviation = np.stack([part.reshape(members, leads, points) for part in parts])
+    deviation = deviation.transpose(3, 2, 0, 1)  # (K, L, C, M)
     with np.errstate(invalid="ignore", divide="ignore"):
-        unit = deviation / np.sqrt((deviation**2).sum(axis=2, keepdims=True))
+        unit = deviation / np.sqrt((deviation**2).sum(axis=(2, 3), keepdims=True))
     n = np.maximum(count.reshape(leads, points).max(axis=1) - 1.0, 1.0)
+    unit = unit.reshape(points, -1, members)
     square = (unit @ unit.transpose(0, 2, 1)) ** 2
+    if len(parts) > 1:
+        square = square.reshape(points, leads, len(parts), leads, len(parts)).sum(axis=(2, 4))
+        known = np.isfinite(square)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            mean = np.where(known, square, 0.0).sum(axis=0) / known.sum(axis=0)
+        return _noise_of_traces(mean, np.ones((leads, leads)), n, kurtosis, True)
     correlation = _unbiased_mean_square(square, np.minimum(n[:, np.newaxis], n) + 1)
     return LeadNoise(_widen(n, n, kurtosis), _as_correlation(correlation))
 
@@ -147,51 +172,6 @@ def _unbiased_mean_square(square: np.ndarray, members: np.ndarray) -> np.ndarray
         total = total + factor * power.sum(axis=0)
     mean = 1 - np.maximum(members - 3, 0) / np.maximum(members - 2, 1) * total / number
     return np.where(known.any(axis=0), mean, 0.0)
-
-
-def pooled_kurtosis(values: np.ndarray) -> float:
-    """Excess kurtosis of members pooled over leads and points; zero unless clearly above it.
-
-    Parameters
-    ----------
-    values : (L, M, K) members at K points
-
-    Notes
-    -----
-    The fourth cumulant over the square of the second, both from Fisher's unbiased k-statistics
-    summed over points: a ratio of sums, as the mean of ratios from few members misses heavy tails.
-    From 20 Gaussian members one point scatters by sqrt(24/20); as leads and neighbouring points
-    repeat one another, only one point in four and no lead counts towards the precision of the mean.
-    """
-    values = _complete_members(values)
-    _, members, points = values.shape
-    if members < 5 or points == 0:
-        return 0.0
-    complete = values[:, :, np.isfinite(values).all(axis=(0, 1))].astype(float)
-    complete = complete - complete.mean(axis=1, keepdims=True)
-    complete = complete[(complete != 0).any(axis=(1, 2))]  # leads that all members share
-    if complete.shape[0] == 0:
-        return 0.0
-    varying = (complete**2).sum(axis=1).min(axis=0) > 0
-    if not varying.any():
-        return 0.0
-    chosen = complete[:, :, varying]
-    second, raw = (chosen**2).mean(axis=1), (chosen**4).mean(axis=1)
-    variance = second * members / (members - 1)
-    fourth = (members + 1) * raw - 3 * (members - 1) * second**2
-    fourth *= members**2 / ((members - 1) * (members - 2) * (members - 3))
-    # E[k2^2] = sigma^4 (1 + 2/(M-1)) + k4/M
-    square = (variance**2 - fourth / members) / (1 + 2 / (members - 1))
-    mean = float(np.mean(fourth.sum(axis=1) / np.maximum(square.sum(axis=1), 1e-300)))
-    error = np.sqrt(24 / members / max(1.0, varying.sum() / 4))
-    return mean if mean > 2 * error else 0.0
-
-
-def _complete_members(values: np.ndarray) -> np.ndarray:
-    """Leads (L, M, K) at which any member has a value, and the members that have one at all."""
-    here = np.isfinite(values).any(axis=2)
-    leads = here.any(axis=1)
-    return values[leads][:, here[leads].all(axis=0)]
 
 
 def pooled_noise(
@@ -336,6 +316,16 @@ def _widen(dof: np.ndarray, n: np.ndarray, kurtosis: float) -> np.ndarray:
     # Elliptical tails scale Cov(V_s, V_t) as a whole: 2/n becomes 2/n + kurtosis/M.
     factor = 1 + max(kurtosis, 0.0) / 2 * n / (n + 1)
     return np.maximum(dof / factor, 1.0)
+
+
+def _widen_together(dof: np.ndarray, n: np.ndarray, kurtosis: float) -> np.ndarray:
+    """The same for components of an elliptical distribution, which are far out together.
+
+    Its fourth cumulants are kurtosis / 3 (S_ii S_jj + 2 S_ij^2) (Muirhead 1982, Aspects of
+    Multivariate Statistical Theory, from memory), and tr(S S) / tr(S)^2 is n / dof.
+    """
+    extra = max(kurtosis, 0.0) / 3 * (1 + 2 * n / dof) / (n + 1)
+    return np.maximum(2 / (2 / dof + extra), 1.0)
 
 
 def _as_correlation(matrix: np.ndarray) -> np.ndarray:

@@ -13,7 +13,8 @@ import ensemble_horizon as eh
 from ensemble_horizon.horizon.criteria import SaturationFraction, Tolerance
 from ensemble_horizon.horizon.curve_growth import growth_of_curves
 from ensemble_horizon.horizon.curve_limits import Curve, limits_of_curve
-from ensemble_horizon.spread.sampling import noise_from_gram, pooled_kurtosis
+from ensemble_horizon.spread.kurtosis import pooled_kurtosis
+from ensemble_horizon.spread.sampling import noise_from_gram
 
 MEMBERS, LEADS, RATE, SATURATION, INITIAL = 20, 41, 0.03, 10.0, 0.1
 LEAD = 6.0 * np.arange(LEADS)

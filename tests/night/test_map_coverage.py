@@ -8,9 +8,9 @@ from ensemble_horizon.horizon.map_limits import MapOptions
 from ensemble_horizon.night.engine import Engine
 from ensemble_horizon.night.mapping import Fields, map_fields, noise_of_start
 from ensemble_horizon.night.variables import Variable
+from ensemble_horizon.spread.kurtosis import pooled_kurtosis
 from ensemble_horizon.spread.reduction import Reduction, reduce_block
 from ensemble_horizon.spread.sample import sample_layout
-from ensemble_horizon.spread.sampling import pooled_kurtosis
 
 MEMBERS, LEADS, RATE, SATURATION, INITIAL = 20, 41, 0.03, 10.0, 0.1
 LEAD = 6.0 * np.arange(LEADS)

@@ -6,12 +6,12 @@ import xarray as xr
 from scipy import special, stats
 
 import ensemble_horizon as eh
+from ensemble_horizon.spread.kurtosis import pooled_kurtosis
 from ensemble_horizon.spread.moments import member_deviations
 from ensemble_horizon.spread.sampling import (
     LeadNoise,
     noise_from_gram,
     noise_from_points,
-    pooled_kurtosis,
     pooled_noise,
 )
 
@@ -76,6 +76,53 @@ def test_pooled_points_give_the_correlation_with_far_less_scatter():
     noise = noise_from_points(np.stack([first, second]))
     assert noise.correlation[0, 1] == pytest.approx(0.64, abs=0.03)
     np.testing.assert_allclose(noise.dof, MEMBERS - 1)
+
+
+@pytest.mark.parametrize("stretch", [1.0, 0.5, 0.0])
+def test_two_components_have_the_degrees_of_freedom_of_their_directions(stretch):
+    # Satterthwaite 1946, Biometrics Bulletin: (a + b)^2 / (a^2 + b^2) (M - 1) for variances a, b.
+    rng, rho = np.random.default_rng(11), 0.8
+    first = rng.normal(size=(MEMBERS, 400, 2))
+    second = rho * first + np.sqrt(1 - rho**2) * rng.normal(size=first.shape)
+    values = np.stack([first, second]) * np.array([1.0, stretch])
+    values -= values.mean(axis=1, keepdims=True)
+    expected = (1 + stretch**2) ** 2 / (1 + stretch**4) * (MEMBERS - 1)
+    noise = noise_from_points(values)
+    np.testing.assert_allclose(noise.dof, expected, rtol=0.06)
+    assert noise.correlation[0, 1] == pytest.approx(rho**2, abs=0.03)
+    # A site, one by one, and its kin: a region of two points.
+    sites = [noise_from_gram(gram_of(values[:, :, k])) for k in range(400)]
+    assert np.median([site.dof[0] for site in sites]) == pytest.approx(expected, rel=0.06)
+    # What the variances of the 400 points themselves say, members and points drawn afresh.
+    variance = (values**2).sum(axis=(1, 3)) / (MEMBERS - 1)
+    seen = 2 * variance.mean(axis=1) ** 2 / variance.var(axis=1)
+    np.testing.assert_allclose(noise.dof, seen, rtol=0.25)
+
+
+@pytest.mark.parametrize("stretch", [1.0, 0.3])
+def test_components_that_are_far_out_together_widen_as_simulated(stretch):
+    # Bivariate Laplace: a Gaussian times the root of an exponential; excess kurtosis 3.
+    rng = np.random.default_rng(13)
+    values = rng.normal(size=(1, MEMBERS, 20000, 2)) * np.array([1.0, stretch])
+    values *= np.sqrt(rng.exponential(size=(1, MEMBERS, 20000, 1)))
+    values -= values.mean(axis=1, keepdims=True)
+    kurtosis = pooled_kurtosis(values)
+    variance = (values[0] ** 2).sum(axis=(0, 2)) / (MEMBERS - 1)
+    seen = 2 * variance.mean() ** 2 / variance.var()
+    assert noise_from_points(values, kurtosis).dof[0] == pytest.approx(seen, rel=0.08)
+    sites = [noise_from_gram(gram_of(values[:, :, k]), kurtosis, True).dof for k in range(500)]
+    assert np.median(sites) == pytest.approx(seen, rel=0.15)
+
+
+def test_gaps_and_leads_without_spread_do_not_harm_two_components():
+    values = np.random.default_rng(12).normal(size=(3, MEMBERS, 40, 2))
+    values -= values.mean(axis=1, keepdims=True)
+    values[0] = 0.0
+    values[2, 3] = np.nan
+    noise = noise_from_points(values)
+    assert noise.dof[0] == MEMBERS - 1
+    assert noise.correlation[0, 1] == pytest.approx(0.0, abs=1e-6)
+    assert noise.dof[2] == pytest.approx(2 * (MEMBERS - 2), rel=0.15)
 
 
 def test_the_log_spread_covariance_is_that_of_simulated_spreads():
