@@ -32,8 +32,9 @@ class PublishedValue:
     """A number from the literature that the system must reproduce.
 
     ``quantity`` is one of ``exponents``, ``leading_exponent``, ``sum_of_exponents``,
-    ``positive_exponents``, ``dimension``; it holds for ``parameters`` (others at their default)
-    and to within ``tolerance`` (same units as the value, per unit of model time).
+    ``positive_exponents``, ``dimension``, ``period`` (of the orbit that is followed, in units of
+    model time); it holds for ``parameters`` (others at their default) and to within ``tolerance``
+    (same units as the value; exponents are per unit of model time).
     """
 
     quantity: str
@@ -60,17 +61,20 @@ def parameter(
     *,
     above: float | None = None,
     minimum: float | None = None,
+    below: float | None = None,
     whole: bool = False,
 ) -> Any:
     """Declare a parameter of a system: default, units, meaning and the values it accepts.
 
-    ``above`` excludes the bound itself, ``minimum`` includes it; ``whole`` asks for an integer.
+    ``above`` and ``below`` exclude the bound itself, ``minimum`` includes it; ``whole`` asks for an
+    integer.
     """
     metadata = {
         "units": units,
         "meaning": meaning,
         "above": above,
         "minimum": minimum,
+        "below": below,
         "whole": whole,
     }
     return field(default=default, metadata=metadata)
@@ -134,6 +138,11 @@ class System(ABC):
         return len(self.variables)
 
     @property
+    def units_of_variables(self) -> tuple[str, ...]:
+        """Units of the N variables; here the same for all, ``state_units``."""
+        return (self.state_units,) * self.size
+
+    @property
     def hours_per_time_unit(self) -> float | None:
         """Hours in one unit of model time, or None where time is non-dimensional."""
         return HOURS_PER_TIME_UNIT.get(self.time_units)
@@ -176,10 +185,56 @@ class System(ABC):
     def fields_of(self, states: npt.ArrayLike) -> tuple[Field, ...]:
         """Return the named fields of states (..., N); here one series per variable."""
         values = np.asarray(states, dtype=float)
+        labels = zip(self.variables, self.units_of_variables, strict=True)
         return tuple(
-            Field(name, (), values[..., index], {"units": self.state_units, "long_name": name})
-            for index, name in enumerate(self.variables)
+            Field(name, (), values[..., index], {"units": units, "long_name": name})
+            for index, (name, units) in enumerate(labels)
         )
+
+    def covariance(self, length: float) -> Array:
+        """Return the covariance (N, N) of random fields of the length scale ``length``.
+
+        The fields have the correlation exp(-r^2 / (2 L^2)) at the distance r; ``length`` L is in
+        the units in which the system measures distance. A system without space refuses.
+
+        Raises
+        ------
+        ArgumentError
+            If the variables have no places, or the length does not suit the system.
+        """
+        raise ArgumentError(
+            f"fields of {self.name}",
+            expected="a system whose variables have places in space",
+            found=f"{self.size} variables without",
+            remedy="take method='gaussian', with scale= if the variables differ in size",
+        )
+
+    def carried_over(self, states: npt.ArrayLike, other: System) -> Array:
+        """Return ``states`` (..., N) of this system as states (..., other.size) of ``other``.
+
+        So a run of one system can be started from, or held against, a run of its relative: with
+        other parameters, at another resolution. Here ``other`` must have the same variables.
+
+        Raises
+        ------
+        ArgumentError
+            If the variables of one system do not stand for those of the other.
+
+        Examples
+        --------
+        >>> from ensemble_horizon.toys.systems.lorenz import Lorenz63
+        >>> Lorenz63().carried_over([1.0, 2.0, 3.0], Lorenz63(rho=30.0)).tolist()
+        [1.0, 2.0, 3.0]
+        """
+        array = require_states(self, states, "states")
+        if type(other) is not type(self) or other.variables != self.variables:
+            raise ArgumentError(
+                "other",
+                expected=f"a system that takes over the {self.size} variables of {self.name}",
+                found=f"{other.name} with {other.size} variables of its own",
+                remedy=f"take a {self.name} system that differs only in its constants",
+            )
+        return array.copy()
 
 
 def require_states(system: System, states: npt.ArrayLike, argument: str) -> Array:
@@ -209,12 +264,17 @@ def _check_parameter(system: str, name: str, value: Any, rules: Any) -> None:
         expected, fits = "a whole number", number and float(value).is_integer()
     else:
         expected, fits = "a finite number", number and bool(np.isfinite(value))
+    bounds = []
     if rules["above"] is not None:
-        expected += f" above {rules['above']:g}"
+        bounds.append(f"above {rules['above']:g}")
         fits = fits and value > rules["above"]
     if rules["minimum"] is not None:
-        expected += f" of at least {rules['minimum']:g}"
+        bounds.append(f"of at least {rules['minimum']:g}")
         fits = fits and value >= rules["minimum"]
+    if rules["below"] is not None:
+        bounds.append(f"below {rules['below']:g}")
+        fits = fits and value < rules["below"]
+    expected = f"{expected} {' and '.join(bounds)}".rstrip()
     if not fits:
         raise ArgumentError(
             f"{system}: {name}",

@@ -9,7 +9,7 @@ import numpy.typing as npt
 import xarray as xr
 
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.toys.dynamics import Field, System, require_states
+from ensemble_horizon.toys.dynamics import Field, System, Time, require_states
 from ensemble_horizon.toys.integration import integrate
 from ensemble_horizon.toys.norms import Array
 from ensemble_horizon.vocabulary import (
@@ -34,6 +34,7 @@ def run_ensemble(
     every: int = 1,
     start: str | np.datetime64 | Sequence[str] = NOMINAL_START,
     on_grid: bool = True,
+    time: Time = 0.0,
 ) -> xr.Dataset:
     """Run every member forward and return the canonical Dataset.
 
@@ -48,6 +49,8 @@ def run_ensemble(
         Nominal start of the forecast, one per start.
     on_grid : bool
         Fields in space where the system has them; False gives one series per variable.
+    time : float or array (start, 1)
+        Model time of the starts, for a system driven from outside.
 
     Returns
     -------
@@ -81,7 +84,7 @@ def run_ensemble(
             remedy="add or drop leading axes",
         )
     starts = _require_starts(start, states.shape[0])
-    run = integrate(system, states, steps, dt, every)
+    run = integrate(system, states, steps, dt, every, time)
     # From (lead, start, member, N): starts come first in the canonical layout.
     ordered = np.moveaxis(run.states, 1, 0)
     fields = system.fields_of(ordered) if on_grid else System.fields_of(system, ordered)

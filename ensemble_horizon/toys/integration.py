@@ -65,7 +65,7 @@ def _march(
         with np.errstate(over="ignore", invalid="ignore"):
             current = one_step(system, current, dt, time + (number - 1) * dt)
         if not np.all(np.isfinite(current)):
-            raise _blown_up(system, current, number, dt)
+            raise blown_up(system, current, number, dt)
         if number % every == 0:
             yield current
 
@@ -148,7 +148,7 @@ def require_count(value: int, argument: str) -> None:
         )
 
 
-def _blown_up(system: System, states: Array, number: int, dt: float) -> ArgumentError:
+def blown_up(system: System, states: Array, number: int, dt: float) -> ArgumentError:
     """Return the error for the first non-finite state, naming time, step, member and variable."""
     place = np.argwhere(~np.isfinite(states))[0]
     member = f" of member {tuple(int(i) for i in place[:-1])}" if states.ndim > 1 else ""

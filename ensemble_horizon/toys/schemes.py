@@ -7,12 +7,23 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.toys.dynamics import System, Time
+from ensemble_horizon.toys.mechanics import SplitSystem
 from ensemble_horizon.toys.norms import Array
 
 # (system, states, dt, time) to states; with displacements after states, to both.
 Advance = Callable[[System, Array, float, Time], Array]
 AdvanceTangent = Callable[[System, Array, Array, float, Time], tuple[Array, Array]]
+
+# Parts of a step by which positions (seven times) and velocities (six times) advance in turn, a
+# palindrome, so that steps back undo steps forth. From memory; their sums meet the conditions of
+# order 4 to rounding.
+_DRIFTS = (0.0792036964311957, 0.353172906049774, -0.0420650803577195)
+_KICKS = (0.209515106613362, -0.143851773179818)
+_MIDDLE = 0.5 - sum(_KICKS)
+DRIFTS = (*_DRIFTS, 1.0 - 2.0 * sum(_DRIFTS), *reversed(_DRIFTS))
+KICKS = (*_KICKS, _MIDDLE, _MIDDLE, *reversed(_KICKS))
 
 
 @dataclass(frozen=True)
@@ -89,6 +100,54 @@ def runge_kutta_tangent(
     return later, displacements + dt / 6.0 * (d1 + 2.0 * (d2 + d3) + d4)
 
 
+def symplectic(system: System, states: Array, dt: float, time: Time) -> Array:
+    """Advance positions and velocities in turn by a symplectic composition of order 4.
+
+    It keeps volumes and angular momentum to rounding, and the error of the energy bounded instead
+    of growing; at equal work its error on a Kepler orbit is a twentieth of that of the shortest
+    composition of order 4 (Forest and Ruth 1990, Physica D 43).
+
+    Raises
+    ------
+    ArgumentError
+        If the system is not a `SplitSystem`.
+    """
+    split = _require_split(system)
+    positions, velocities = split.split(states)
+    for drift, kick in zip(DRIFTS, KICKS, strict=False):
+        positions = positions + drift * dt * velocities
+        velocities = velocities + kick * dt * split.acceleration(positions)
+    return np.concatenate([positions + DRIFTS[-1] * dt * velocities, velocities], axis=-1)
+
+
+def symplectic_tangent(
+    system: System, states: Array, displacements: Array, dt: float, time: Time
+) -> tuple[Array, Array]:
+    """Advance states by `symplectic`, displacements by its derivative, a symplectic matrix."""
+    split = _require_split(system)
+    positions, velocities = split.split(states)
+    moved, faster = split.split(displacements)
+    for drift, kick in zip(DRIFTS, KICKS, strict=False):
+        positions = positions + drift * dt * velocities
+        moved = moved + drift * dt * faster
+        velocities = velocities + kick * dt * split.acceleration(positions)
+        faster = faster + kick * dt * split.acceleration_tangent(positions, moved)
+    later = np.concatenate([positions + DRIFTS[-1] * dt * velocities, velocities], axis=-1)
+    return later, np.concatenate([moved + DRIFTS[-1] * dt * faster, faster], axis=-1)
+
+
+def _require_split(system: System) -> SplitSystem:
+    """Return ``system`` if its states split into positions and velocities."""
+    if not isinstance(system, SplitSystem):
+        raise ArgumentError(
+            f"scheme of {system.name}",
+            expected="a system of positions and velocities (SplitSystem) for 'symplectic'",
+            found=f"{type(system).__name__}, which does not split",
+            remedy="set scheme = 'runge-kutta'",
+        )
+    return system
+
+
 SCHEMES: dict[str, Scheme] = {
     scheme.name: scheme
     for scheme in (
@@ -98,6 +157,13 @@ SCHEMES: dict[str, Scheme] = {
             "Kutta 1901, Z. Math. Phys. 46 (from memory)",
             runge_kutta,
             runge_kutta_tangent,
+        ),
+        Scheme(
+            "symplectic",
+            4,
+            "Blanes and Moan 2002, J. Comput. Appl. Math. 142, S6 (from memory)",
+            symplectic,
+            symplectic_tangent,
         ),
     )
 }

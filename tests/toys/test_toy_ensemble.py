@@ -90,3 +90,19 @@ def test_wrong_arguments_are_refused(change, message):
     arguments = {"initial": two_starts(lorenz), "steps": 5} | change
     with pytest.raises(ArgumentError, match=message):
         toys.run_ensemble(lorenz, **arguments)
+
+
+def test_each_start_of_a_driven_system_has_its_own_time():
+    floats = toys.system("double-gyre-floats")
+    initial = np.tile(floats.default_state(), (2, 3, 1))
+    together = toys.run_ensemble(
+        floats,
+        initial,
+        steps=20,
+        every=20,
+        start=["2031-01-01", "2031-01-04"],
+        time=np.array([[0.0], [3.0]]),
+    )
+    later = toys.run_ensemble(floats, initial[1], steps=20, every=20, time=3.0)
+    assert np.array_equal(together.x_position[1], later.x_position[0])
+    assert not np.allclose(together.x_position[0], together.x_position[1])

@@ -18,7 +18,9 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
-from ensemble_horizon.toys.dynamics import Field, System, Time, parameter
+from ensemble_horizon.checks import require_positive
+from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.toys.dynamics import Field, System, Time, parameter, require_states
 from ensemble_horizon.toys.norms import Array, Norm, scaled
 from ensemble_horizon.toys.systems.channel_basis import ChannelBasis, Gradient, Points
 from ensemble_horizon.vocabulary import COORDINATE_ATTRIBUTES, LATITUDE, LONGITUDE
@@ -69,7 +71,7 @@ class TwoLayerChannel(System):
     time_units: ClassVar[str] = "day"
     state_units: ClassVar[str] = "m2 s-1"
     step: ClassVar[float] = 1.0 / 24.0
-    spin_up: ClassVar[float] = 60.0
+    spin_up: ClassVar[float] = 120.0
 
     @cached_property
     def basis(self) -> ChannelBasis:
@@ -175,6 +177,16 @@ class TwoLayerChannel(System):
             ),
         }
 
+    def covariance(self, length: float) -> Array:
+        """Return the covariance (N, N) of fields of streamfunction with the length scale in metres.
+
+        Coefficients of wavenumbers (k, l) have the variance exp(-(k^2 + l^2) L^2 / 2), which makes
+        the correlation exp(-r^2 / (2 L^2)) away from the walls if the truncation resolves L.
+        The layers are independent.
+        """
+        metres = require_positive(length, "length")
+        return np.diag(np.tile(np.exp(-0.5 * self._square * metres**2), 2))
+
     def energy(self, state: npt.ArrayLike) -> Array:
         """Return total energy per unit mass (...), m2 s-2.
 
@@ -275,6 +287,24 @@ class TwoLayerChannel(System):
             Field(name, (LATITUDE, LONGITUDE), values, _attributes(name))
             for name, values in found.items()
         )
+
+    def carried_over(self, states: npt.ArrayLike, other: System) -> Array:
+        """Return ``states`` at the truncation of ``other``, a channel of the same size in metres.
+
+        Coefficients that only one of the two truncations keeps are cut off or zero.
+        """
+        array = require_states(self, states, "states")
+        if not isinstance(other, TwoLayerChannel):
+            return super().carried_over(array, other)
+        if (other.length, other.width) != (self.length, self.width):
+            raise ArgumentError(
+                "other",
+                expected=f"a channel {self.length:g} m long and {self.width:g} m wide",
+                found=f"one {other.length:g} m long and {other.width:g} m wide",
+                remedy="take the same length and width: other waves fit into another channel",
+            )
+        layers = self.basis.carried_over(self._split(array), other.basis)
+        return layers.reshape(*layers.shape[:-2], other.size)
 
     def _split(self, state: npt.ArrayLike) -> Array:
         array = np.asarray(state, dtype=float)

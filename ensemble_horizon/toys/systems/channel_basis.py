@@ -83,6 +83,15 @@ class ChannelBasis:
         slope[..., 2::2, :] = -k[2::2] * split[..., 1::2, :]
         return slope.reshape(coefficients.shape)
 
+    def carried_over(self, coefficients: Array, other: ChannelBasis) -> Array:
+        """Return coefficients (..., n) in the order of ``other``: cut off, or filled with zeros."""
+        rows = coefficients.reshape(*coefficients.shape[:-1], -1, self.meridional_modes)
+        waves = min(self.zonal_waves, other.zonal_waves)
+        shared = (..., slice(1 + 2 * waves), slice(min(rows.shape[-1], other.meridional_modes)))
+        carried = np.zeros((*rows.shape[:-2], 1 + 2 * other.zonal_waves, other.meridional_modes))
+        carried[shared] = rows[shared]
+        return carried.reshape(*carried.shape[:-2], other.count)
+
     def points(self, x: Array, y: Array) -> Points:
         """Return the basis functions at ``x`` (I,) and ``y`` (J,), metres from the corner."""
         l = np.pi * np.arange(1, self.meridional_modes + 1)[:, None] / self.width  # noqa: E741

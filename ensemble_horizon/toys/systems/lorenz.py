@@ -8,9 +8,16 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
+from ensemble_horizon.toys.correlation import ring_correlation
 from ensemble_horizon.toys.dynamics import Field, PublishedValue, System, Time, parameter
 from ensemble_horizon.toys.norms import Array
-from ensemble_horizon.vocabulary import CELL, COORDINATE_ATTRIBUTES, LATITUDE, LONGITUDE
+from ensemble_horizon.toys.systems.ring import (
+    advection,
+    advection_jacobian,
+    advection_tangent,
+    ring_coordinates,
+)
+from ensemble_horizon.vocabulary import CELL
 
 SPROTT = "Sprott, Chaos and Time-Series Analysis, numerical values (from memory)"
 WOLF = "Wolf et al. 1985, Physica D 16 (from memory)"
@@ -60,10 +67,24 @@ class Lorenz63(System):
 
     def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return dx/dt (..., 3)."""
-        x, y, z = np.moveaxis(np.asarray(state, dtype=float), -1, 0)
-        return np.stack(
-            [self.sigma * (y - x), x * (self.rho - z) - y, x * y - self.beta * z], axis=-1
-        )
+        states = np.asarray(state, dtype=float)
+        change = np.empty_like(states)
+        x, y, z = (states[..., i] for i in range(3))
+        change[..., 0] = self.sigma * (y - x)
+        change[..., 1] = x * (self.rho - z) - y
+        change[..., 2] = x * y - self.beta * z
+        return change
+
+    def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike, time: Time = 0.0) -> Array:
+        """Return the linearised tendency (..., 3) of ``displacement`` about ``state``."""
+        states, moved = np.asarray(state, dtype=float), np.asarray(displacement, dtype=float)
+        x, y, z = (states[..., i] for i in range(3))
+        dx, dy, dz = (moved[..., i] for i in range(3))
+        change = np.empty(np.broadcast_shapes(states.shape, moved.shape))
+        change[..., 0] = self.sigma * (dy - dx)
+        change[..., 1] = (self.rho - z) * dx - dy - x * dz
+        change[..., 2] = y * dx + x * dy - self.beta * dz
+        return change
 
     def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the derivatives of the tendency, (..., 3, 3)."""
@@ -123,30 +144,29 @@ class Lorenz96(System):
     def tendency(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return dx/dt (..., sites)."""
         x = np.asarray(state, dtype=float)
-        ahead = np.roll(x, -1, axis=-1)
-        behind = np.roll(x, 1, axis=-1)
-        return np.asarray((ahead - np.roll(x, 2, axis=-1)) * behind - x + self.forcing)
+        change = advection(x, x)
+        change -= x
+        change += self.forcing
+        return change
+
+    def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike, time: Time = 0.0) -> Array:
+        """Return the linearised tendency (..., sites) of ``displacement`` about ``state``."""
+        moved = np.asarray(displacement, dtype=float)
+        change = advection_tangent(np.asarray(state, dtype=float), moved)
+        change -= moved
+        return change
 
     def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
         """Return the derivatives of the tendency, (..., sites, sites)."""
-        x = np.asarray(state, dtype=float)
-        here = np.arange(int(self.sites))
-        ahead, behind, two_behind = (np.roll(here, shift) for shift in (-1, 1, 2))
-        matrix = np.zeros((*x.shape, x.shape[-1]))
-        matrix[..., here, here] = -1.0
-        matrix[..., here, ahead] = x[..., behind]
-        matrix[..., here, two_behind] = -x[..., behind]
-        matrix[..., here, behind] = x[..., ahead] - x[..., two_behind]
-        return matrix
+        return advection_jacobian(np.asarray(state, dtype=float)) - np.eye(int(self.sites))
+
+    def covariance(self, length: float) -> Array:
+        """Return the correlation (sites, sites) at the length scale ``length``, in sites."""
+        return ring_correlation(int(self.sites), length)
 
     def coordinates(self) -> dict[str, tuple[str, Array, dict[str, str]]]:
         """Return latitude and longitude of the sites, evenly round the circle."""
-        count = int(self.sites)
-        longitude = 360.0 * np.arange(count) / count
-        return {
-            LATITUDE: (CELL, np.full(count, 45.0), COORDINATE_ATTRIBUTES[LATITUDE]),
-            LONGITUDE: (CELL, longitude, COORDINATE_ATTRIBUTES[LONGITUDE]),
-        }
+        return ring_coordinates(int(self.sites))
 
     def fields_of(self, states: npt.ArrayLike) -> tuple[Field, ...]:
         """Return one field ``x`` over the sites."""

@@ -7,11 +7,30 @@ from dataclasses import fields
 from ensemble_horizon.checks import require_choice
 from ensemble_horizon.toys.dynamics import System
 from ensemble_horizon.toys.systems.channel import TwoLayerChannel
+from ensemble_horizon.toys.systems.few_bodies import FigureEight, TwoBody
+from ensemble_horizon.toys.systems.gyre_floats import GyreFloats
 from ensemble_horizon.toys.systems.lorenz import Lorenz63, Lorenz96
+from ensemble_horizon.toys.systems.lorenz_two_scales import LorenzTwoScales
+from ensemble_horizon.toys.systems.planets import CompactPlanets
+from ensemble_horizon.toys.systems.rossler import Rossler
 from ensemble_horizon.toys.systems.spiral import SpiralSink
+from ensemble_horizon.toys.systems.van_der_pol import VanDerPol
 
 SYSTEMS: dict[str, type[System]] = {
-    kind.name: kind for kind in (SpiralSink, Lorenz63, Lorenz96, TwoLayerChannel)
+    kind.name: kind
+    for kind in (
+        SpiralSink,
+        VanDerPol,
+        Rossler,
+        Lorenz63,
+        Lorenz96,
+        LorenzTwoScales,
+        TwoLayerChannel,
+        GyreFloats,
+        TwoBody,
+        FigureEight,
+        CompactPlanets,
+    )
 }
 
 
