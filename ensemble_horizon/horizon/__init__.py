@@ -2,5 +2,6 @@
 
 from ensemble_horizon.horizon.horizon import horizon, status_names
 from ensemble_horizon.horizon.reach import reach
+from ensemble_horizon.horizon.waiting import time_to_limit
 
-__all__ = ["horizon", "reach", "status_names"]
+__all__ = ["horizon", "reach", "status_names", "time_to_limit"]
