@@ -3,7 +3,7 @@
 In reading order: `norms` (how large a displacement is), `dynamics` (the record of a system),
 `mechanics` (systems of positions and velocities), `systems` (the systems, and `systems.registry`
 by name), `schemes` (one step), `integration` (a run), `reference` (a run by an adaptive scheme),
-`correlation`, `perturbations`, `ensemble`, `twin`.
+`correlation`, `perturbations`, `exponents`, `ensemble`, `twin`.
 """
 
 from __future__ import annotations

@@ -75,10 +75,10 @@ def runge_kutta(system: System, states: Array, dt: float, time: Time) -> Array:
     """Advance by the classical fourth-order Runge-Kutta scheme."""
     half, full = time + 0.5 * dt, time + dt
     k1 = system.tendency(states, time)
-    k2 = system.tendency(states + 0.5 * dt * k1, half)
-    k3 = system.tendency(states + 0.5 * dt * k2, half)
-    k4 = system.tendency(states + dt * k3, full)
-    return np.asarray(states + dt / 6.0 * (k1 + 2.0 * (k2 + k3) + k4))
+    k2 = system.tendency(_on(states, k1, 0.5 * dt), half)
+    k3 = system.tendency(_on(states, k2, 0.5 * dt), half)
+    k4 = system.tendency(_on(states, k3, dt), full)
+    return _summed(states, k1, k2, k3, k4, dt)
 
 
 def runge_kutta_tangent(
@@ -88,16 +88,38 @@ def runge_kutta_tangent(
     half, full = time + 0.5 * dt, time + dt
     k1 = system.tendency(states, time)
     d1 = system.tangent(states, displacements, time)
-    at2 = states + 0.5 * dt * k1
+    at2 = _on(states, k1, 0.5 * dt)
     k2 = system.tendency(at2, half)
-    d2 = system.tangent(at2, displacements + 0.5 * dt * d1, half)
-    at3 = states + 0.5 * dt * k2
+    d2 = system.tangent(at2, _on(displacements, d1, 0.5 * dt), half)
+    at3 = _on(states, k2, 0.5 * dt)
     k3 = system.tendency(at3, half)
-    d3 = system.tangent(at3, displacements + 0.5 * dt * d2, half)
-    at4 = states + dt * k3
-    d4 = system.tangent(at4, displacements + dt * d3, full)
-    later = states + dt / 6.0 * (k1 + 2.0 * (k2 + k3) + system.tendency(at4, full))
-    return later, displacements + dt / 6.0 * (d1 + 2.0 * (d2 + d3) + d4)
+    d3 = system.tangent(at3, _on(displacements, d2, 0.5 * dt), half)
+    at4 = _on(states, k3, dt)
+    k4 = system.tendency(at4, full)
+    d4 = system.tangent(at4, _on(displacements, d3, dt), full)
+    return _summed(states, k1, k2, k3, k4, dt), _summed(displacements, d1, d2, d3, d4, dt)
+
+
+# Large ensembles spend their time on memory: sums go into the arrays that are there already.
+
+
+def _on(base: Array, slope: Array, dt: float) -> Array:
+    """Return base + dt slope."""
+    out = slope * dt
+    if out.shape != np.broadcast_shapes(out.shape, base.shape):
+        return np.asarray(base + out)
+    out += base
+    return out
+
+
+def _summed(base: Array, k1: Array, k2: Array, k3: Array, k4: Array, dt: float) -> Array:
+    """Return base + dt / 6 (k1 + 2 (k2 + k3) + k4), in the room of ``k2``."""
+    k2 += k3
+    k2 *= 2.0
+    k2 += k1
+    k2 += k4
+    k2 *= dt / 6.0
+    return np.asarray(base + k2)
 
 
 def symplectic(system: System, states: Array, dt: float, time: Time) -> Array:

@@ -63,7 +63,7 @@ def test_of_a_linear_system_the_scheme_itself_is_known():
 
 
 def test_sum_is_the_mean_divergence():
-    found = toys.lyapunov_exponents(LORENZ, length=400.0, members=20)
+    found = toys.lyapunov_exponents(LORENZ, length=200.0, members=20, spin_up=5.0)
     assert found.sum.low <= -41 / 3 <= found.sum.high
     assert found.sum.high - found.sum.low < 1e-3
     assert found.sum.value == pytest.approx(found.exponents.sum(), abs=1e-12)
@@ -71,7 +71,7 @@ def test_sum_is_the_mean_divergence():
 
 @pytest.mark.parametrize("method", [toys.lyapunov_exponents, toys.pair_growth])
 def test_time_passes_for_a_driven_system(method):
-    found = method(Driven(), length=2000.0, members=20)
+    found = method(Driven(), length=1000.0, state=np.linspace(0.5, 1.5, 20)[:, None])
     assert found.low[0] <= -0.3 <= found.high[0]
     assert found.high[0] - found.low[0] < 0.01
 
@@ -79,18 +79,18 @@ def test_time_passes_for_a_driven_system(method):
 @pytest.mark.parametrize("every", [10, 40])
 @pytest.mark.parametrize("amplitude", [1e-7, 1e-4])
 def test_two_runs_agree_with_tangent_vectors(every, amplitude):
-    one = toys.lyapunov_exponents(LORENZ, 1, length=4000.0, seed=1)
-    two = toys.pair_growth(LORENZ, length=4000.0, seed=2, every=every, amplitude=amplitude)
+    one = toys.lyapunov_exponents(LORENZ, 1, length=2000.0, dt=0.02, seed=1)
+    two = toys.pair_growth(LORENZ, length=2000.0, dt=0.02, seed=2, every=every, amplitude=amplitude)
     assert two.low[0] <= one.high[0]
     assert one.low[0] <= two.high[0]
     # Sprott, Chaos and Time-Series Analysis (from memory).
     assert two.exponents[0] == pytest.approx(0.9056, abs=0.02)
-    assert two.high[0] - two.low[0] < 0.04
+    assert two.high[0] - two.low[0] < 0.05
 
 
 def test_default_amplitude_is_far_from_rounding_and_from_saturation():
     found = [
-        toys.pair_growth(LORENZ, length=1000.0, members=50, seed=3, amplitude=amplitude)
+        toys.pair_growth(LORENZ, length=500.0, members=50, spin_up=5.0, seed=3, amplitude=amplitude)
         for amplitude in (None, 1e-6, 1e-3)
     ]
     # The same controls with other distances differ by less than a tenth of the noise.
@@ -100,8 +100,8 @@ def test_default_amplitude_is_far_from_rounding_and_from_saturation():
 
 def test_how_often_vectors_are_orthonormalised_does_not_matter():
     few, often = (
-        toys.lyapunov_exponents(LORENZ, length=320.0, members=10, spin_up=20.0, every=every)
-        for every in (2, 8)
+        toys.lyapunov_exponents(LORENZ, length=160.0, members=10, spin_up=10.0, every=every)
+        for every in (2, 5)
     )
     assert few.length == pytest.approx(often.length, rel=0.05)
     assert few.exponents == pytest.approx(often.exponents, abs=0.02)
@@ -111,8 +111,8 @@ def test_errors_that_grow_by_a_power_of_time_have_the_exponent_zero_in_their_int
     # Kepler: neighbouring orbits part linearly in time, so that ln(t) / t goes to zero from above.
     orbit = toys.system("two-body")
     for found in (
-        toys.lyapunov_exponents(orbit, 1, length=3000.0),
-        toys.pair_growth(orbit, length=3000.0),
+        toys.lyapunov_exponents(orbit, 1, length=1500.0),
+        toys.pair_growth(orbit, length=1500.0),
     ):
         assert found.exponents[0] > 0.01
         assert found.low[0] <= 0 <= found.high[0]
@@ -135,34 +135,47 @@ def test_a_fixed_point_has_dimension_nought_and_a_flow_without_shrinking_all():
 
 
 def test_doubling_time_follows_and_needs_a_clock_for_hours():
-    found = toys.lyapunov_exponents(LORENZ, 1, length=1000.0)
+    found = toys.lyapunov_exponents(LORENZ, 1, length=1000.0, dt=0.02)
     doubling = found.doubling_time
     assert doubling.value == pytest.approx(np.log(2) / found.exponents[0])
     assert doubling.low == pytest.approx(np.log(2) / found.high[0])
     assert doubling.high == pytest.approx(np.log(2) / found.low[0])
     with pytest.raises(ArgumentError, match="physical clock"):
         _ = found.doubling_hours
+    # Released along the swinging border of the gyres, where neighbours part.
     floats = toys.system("double-gyre-floats", rows=1, columns=1)
-    released = np.array([5.0e4, 2.5e4])
+    released = np.stack([np.linspace(4.5e4, 5.5e4, 20), np.linspace(1e3, 5e3, 20)], axis=-1)
     drifting = toys.lyapunov_exponents(floats, 1, length=2000.0, state=released)
     assert drifting.doubling_hours.value == pytest.approx(24 * drifting.doubling_time.value)
     assert drifting.doubling_hours.units == "hours"
 
 
+def test_members_that_share_their_start_are_worth_one():
+    # A float in the quiet middle of the basin: no volume shrinks, so its exponent is not negative.
+    floats = toys.system("double-gyre-floats", rows=1, columns=1)
+    middle = np.array([5.0e4, 2.5e4])
+    found = toys.lyapunov_exponents(floats, 1, length=2000.0, state=middle)
+    assert found.high[0] >= 0
+    apart = toys.lyapunov_exponents(floats, 1, length=2000.0, state=np.tile(middle, (48, 1)))
+    assert apart.high[0] - apart.low[0] < 0.3 * (found.high[0] - found.low[0])
+
+
 def test_dimension_needs_enough_exponents():
-    found = toys.lyapunov_exponents(LORENZ, 2, length=300.0, members=10)
+    found = toys.lyapunov_exponents(LORENZ, 2, length=100.0, members=10, spin_up=5.0)
     with pytest.raises(ArgumentError, match=r"2 of 3, with the sum .*ask for a count above 2"):
         _ = found.dimension
 
 
 def test_seed_decides_and_members_given_one_by_one_are_taken():
     def run(seed, **options):
-        return toys.lyapunov_exponents(LORENZ, 1, length=100.0, seed=seed, **options).exponents
+        return toys.lyapunov_exponents(
+            LORENZ, 1, length=100.0, spin_up=2.0, seed=seed, **options
+        ).exponents
 
     assert np.array_equal(run(3), run(3))
     assert not np.array_equal(run(3), run(4))
     states = np.arange(36.0).reshape(12, 3)
-    found = toys.lyapunov_exponents(LORENZ, 1, length=100.0, state=states)
+    found = toys.lyapunov_exponents(LORENZ, 1, length=100.0, spin_up=2.0, state=states)
     assert found.members == 12
     assert found.length >= 100.0
 

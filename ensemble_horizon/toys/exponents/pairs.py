@@ -73,7 +73,7 @@ def pair_growth(
     Examples
     --------
     >>> from ensemble_horizon import toys
-    >>> found = pair_growth(toys.system("lorenz-63"), length=2000.0, members=100)
+    >>> found = pair_growth(toys.system("lorenz-63"), length=2000.0, members=100, dt=0.02)
     >>> round(float(found.exponents[0]), 1)
     0.9
     """
@@ -88,6 +88,7 @@ def pair_growth(
         dt=dt,
         every=every,
         confidence=confidence,
+        one_state=state is None or np.ndim(state) < 2,
     )
     orbits = members_ready(system, states, plan, random)
     if amplitude is None:

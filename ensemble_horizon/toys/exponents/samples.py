@@ -38,13 +38,18 @@ class Measured(NamedTuple):
         return self.quantile * np.sqrt(np.diagonal(self.covariance)) + self.allowance
 
 
-def measure(rates: Array, edges: Array, confidence: float, systematic: Array) -> Measured:
+def measure(
+    rates: Array, edges: Array, confidence: float, systematic: Array, *, in_step: bool = False
+) -> Measured:
     """Return mean and interval of ``rates`` (M, B, k): M runs, B blocks (even), k exponents.
 
     The interval is Student's t over runs where there are at least 10: runs are independent, and
     their means are taken to be normal. With fewer, blocks of time are the samples, fewer than 64
     in all, and count for n (1 - r) / (1 + r) if neighbours have the correlation r > 0, as though
     the memory of the rates were exponential. ``systematic`` (k,) is added on both sides.
+
+    Runs that may be ``in_step``, as they began together, are worth one run between them: the
+    interval is then that of a single one.
 
     Growth slower than exponential, by a power of time, has a rate that falls like 1/t. Where the
     rates are found to change like that, the interval is widened by half as much again as the way
@@ -64,7 +69,7 @@ def measure(rates: Array, edges: Array, confidence: float, systematic: Array) ->
     trend, limit = _trend(rates, falling)
     mean = rates.mean(axis=(0, 1))
     samples, worth = _samples(rates, falling, trend, systematic)
-    spread = np.sqrt(len(samples) / worth)
+    spread = np.sqrt(len(samples) * (len(rates) if in_step else 1) / worth)
     covariance = np.cov(samples, rowvar=False).reshape(mean.size, mean.size) / len(samples)
     covariance *= np.outer(spread, spread)
     quantile = float(special.stdtrit(worth.min() - 1.0, 0.5 * (1.0 + confidence)))

@@ -70,9 +70,14 @@ class Lorenz63(System):
         states = np.asarray(state, dtype=float)
         change = np.empty_like(states)
         x, y, z = (states[..., i] for i in range(3))
-        change[..., 0] = self.sigma * (y - x)
-        change[..., 1] = x * (self.rho - z) - y
-        change[..., 2] = x * y - self.beta * z
+        slope = np.empty_like(x)
+        np.subtract(y, x, out=slope)
+        np.multiply(slope, self.sigma, out=change[..., 0])
+        np.subtract(self.rho, z, out=slope)
+        slope *= x
+        np.subtract(slope, y, out=change[..., 1])
+        np.multiply(x, y, out=slope)
+        np.subtract(slope, self.beta * z, out=change[..., 2])
         return change
 
     def tangent(self, state: npt.ArrayLike, displacement: npt.ArrayLike, time: Time = 0.0) -> Array:
@@ -80,10 +85,16 @@ class Lorenz63(System):
         states, moved = np.asarray(state, dtype=float), np.asarray(displacement, dtype=float)
         x, y, z = (states[..., i] for i in range(3))
         dx, dy, dz = (moved[..., i] for i in range(3))
-        change = np.empty(np.broadcast_shapes(states.shape, moved.shape))
+        shape = np.broadcast_shapes(states.shape, moved.shape)
+        change = np.empty_like(moved) if moved.shape == shape else np.empty(shape)
         change[..., 0] = self.sigma * (dy - dx)
-        change[..., 1] = (self.rho - z) * dx - dy - x * dz
-        change[..., 2] = y * dx + x * dy - self.beta * dz
+        slope = np.empty_like(change[..., 0])
+        np.multiply(self.rho - z, dx, out=slope)
+        slope -= dy
+        np.subtract(slope, x * dz, out=change[..., 1])
+        np.multiply(y, dx, out=slope)
+        slope += x * dy
+        np.subtract(slope, self.beta * dz, out=change[..., 2])
         return change
 
     def jacobian(self, state: npt.ArrayLike, time: Time = 0.0) -> Array:
