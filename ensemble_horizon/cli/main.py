@@ -16,6 +16,7 @@ COMMANDS = {
         "Measure spread and growth, and place the limits.",
     ),
     "reach": ("ensemble_horizon.cli.reach", "Say what a smaller initial error would buy."),
+    "toy": ("ensemble_horizon.cli.toy", "List, run and measure toy systems of known limits."),
 }
 
 

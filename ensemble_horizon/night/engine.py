@@ -12,7 +12,7 @@ import os
 import sys
 import threading
 import warnings
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sized
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from types import TracebackType
@@ -82,15 +82,17 @@ class Engine:
             self._pool.shutdown(wait=True, cancel_futures=True)
             self._pool = None
 
-    def run(self, function: Callable[[T], R], tasks: Sequence[T]) -> Iterator[tuple[int, R]]:
+    def run(self, function: Callable[[T], R], tasks: Iterable[T]) -> Iterator[tuple[int, R]]:
         """Yield ``(position of the task, result)`` as results come in.
+
+        Tasks are drawn from an iterator only as workers become free.
 
         Raises
         ------
         EnsembleHorizonError
             what a task raised, or a message of its own if a worker was killed.
         """
-        if self._pool is None or len(tasks) < 2:
+        if self._pool is None or (isinstance(tasks, Sized) and len(tasks) < 2):
             for number, task in enumerate(tasks):
                 yield number, function(task)
             return
@@ -105,7 +107,7 @@ class Engine:
             ) from error
 
     def _run_in_pool(
-        self, pool: ProcessPoolExecutor, function: Callable[[T], R], tasks: Sequence[T]
+        self, pool: ProcessPoolExecutor, function: Callable[[T], R], tasks: Iterable[T]
     ) -> Iterator[tuple[int, R]]:
         waiting = iter(enumerate(tasks))
         under_way: dict[Future[R], int] = {}

@@ -23,6 +23,8 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``curve_figures``  growth curves, place by place
 ``drawing``        the figures, one record each
 ``folder``         all products together
+``run_archive``    run files and analyses of a rehearsal
+``archive_folder`` what stands where in its archive
 =================  =============================================================
 """
 

@@ -63,6 +63,43 @@ def written_whole(target: str | os.PathLike[str]) -> Iterator[Path]:
 
 
 @contextlib.contextmanager
+def folder_written_whole(target: str | os.PathLike[str]) -> Iterator[Path]:
+    """Give a hidden folder beside ``target``; move it into place if the block succeeds.
+
+    Parameters
+    ----------
+    target : path
+        Where the folder shall stand; nothing may stand there yet.
+
+    Raises
+    ------
+    ProductError
+        If it cannot be made or written. The hidden folder is removed in every case.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> folder = Path(tempfile.mkdtemp())
+    >>> with folder_written_whole(folder / "night") as neighbour:
+    ...     _ = (neighbour / "note.txt").write_text("whole")
+    >>> [path.name for path in (folder / "night").iterdir()]
+    ['note.txt']
+    """
+    place = Path(target)
+    neighbour = place.with_name(f".{place.name}.{secrets.token_hex(4)}.part")
+    try:
+        with disk_errors(place):
+            neighbour.mkdir(parents=True)
+            yield neighbour
+            for path in neighbour.iterdir():
+                flush_to_disk(path)
+            neighbour.rename(place)
+            flush_to_disk(place.parent)
+    finally:
+        shutil.rmtree(neighbour, ignore_errors=True)
+
+
+@contextlib.contextmanager
 def disk_errors(target: Path) -> Iterator[None]:
     """Turn what the disk refuses inside the block into a `ProductError` that names ``target``."""
     try:

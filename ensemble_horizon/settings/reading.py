@@ -3,15 +3,13 @@
 from __future__ import annotations
 
 import copy
-import difflib
-import tomllib
 from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
 from pydantic import ValidationError
 
-from ensemble_horizon.errors import EnsembleHorizonError, SettingsError
+from ensemble_horizon.errors import EnsembleHorizonError
 from ensemble_horizon.settings.criteria import (
     ChanceTable,
     CriterionTable,
@@ -19,6 +17,7 @@ from ensemble_horizon.settings.criteria import (
     criterion_of,
     has_text,
 )
+from ensemble_horizon.settings.mistakes import mistake, read_toml, refuse_mistakes
 from ensemble_horizon.settings.tables import (
     ClimatologyTable,
     EngineTable,
@@ -41,30 +40,8 @@ def read_settings(path: str | Path) -> Settings:
     SettingsError
         if the file cannot be read, is no TOML, or holds mistakes; all mistakes in one message.
     """
-    source = Path(path)
-    try:
-        text = source.read_text(encoding="utf-8-sig")
-    except OSError as error:
-        raise SettingsError(
-            str(path),
-            expected="a readable settings file",
-            found=error.strerror or str(error),
-            remedy="check the path; a sample stands in configs/",
-        ) from error
-    except UnicodeDecodeError as error:
-        raise SettingsError(
-            str(path),
-            expected="a TOML settings file in UTF-8",
-            found=f"a byte that is no text at position {error.start + 1}",
-            remedy="check the path, or save the file as UTF-8",
-        ) from error
-    try:
-        table = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
-        raise SettingsError(
-            str(path), expected="TOML", found=str(error), remedy="correct that line"
-        ) from error
-    return settings_from(table, base=source.resolve().parent, text=text, name=str(path))
+    table, text = read_toml(path)
+    return settings_from(table, base=Path(path).resolve().parent, text=text, name=str(path))
 
 
 def settings_from(
@@ -93,23 +70,13 @@ def settings_from(
         settings = Settings.model_validate({**given, **own})
     except ValidationError as error:
         errors = error.errors(include_url=False)
-        mistakes += [_mistake(item) for item in errors]
+        mistakes += [mistake(item, _known_keys) for item in errors]
         with suppress(ValidationError):
             mistakes += _cross_checks(Settings.model_validate(_sound_part(given, errors)))
     else:
         mistakes += _cross_checks(settings)
     mistakes += [f"{key}: unknown key" for key in hidden]
-    mistakes = list(dict.fromkeys(mistakes))
-    if mistakes:
-        listing = "\n  ".join(mistakes)
-        raise SettingsError(
-            name,
-            expected="settings without mistakes",
-            found=f"{len(mistakes)}:\n  {listing}",
-            remedy="correct it and run again"
-            if len(mistakes) == 1
-            else "correct them and run again",
-        )
+    refuse_mistakes(name, mistakes)
     return settings
 
 
@@ -172,37 +139,6 @@ def _cross_checks(settings: Settings) -> list[str]:
                     found.append(f"{key}.name: a second {label!r}; every criterion has its own")
                 labels.add(label)
     return found
-
-
-def _mistake(item: Any) -> str:
-    key = _key(item["loc"])
-    if item["type"] == "extra_forbidden":
-        known = _known_keys(item["loc"])
-        near = difflib.get_close_matches(str(item["loc"][-1]), known, n=1)
-        hint = f"did you mean {near[0]!r}?" if near else f"known here: {', '.join(sorted(known))}"
-        return f"{key}: unknown key; {hint}"
-    if item["type"] == "missing":
-        return f"{key}: missing"
-    message = item["msg"].removeprefix("Value error, ")
-    for phrase in ("Dictionary should have ", "Input should be ", "Tuple should have "):
-        message = message.removeprefix(phrase)
-    message = message.replace(" after validation", "")
-    found = item["input"]
-    if isinstance(found, str | int | float | bool):
-        message += f"; found {found!r}"
-    return f"{key}: {message}"
-
-
-def _key(loc: tuple[int | str, ...]) -> str:
-    text = ""
-    for part in loc:
-        if isinstance(part, int):
-            text += f"[{part}]"
-        elif part not in ("str", "int", "float", "tuple[str, ...]") and not part.startswith(
-            ("literal[", "tuple[", "constrained-", "function-")
-        ):
-            text += f".{part}" if text else part
-    return text
 
 
 def _known_keys(loc: tuple[int | str, ...]) -> list[str]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 from typing import ClassVar
 
@@ -9,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.toys.dynamics import System
 from ensemble_horizon.toys.norms import Array
 from ensemble_horizon.toys.perturbations.method import Perturbation, Start, require_option
 
@@ -66,13 +68,21 @@ class Correlated(Perturbation):
         """Return scale * C^(1/2) z (members, N), C being the covariance."""
         size = start.system.size
         length = require_option(self.length, "length", "the length scale of the fields")
-        power, modes = np.linalg.eigh(start.system.covariance(length))
-        # The symmetric root is the only one that does not depend on the signs of eigenvectors.
-        root = (modes * np.sqrt(np.maximum(power, 0.0))) @ modes.T
+        root = _covariance_root(start.system, length)
         white = random.standard_normal((members, size))
         # Member by member, so that the order of summation does not depend on how many there are.
         fields = np.stack([root @ one for one in white])
         return fields * require_scale(self.scale, size)
+
+
+@functools.lru_cache(maxsize=4)
+def _covariance_root(system: System, length: float) -> Array:
+    """Return the symmetric root of the covariance, which costs more than many fields drawn by it.
+
+    It is the only root that does not depend on the signs of eigenvectors.
+    """
+    power, modes = np.linalg.eigh(system.covariance(length))
+    return np.asarray((modes * np.sqrt(np.maximum(power, 0.0))) @ modes.T)
 
 
 def require_scale(scale: npt.ArrayLike | None, size: int) -> Array:

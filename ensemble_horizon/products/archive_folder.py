@@ -1,0 +1,146 @@
+"""The folder of an archive: whose it is, what stands where, and what is there already."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from datetime import datetime
+from pathlib import Path
+from typing import Any
+
+from ensemble_horizon.errors import ProductError
+from ensemble_horizon.products.run_archive import FieldFrame, member_name
+from ensemble_horizon.products.writing import disk_errors, written_whole
+
+MANIFEST = "rehearsal.json"
+TRUTH = "truth.nc"
+ANALYSES = "analyses.nc"
+CLIMATOLOGY = "climatology.nc"
+
+_POSITIONS = ("x_position", "y_position")
+
+
+@dataclass(frozen=True)
+class ArchiveFolder:
+    """An archive on disk.
+
+    Parameters
+    ----------
+    path : pathlib.Path
+    layout : str
+        ``"start"``: one file per start holds all members; ``"member"``: one folder per start, one
+        file per member.
+    members : int
+    """
+
+    path: Path
+    layout: str
+    members: int
+
+    def claim(self, fingerprint: str, settings: str) -> None:
+        """Make the folder ours, or find that it was made by the same settings.
+
+        Raises
+        ------
+        ProductError
+            If it holds something else, or cannot be made.
+        """
+        manifest = self.path / MANIFEST
+        with disk_errors(self.path):
+            found = sorted(path.name for path in self.path.iterdir()) if self.path.exists() else []
+            if MANIFEST in found:
+                self._require_same(manifest, fingerprint)
+                return
+            if found:
+                raise ProductError(
+                    str(self.path),
+                    expected="a new folder, or an archive of this program",
+                    found=f"a folder with {', '.join(found[:3])}"
+                    + (" and more" if len(found) > 3 else ""),
+                    remedy="name another folder under archive.folder, or empty this one",
+                )
+        with written_whole(manifest) as neighbour:
+            text = json.dumps({"fingerprint": fingerprint, "settings": settings}, indent=2)
+            neighbour.write_text(text + "\n", encoding="utf-8")
+
+    def run(self, version: str, start: datetime) -> Path:
+        """Return where a start of a version stands: a file, or a folder of files."""
+        name = f"{start:%Y%m%dT%H%M}"
+        return self.path / version / (f"{name}.nc" if self.layout == "start" else name)
+
+    def pattern(self, version: str) -> str:
+        """Return the glob of all run files of a version, counted from the folder."""
+        return f"{version}/*.nc" if self.layout == "start" else f"{version}/*/{member_name('*')}"
+
+    def has(self, version: str, start: datetime) -> bool:
+        """Tell whether a start stands there whole."""
+        place = self.run(version, start)
+        if self.layout == "start":
+            return place.is_file()
+        return all((place / member_name(member)).is_file() for member in range(self.members))
+
+    def _require_same(self, manifest: Path, fingerprint: str) -> None:
+        try:
+            known = json.loads(manifest.read_text(encoding="utf-8")).get("fingerprint")
+        except (ValueError, AttributeError):
+            known = None
+        if known != fingerprint:
+            raise ProductError(
+                str(self.path),
+                expected="a new folder, or an archive begun with these very settings",
+                found="an archive made with other settings, or by another version of the program",
+                remedy="name another folder under archive.folder, or remove this one",
+            )
+
+
+def estimate_settings(
+    title: str,
+    archive: ArchiveFolder,
+    version: str,
+    fields: Sequence[FieldFrame],
+    criteria: Mapping[str, Any],
+    control: bool,
+) -> str:
+    """Return settings with which ``estimate`` reads the runs of a version, as a TOML text.
+
+    ``criteria`` may hold ``climatology_fraction``, ``saturation_fraction`` and ``tolerances``, a
+    mapping from fields to amounts in their units.
+    """
+    lines = [
+        "# Made by `ensemble-horizon toy run`; paths count from this file.",
+        f"title = {json.dumps(f'{title}, version {version}')}",
+        "",
+        "[runs]",
+        f"files = {json.dumps(archive.pattern(version))}",
+        f"members = {archive.members}",
+        f"minimum_members = {min(archive.members, 5)}",
+        *(["control = 0"] if control else []),
+        'starts = "all"',
+    ]
+    by_name = {field.name: field for field in fields}
+    climate = False
+    if set(by_name) >= set(_POSITIONS):
+        units = json.dumps(by_name[_POSITIONS[0]].attributes["units"])
+        chosen = _criteria({**criteria, "climatology_fraction": None}, "position")
+        lines += ["", "[variables.position]", f"position = {json.dumps(list(_POSITIONS))}"]
+        lines += [f"units = {units}", f"criteria = [{', '.join(chosen)}]"]
+        by_name = {name: by_name[name] for name in by_name if name not in _POSITIONS}
+    for name, field in by_name.items():
+        chosen = _criteria(criteria, name)
+        climate |= bool(criteria.get("climatology_fraction"))
+        lines += ["", f"[variables.{name}]", f"source = {json.dumps(name)}"]
+        lines += [f"units = {json.dumps(field.attributes['units'])}"]
+        lines += [f"criteria = [{', '.join(chosen)}]"]
+    if climate:
+        lines += ["", "[climatology]", f"file = {json.dumps(CLIMATOLOGY)}"]
+    lines += ["", "[products]", f"folder = {json.dumps(f'products_{version}')}"]
+    return "\n".join(lines) + "\n"
+
+
+def _criteria(criteria: Mapping[str, Any], field: str) -> list[str]:
+    given = {name: criteria.get(name) for name in ("climatology_fraction", "saturation_fraction")}
+    given["tolerance"] = criteria.get("tolerances", {}).get(field)
+    chosen = [f"{{ {name} = {value!r} }}" for name, value in given.items() if value is not None]
+    # Every variable needs a criterion, and this one suits them all.
+    return chosen or ["{ saturation_fraction = 0.5 }"]
