@@ -44,8 +44,13 @@ class EnsembleHorizonError(Exception):
         return _rebuild, (type(self), self.culprit, self.expected, self.found, self.remedy)
 
     def __str__(self) -> str:
-        remedy = self.remedy.rstrip(".")
-        return f"{self.culprit}: expected {self.expected}; found {self.found}. Next: {remedy}."
+        found, remedy = _ended(self.found), _ended(self.remedy)
+        return f"{self.culprit}: expected {self.expected}; found {found} Next: {remedy}"
+
+
+def _ended(text: str) -> str:
+    """End a sentence that may have ended already."""
+    return text if text.endswith((".", "?")) else f"{text}."
 
 
 class SettingsError(EnsembleHorizonError):

@@ -49,6 +49,8 @@ class ArchiveFolder:
         manifest = self.path / MANIFEST
         with disk_errors(self.path):
             found = sorted(path.name for path in self.path.iterdir()) if self.path.exists() else []
+            if found == [MANIFEST]:
+                found = []  # an archive that broke off before anything stood there
             if MANIFEST in found:
                 self._require_same(manifest, fingerprint)
                 return

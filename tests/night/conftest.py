@@ -171,7 +171,7 @@ def refusal(result: Result, status: int, *words: str) -> str:
     assert text.startswith("ensemble-horizon: "), result.stderr
     assert text.count("ensemble-horizon: ") == 1, result.stderr
     assert re.fullmatch(
-        r"ensemble-horizon: .+?: expected .+?; found .+\. Next: [^.\n].*\.", text, re.DOTALL
+        r"ensemble-horizon: .+?: expected .+?; found .+[.?] Next: [^.\n].*[.?]", text, re.DOTALL
     ), text
     for word in words:
         assert word in text, f"{word!r} is not in {text!r}"

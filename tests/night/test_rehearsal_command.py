@@ -310,3 +310,14 @@ def test_exponents_stand_beside_published_ones(desk):
 )
 def test_exponents_refuse(desk, refusal, arguments, words):
     refusal(desk.run("toy", "exponents", *arguments), 2, *words)
+
+
+def test_a_folder_that_holds_nothing_yet_takes_other_settings(desk):
+    # What an unstable step leaves behind must not stand in the way of a better one.
+    desk.archive.mkdir()
+    manifest = desk.archive / "rehearsal.json"
+    manifest.write_text('{"fingerprint": "of another"}', encoding="utf-8")
+    desk.made()
+    assert "of another" not in manifest.read_text(encoding="utf-8")
+    manifest.write_text('{"fingerprint": "of another"}', encoding="utf-8")
+    assert desk.run().exit_code == 2
