@@ -94,8 +94,9 @@ def rehearse(settings: Rehearsal, progress: Progress = silent) -> Rehearsed:
     experiment = settings.experiment()
     plan = settings.plan(experiment)
     archive = ArchiveFolder(settings.folder, settings.archive.layout, experiment.members)
-    archive.claim(settings.fingerprint(), settings.text)
     job = _Job(experiment, plan, _frame(settings, experiment, plan), archive)
+    texts = {name: _settings_for(settings, job, name) for name in experiment.versions}
+    archive.claim(settings.fingerprint(), settings.text)
     dates = _dates(settings, experiment)
     todo = {
         (name, number)
@@ -110,7 +111,7 @@ def rehearse(settings: Rehearsal, progress: Progress = silent) -> Rehearsed:
     ):
         for done, _ in enumerate(engine.run(_forecast, tasks), start=total - len(todo) + 1):
             progress("forecasts", done, total)
-    files = {name: _write_settings(settings, job, name) for name in experiment.versions}
+    files = {name: _write_once(archive.path / f"{name}.toml", text) for name, text in texts.items()}
     return Rehearsed(archive.path, experiment, len(todo), total - len(todo), files)
 
 
@@ -268,14 +269,16 @@ def _dates(settings: Rehearsal, experiment: TwinExperiment) -> list[datetime]:
     return [settings.first_start + number * spacing for number in range(experiment.starts)]
 
 
-def _write_settings(settings: Rehearsal, job: _Job, name: str) -> Path:
-    """Write the settings for ``estimate``, unless they are there: they are for editing."""
-    target = job.archive.path / f"{name}.toml"
+def _settings_for(settings: Rehearsal, job: _Job, name: str) -> str:
+    criteria = settings.criteria.model_dump()
+    return estimate_settings(
+        settings.title, job.archive, name, job.frame.fields, criteria, job.experiment.control
+    )
+
+
+def _write_once(target: Path, text: str) -> Path:
+    """Write a text, unless the file is there: settings are for editing."""
     if not target.is_file():
-        criteria = settings.criteria.model_dump()
-        text = estimate_settings(
-            settings.title, job.archive, name, job.frame.fields, criteria, job.experiment.control
-        )
         with written_whole(target) as neighbour:
             neighbour.write_text(text, encoding="utf-8")
     return target

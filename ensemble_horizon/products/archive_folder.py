@@ -9,6 +9,7 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
+from ensemble_horizon.checks import require_choice
 from ensemble_horizon.errors import ProductError
 from ensemble_horizon.products.run_archive import FieldFrame, member_name
 from ensemble_horizon.products.writing import disk_errors, written_whole
@@ -19,6 +20,7 @@ ANALYSES = "analyses.nc"
 CLIMATOLOGY = "climatology.nc"
 
 _POSITIONS = ("x_position", "y_position")
+_POSITION = "position"
 
 
 @dataclass(frozen=True)
@@ -107,7 +109,12 @@ def estimate_settings(
     """Return settings with which ``estimate`` reads the runs of a version, as a TOML text.
 
     ``criteria`` may hold ``climatology_fraction``, ``saturation_fraction`` and ``tolerances``, a
-    mapping from fields to amounts in their units.
+    mapping from variables to amounts in their units.
+
+    Raises
+    ------
+    ArgumentError
+        If there is no such variable as a tolerance is for.
     """
     lines = [
         "# Made by `ensemble-horizon toy run`; paths count from this file.",
@@ -120,28 +127,35 @@ def estimate_settings(
         *(["control = 0"] if control else []),
         'starts = "all"',
     ]
-    by_name = {field.name: field for field in fields}
-    climate = False
-    if set(by_name) >= set(_POSITIONS):
-        units = json.dumps(by_name[_POSITIONS[0]].attributes["units"])
-        chosen = _criteria({**criteria, "climatology_fraction": None}, "position")
-        lines += ["", "[variables.position]", f"position = {json.dumps(list(_POSITIONS))}"]
-        lines += [f"units = {units}", f"criteria = [{', '.join(chosen)}]"]
-        by_name = {name: by_name[name] for name in by_name if name not in _POSITIONS}
-    for name, field in by_name.items():
+    variables = _variables(fields)
+    for name in criteria.get("tolerances", {}):
+        require_choice(name, variables, "criteria.tolerances")
+    for name, (source, units) in variables.items():
         chosen = _criteria(criteria, name)
-        climate |= bool(criteria.get("climatology_fraction"))
-        lines += ["", f"[variables.{name}]", f"source = {json.dumps(name)}"]
-        lines += [f"units = {json.dumps(field.attributes['units'])}"]
+        lines += ["", f"[variables.{name}]", source, f"units = {json.dumps(units)}"]
         lines += [f"criteria = [{', '.join(chosen)}]"]
-    if climate:
+    if criteria.get("climatology_fraction") and set(variables) != {_POSITION}:
         lines += ["", "[climatology]", f"file = {json.dumps(CLIMATOLOGY)}"]
     lines += ["", "[products]", f"folder = {json.dumps(f'products_{version}')}"]
     return "\n".join(lines) + "\n"
 
 
+def _variables(fields: Sequence[FieldFrame]) -> dict[str, tuple[str, str]]:
+    """Return variables of the settings by name: where they come from, and their units."""
+    by_name = {field.name: field.attributes["units"] for field in fields}
+    found = {}
+    if set(by_name) >= set(_POSITIONS):
+        found[_POSITION] = (f"position = {json.dumps(list(_POSITIONS))}", by_name[_POSITIONS[0]])
+        by_name = {name: units for name, units in by_name.items() if name not in _POSITIONS}
+    for name, units in by_name.items():
+        found[name] = (f"source = {json.dumps(name)}", units)
+    return found
+
+
 def _criteria(criteria: Mapping[str, Any], field: str) -> list[str]:
     given = {name: criteria.get(name) for name in ("climatology_fraction", "saturation_fraction")}
+    if field == _POSITION:
+        given["climatology_fraction"] = None  # the file holds standard deviations, not distances
     given["tolerance"] = criteria.get("tolerances", {}).get(field)
     chosen = [f"{{ {name} = {value!r} }}" for name, value in given.items() if value is not None]
     # Every variable needs a criterion, and this one suits them all.

@@ -321,3 +321,29 @@ def test_a_folder_that_holds_nothing_yet_takes_other_settings(desk):
     assert "of another" not in manifest.read_text(encoding="utf-8")
     manifest.write_text('{"fingerprint": "of another"}', encoding="utf-8")
     assert desk.run().exit_code == 2
+
+
+def test_a_tolerance_of_no_variable_is_refused_before_anything_is_made(desk, refusal):
+    desk.write(
+        ('layout = "start"', 'layout = "start"\n[criteria]\ntolerances = { xx = 1.0 }'),
+    )
+    refusal(desk.run(), 2, "criteria.tolerances: expected one of x; found 'xx'")
+    assert desk.files() == []
+
+
+def test_floats_are_read_as_positions(desk):
+    desk.write(
+        ('name = "lorenz-96"', 'name = "double-gyre-floats"'),
+        ("spin_up = 5.0\nclimate = 20.0", ""),
+        ("amplitude = 0.2", "amplitude = 100.0"),
+        ("parameters = { forcing = 9.0 }", "parameters = { swing = 0.1 }"),
+        ('layout = "start"', 'layout = "start"\n[criteria]\ntolerances = { position = 150.0 }'),
+    )
+    desk.made()
+    table = tomllib.loads((desk.archive / "A.toml").read_text(encoding="utf-8"))
+    assert table["variables"]["position"]["position"] == ["x_position", "y_position"]
+    assert desk.run("estimate", desk.archive / "A.toml").exit_code == 0
+    with (desk.archive / "products_A" / "horizons.csv").open(encoding="utf-8") as file:
+        rows = list(csv.DictReader(file))
+    assert {row["variable"] for row in rows} == {"position"}
+    assert {row["threshold_units"] for row in rows} == {"m"}

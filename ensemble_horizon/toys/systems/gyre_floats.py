@@ -60,9 +60,9 @@ class GyreFloats(System):
     period: float = parameter(10.0, "day", "period T of the forcing", above=0.0)
     swing: float = parameter(0.25, "1", "amplitude eps of the border's swing", minimum=0.0)
     latitude: float = parameter(
-        40.0, "degrees_north", "latitude of the south-western corner", above=-89.0, below=89.0
+        -45.0, "degrees_north", "latitude of the south-western corner", above=-89.0, below=89.0
     )
-    longitude: float = parameter(0.0, "degrees_east", "longitude of the south-western corner")
+    longitude: float = parameter(-140.0, "degrees_east", "longitude of the south-western corner")
 
     name: ClassVar[str] = "double-gyre-floats"
     title: ClassVar[str] = "Floats adrift in a double gyre whose border swings"
