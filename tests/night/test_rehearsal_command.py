@@ -336,6 +336,8 @@ def test_floats_are_read_as_positions(desk):
         ('name = "lorenz-96"', 'name = "double-gyre-floats"'),
         ("spin_up = 5.0\nclimate = 20.0", ""),
         ("amplitude = 0.2", "amplitude = 100.0"),
+        ("start_spacing = 0.4", "start_spacing = 0.5"),
+        ("lead_spacing = 0.1", "lead_spacing = 0.25"),
         ("parameters = { forcing = 9.0 }", "parameters = { swing = 0.1 }"),
         ('layout = "start"', 'layout = "start"\n[criteria]\ntolerances = { position = 150.0 }'),
     )
