@@ -221,7 +221,7 @@ def rehearsal_from(
     ...
     ensemble_horizon.errors.SettingsError: settings: expected settings without mistakes; found 1:
       system.parameters.roh: parameter of lorenz-63: expected one of sigma, rho, beta, found 'roh';
-      did you mean 'rho'?. Next: correct it and run again.
+      did you mean 'rho'? Next: correct it and run again.
     """
     own = {"base": base or Path(), "text": text}
     hidden = [f"{key}: unknown key" for key in own if key in table]

@@ -52,7 +52,7 @@ def perturbation(name: str, **options: Any) -> Perturbation:
     ... except ArgumentError as error:
     ...     print(error)
     option of singular-vectors: expected one of window, count, dt; found 'windw'.
-    Next: did you mean 'window'?.
+    Next: did you mean 'window'?
     """
     kind = PERTURBATIONS[require_choice(name, PERTURBATIONS, "method")]
     known = [entry.name for entry in fields(kind)]
