@@ -141,7 +141,8 @@ def _summary(found: Rehearsed) -> None:
         highlight=False, soft_wrap=True,
     )  # fmt: skip
     for name, path in found.settings.items():
-        screen.print(f"version {name}: ensemble-horizon estimate {path}", highlight=False,
+        kept = ", kept as it was, not as CONFIG says now" if path in found.differing else ""
+        screen.print(f"version {name}: ensemble-horizon estimate {path}{kept}", highlight=False,
                      soft_wrap=True)  # fmt: skip
 
 

@@ -56,6 +56,7 @@ class Rehearsed:
     made: int
     found: int
     settings: dict[str, Path]
+    differing: tuple[Path, ...]  # settings files that stood there and hold something else
 
 
 class _Start(NamedTuple):
@@ -111,8 +112,9 @@ def rehearse(settings: Rehearsal, progress: Progress = silent) -> Rehearsed:
     ):
         for done, _ in enumerate(engine.run(_forecast, tasks), start=total - len(todo) + 1):
             progress("forecasts", done, total)
-    files = {name: _write_once(archive.path / f"{name}.toml", text) for name, text in texts.items()}
-    return Rehearsed(archive.path, experiment, len(todo), total - len(todo), files)
+    files = {name: archive.path / f"{name}.toml" for name in texts}
+    differing = tuple(file for name, file in files.items() if not _write_once(file, texts[name]))
+    return Rehearsed(archive.path, experiment, len(todo), total - len(todo), files, differing)
 
 
 def _tasks(
@@ -276,12 +278,13 @@ def _settings_for(settings: Rehearsal, job: _Job, name: str) -> str:
     )
 
 
-def _write_once(target: Path, text: str) -> Path:
-    """Write a text, unless the file is there: settings are for editing."""
-    if not target.is_file():
-        with written_whole(target) as neighbour:
-            neighbour.write_text(text, encoding="utf-8")
-    return target
+def _write_once(target: Path, text: str) -> bool:
+    """Write a text unless the file is there, as settings are for editing; whether it holds it."""
+    if target.is_file():
+        return target.read_text(encoding="utf-8") == text
+    with written_whole(target) as neighbour:
+        neighbour.write_text(text, encoding="utf-8")
+    return True
 
 
 def _workers(settings: Rehearsal, experiment: TwinExperiment, runs: int) -> int:

@@ -93,7 +93,7 @@ def measure_exponents(
                 _of(known, "sum_of_exponents") if found.exponents.size == model.size else ()),
         ]  # fmt: skip
     if found.positive < found.exponents.size or found.exponents.size == model.size:
-        positive = Estimate(found.positive, found.positive, found.positive, "1")
+        positive = Estimate(found.positive, found.positive, found.not_negative, "1")
         derived.append(Row("exponents above zero", positive, _of(known, "positive_exponents")))
     return MeasuredExponents(model, found, exponents, tuple(derived))
 

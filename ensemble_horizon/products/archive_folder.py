@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
@@ -51,7 +51,7 @@ class ArchiveFolder:
         manifest = self.path / MANIFEST
         with disk_errors(self.path):
             found = sorted(path.name for path in self.path.iterdir()) if self.path.exists() else []
-            if found == [MANIFEST]:
+            if MANIFEST in found and not any(self._standing()):
                 found = []  # an archive that broke off before anything stood there
             if MANIFEST in found:
                 self._require_same(manifest, fingerprint)
@@ -83,6 +83,14 @@ class ArchiveFolder:
         if self.layout == "start":
             return place.is_file()
         return all((place / member_name(member)).is_file() for member in range(self.members))
+
+    def _standing(self) -> Iterator[Path]:
+        """Yield the files that stand there whole, the manifest apart."""
+        for path in self.path.rglob("*"):
+            own = path.relative_to(self.path).parts
+            hidden = any(part.startswith(".") for part in own)
+            if path.is_file() and path.name != MANIFEST and not hidden:
+                yield path
 
     def _require_same(self, manifest: Path, fingerprint: str) -> None:
         try:

@@ -26,6 +26,8 @@ from ensemble_horizon.toys import (
 )
 
 NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
+# A climatology needs the attractor several times over, not only the weeks of the starts.
+CLIMATE_SPIN_UPS = 5.0
 Count = Annotated[int, Field(ge=1)]
 
 
@@ -49,7 +51,7 @@ class TruthTable(Table):
     """``[truth]``: what runs before the first start, and the clock of a system without one."""
 
     spin_up: NotNegative | None = None
-    climate: NotNegative = 0.0
+    climate: NotNegative | None = None
     hours_per_time_unit: Positive | None = None
 
 
@@ -154,13 +156,17 @@ class Rehearsal(Table):
             if the settings do not fit one another.
         """
         perturbations = None if self.perturbations is None else self.perturbations.displacement()
+        truth = system(self.system.name, **self.system.parameters)
+        before = self.truth.model_dump()
+        if self.truth.climate is None:
+            before["climate"] = CLIMATE_SPIN_UPS * truth.spin_up
         return TwinExperiment(
-            system=system(self.system.name, **self.system.parameters),
+            system=truth,
             versions={name: self._version(table) for name, table in self.versions.items()},
             analyses=self.analyses.displacement(),
             perturbations=perturbations,
             dt=self.system.dt,
-            **self.truth.model_dump(),
+            **before,
             **self.forecast.model_dump(),
         )
 
@@ -251,6 +257,9 @@ def _cross_checks(settings: Rehearsal) -> list[str]:
             displacement = getattr(settings, key)
             if displacement is not None:
                 _attempt(key, lambda d=displacement: d.displacement().check(truth), found)
+    key = "analyses" if settings.perturbations is None else "perturbations"
+    if getattr(settings, key).amplitude == 0:
+        found.append(f"{key}.amplitude: above zero, or all members are one run; found 0")
     if found:
         return found
     _attempt("forecast", settings.experiment, found)

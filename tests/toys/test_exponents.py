@@ -228,3 +228,11 @@ def test_a_run_that_blows_up_says_when_and_where(method):
 def test_twins_that_cannot_be_told_apart_are_refused():
     with pytest.raises(ArgumentError, match="amplitude 1e-300 has sunk below rounding"):
         toys.pair_growth(LORENZ, length=50.0, amplitude=1e-300)
+
+
+def test_a_sum_too_uncertain_to_be_zero_gives_no_dimension():
+    found = toys.lyapunov_exponents(toys.system("van-der-pol", mu=2.0), length=100.0)
+    assert found.sum.low < -1.0 < 0.0 < found.sum.high
+    with pytest.raises(ArgumentError, match="surely negative, or zero; found an interval"):
+        _ = found.dimension
+    assert found.positive <= found.not_negative

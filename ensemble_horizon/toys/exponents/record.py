@@ -85,6 +85,11 @@ class Exponents:
         return int(np.count_nonzero(self.low > 0))
 
     @property
+    def not_negative(self) -> int:
+        """How many exponents may lie above zero: those whose interval reaches there."""
+        return int(np.count_nonzero(self.high > 0))
+
+    @property
     def dimension(self) -> Estimate:
         """Kaplan-Yorke dimension j + (l_1 + ... + l_j) / |l_(j+1)|.
 
@@ -96,12 +101,13 @@ class Exponents:
         Raises
         ------
         ArgumentError
-            If the exponents known do not reach the point where their sum turns negative.
+            If the exponents known do not reach the point where their sum turns negative, or their
+            interval leaves open whether it does.
         """
         exponents = np.where((self.low <= 0) & (self.high >= 0), 0.0, self.exponents)
         sums = np.cumsum(exponents)
-        # A sum of all that is zero to within its interval is a volume that does not shrink.
-        if exponents.size == self.size and (sums[-1] >= 0 or self.sum.high >= 0):
+        if exponents.size == self.size and self.sum.high >= 0:
+            self._require_volume_kept(exponents)
             return Estimate(float(self.size), float(self.size), float(self.size), "1")
         whole = int(np.count_nonzero(np.cumsum(sums < 0) == 0))
         if whole == exponents.size:
@@ -161,3 +167,14 @@ class Exponents:
                 remedy="take doubling_time and say how long a unit of model time is",
             )
         return Estimate(time.value * hours, time.low * hours, time.high * hours, "hours")
+
+    def _require_volume_kept(self, exponents: Array) -> None:
+        """Refuse to call a sum zero that is only too uncertain to be called negative."""
+        largest = float(np.abs(exponents).max())
+        if -self.sum.low > 0.1 * largest > 0:
+            raise ArgumentError(
+                f"dimension of {self.system}",
+                expected="a sum of the exponents that is surely negative, or zero",
+                found=f"an interval of the sum from {self.sum.low:.3g} to {self.sum.high:.3g}",
+                remedy="take a greater length",
+            )

@@ -95,7 +95,9 @@ def require_scale(scale: npt.ArrayLike | None, size: int) -> Array:
         raise ArgumentError(
             "scale",
             expected=f"{size} numbers of at least zero, not all of them zero",
-            found=f"shape {array.shape}",
+            found=f"{np.min(array):g} among them"
+            if array.shape == (size,) and np.any(array < 0)
+            else f"shape {array.shape}",
             remedy="give one relative size per variable of the system",
         )
     return array
