@@ -17,6 +17,9 @@ LONGITUDE = "longitude"
 CELL = "cell"
 PLACE = "place"
 CRITERION = "criterion"
+SCORE = "score"
+LIMIT = "limit"
+RANK = "rank"
 
 CONVENTIONS = "CF-1.11"
 

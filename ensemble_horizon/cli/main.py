@@ -15,6 +15,11 @@ COMMANDS = {
         "ensemble_horizon.cli.estimate",
         "Measure spread and growth, and place the limits.",
     ),
+    "compare": ("ensemble_horizon.cli.compare", "Say what one version gains over another."),
+    "verify": (
+        "ensemble_horizon.cli.verify",
+        "Score past runs against analyses and observations.",
+    ),
     "reach": ("ensemble_horizon.cli.reach", "Say what a smaller initial error would buy."),
     "toy": ("ensemble_horizon.cli.toy", "List, run and measure toy systems of known limits."),
 }

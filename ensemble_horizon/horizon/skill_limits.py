@@ -14,7 +14,7 @@ the inversion of the band at each lead, exact where neighbouring leads share the
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 import xarray as xr
@@ -112,16 +112,50 @@ def skill_limits(
     lead = require_increasing(found[LEAD].values, f"scores[{LEAD!r}]")
     rest = [name for name in found["value"].dims if name != LEAD]
     shape = tuple(found.sizes[name] for name in rest)
-    falls = {
-        name: _fall(lead, found[name].transpose(LEAD, *rest).values, level, hold)
+    curves = [
+        found[name].transpose(LEAD, *rest).values.reshape(lead.size, -1)
         for name in ("value", "low", "high")
-    }
+    ]
+    falls = falls_of_curves(lead, *curves, level=level, hold=hold)
     return _labelled(falls, found, lead, rest, shape, level)
 
 
+class Falls(NamedTuple):
+    """Where K curves of scores fall to a level, each (K,); see `skill_limits`."""
+
+    horizon: np.ndarray
+    low: np.ndarray
+    high: np.ndarray
+    status: np.ndarray
+    significant_until: np.ndarray
+    significant_status: np.ndarray
+
+
+def falls_of_curves(
+    lead: np.ndarray,
+    value: np.ndarray,
+    low: np.ndarray,
+    high: np.ndarray,
+    *,
+    level: float,
+    hold: float = 0.0,
+) -> Falls:
+    """Where scores (L, K) with the ends of their intervals fall to a level: numpy kernel.
+
+    Examples
+    --------
+    >>> value = np.array([[0.8], [0.4], [0.0]])
+    >>> found = falls_of_curves(np.arange(3.0), value, value - 0.1, value + 0.1, level=0.1)
+    >>> found.horizon.tolist(), found.significant_until.tolist()
+    ([1.75], [1.5])
+    """
+    middle, lower, upper = (_fall(lead, curve, level, hold) for curve in (value, low, high))
+    return Falls(middle.time, _end(lower), _end(upper), _status(middle), lower.time, _status(lower))
+
+
 def _fall(lead: np.ndarray, values: np.ndarray, level: float, hold: float) -> Crossing:
-    """Where curves (L, ...) fall to a level for good: a crossing turned upside down."""
-    return first_crossing(lead, -values.reshape(lead.size, -1), -level, hold)
+    """Where curves (L, K) fall to a level for good: a crossing turned upside down."""
+    return first_crossing(lead, -values, -level, hold)
 
 
 def _status(crossing: Crossing) -> np.ndarray:
@@ -136,7 +170,7 @@ def _end(crossing: Crossing) -> np.ndarray:
 
 
 def _labelled(
-    falls: dict[str, Crossing],
+    falls: Falls,
     found: xr.Dataset,
     lead: np.ndarray,
     rest: list[Any],
@@ -146,11 +180,11 @@ def _labelled(
     units = found[LEAD].attrs.get("units", "1")
     what = f"{found['value'].attrs['long_name']} falls to {level:g}"
     times = {
-        "horizon": (falls["value"].time, f"lead at which the {what}"),
-        "low": (_end(falls["low"]), f"lower end of the interval of the lead at which the {what}"),
-        "high": (_end(falls["high"]), f"upper end of the interval of the lead at which the {what}"),
+        "horizon": (falls.horizon, f"lead at which the {what}"),
+        "low": (falls.low, f"lower end of the interval of the lead at which the {what}"),
+        "high": (falls.high, f"upper end of the interval of the lead at which the {what}"),
         "significant_until": (
-            falls["low"].time,
+            falls.significant_until,
             f"lead at which the lower end of the interval of the {what}",
         ),
     }
@@ -158,8 +192,8 @@ def _labelled(
         name: (rest, values.reshape(shape), {"long_name": text, "units": units})
         for name, (values, text) in times.items()
     }
-    for name, fall in (("status", falls["value"]), ("significant_status", falls["low"])):
-        data[name] = (rest, _status(fall).reshape(shape), dict(STATUS_ATTRIBUTES))
+    for name in ("status", "significant_status"):
+        data[name] = (rest, getattr(falls, name).reshape(shape), dict(STATUS_ATTRIBUTES))
     coords = {name: item for name, item in found.coords.items() if LEAD not in item.dims}
     attributes = {"statistic": found.attrs["statistic"], "above": level, "last_lead": lead[-1]}
     return xr.Dataset(data, coords=coords, attrs=attributes)

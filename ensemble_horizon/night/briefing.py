@@ -2,15 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
 from ensemble_horizon.night.engine import Engine, usable_cores
 from ensemble_horizon.night.estimate import Estimate, Progress, estimate, silent
+from ensemble_horizon.night.verifying import Verification
+from ensemble_horizon.night.waiting import shares_of_estimate
 from ensemble_horizon.products import Drawing, PlaceMark, load_plotting, write_products
 from ensemble_horizon.settings import Settings
+
+_CALIBRATED = (
+    "the spread is multiplied by the factors from spread to error in {}, and their uncertainty is "
+    "in the intervals"
+)
 
 
 def estimate_and_write(
@@ -26,30 +33,38 @@ def estimate_and_write(
         if the folder cannot be written; nothing half-written is left.
     """
     found = estimate(settings, progress)
-    workers = settings.engine.workers or usable_cores()
-
-    def draw(drawings: Sequence[Drawing]) -> None:
-        load_plotting()  # once, before workers are made as copies of this process
-        with Engine(min(workers, len(drawings))) as engine:
-            for done, _ in enumerate(engine.run(_draw, drawings), start=1):
-                progress("figures", done, len(drawings))
-
+    about = provenance(settings, found)
+    if settings.calibration is not None:
+        about["calibration"] = _CALIBRATED.format(settings.path(settings.calibration.file))
     paths = write_products(
         settings.path(settings.products.folder),
         found.results,
-        provenance(settings, found),
+        about,
         figures=settings.products.figures,
-        places=_marks(settings),
-        draw=draw,
+        places=place_marks(settings),
+        shares=shares_of_estimate(found.results),
+        draw=drawn_by(settings.engine.workers, progress),
     )
     return found, paths
+
+
+def drawn_by(workers: int | None, progress: Progress) -> Callable[[Sequence[Drawing]], None]:
+    """A function that draws figures in worker processes, as many as there are cores by default."""
+
+    def draw(drawings: Sequence[Drawing]) -> None:
+        load_plotting()  # once, before workers are made as copies of this process
+        with Engine(min(workers or usable_cores(), len(drawings))) as engine:
+            for done, _ in enumerate(engine.run(_draw, drawings), start=1):
+                progress("figures", done, len(drawings))
+
+    return draw
 
 
 def _draw(drawing: Drawing) -> None:
     drawing.draw()
 
 
-def provenance(settings: Settings, found: Estimate) -> dict[str, Any]:
+def provenance(settings: Settings, found: Estimate | Verification) -> dict[str, Any]:
     """Where the products come from: inputs, settings, version."""
     return {
         "inputs": list(found.catalogue.paths),
@@ -59,7 +74,8 @@ def provenance(settings: Settings, found: Estimate) -> dict[str, Any]:
     }
 
 
-def _marks(settings: Settings) -> list[PlaceMark]:
+def place_marks(settings: Settings) -> list[PlaceMark]:
+    """Regions and sites as they stand on maps."""
     regions, sites = settings.places()
     if not settings.regions:
         regions = ()  # the whole domain needs no outline

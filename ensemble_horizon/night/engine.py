@@ -27,6 +27,8 @@ R = TypeVar("R")
 
 _PRELOAD = ["ensemble_horizon.night.reading", "ensemble_horizon.horizon.map_limits"]
 
+_SMALL = 48 * 2**20  # bytes below which worker processes take longer to start than they save
+
 _shared: Any = None
 
 
@@ -35,6 +37,13 @@ def usable_cores() -> int:
     if hasattr(os, "sched_getaffinity"):
         return len(os.sched_getaffinity(0))
     return os.cpu_count() or 1
+
+
+def workers_for(wanted: int | None, size: int) -> int:
+    """Workers for ``size`` bytes of values: as many as wanted, or as are worth their start."""
+    if wanted is not None:
+        return wanted
+    return 1 if size < _SMALL else usable_cores()
 
 
 def shared() -> Any:

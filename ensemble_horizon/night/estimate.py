@@ -13,13 +13,22 @@ import numpy as np
 from ensemble_horizon.horizon.curve_growth import growth_of_curves
 from ensemble_horizon.horizon.curve_limits import Curve, limits_of_curve
 from ensemble_horizon.horizon.map_limits import MapOptions
+from ensemble_horizon.night.calibrated import Calibrated, calibrated
 from ensemble_horizon.night.curves import curves_of_start, members_of_start, pool_starts
-from ensemble_horizon.night.engine import Engine, usable_cores
+from ensemble_horizon.night.engine import Engine, workers_for
 from ensemble_horizon.night.health import faults_of, require_enough, stopped_by
 from ensemble_horizon.night.input import Input, open_input
-from ensemble_horizon.night.mapping import Fields, PooledFields, map_fields, noise_of_start
+from ensemble_horizon.night.mapping import (
+    Fields,
+    MapPlan,
+    PooledFields,
+    map_fields,
+    map_plan,
+    noise_of_start,
+)
 from ensemble_horizon.night.reading import ReadingContext, read_start
 from ensemble_horizon.night.results import (
+    ALL_STARTS,
     CurveRow,
     Frame,
     VariableResult,
@@ -40,9 +49,6 @@ from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.kurtosis import pooled_kurtosis
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sample import SampleLayout
-
-ALL_STARTS = "all"
-_SMALL = 48 * 2**20  # bytes below which worker processes take longer to start than they save
 
 log = logging.getLogger(__name__)
 Progress = Callable[[str, float, float], None]
@@ -86,17 +92,27 @@ def estimate(settings: Settings, progress: Progress = silent) -> Estimate:
     """
     with _timed("headers"):
         found = open_input(settings, lambda done, total: progress("headers", done, total))
+    return estimate_input(settings, found, map_plan(settings, found.catalogue), progress)
+
+
+def estimate_input(
+    settings: Settings, found: Input, plan: MapPlan, progress: Progress = silent
+) -> Estimate:
+    """`estimate` of an input whose headers have been read, with maps as planned."""
     catalogue = found.catalogue
     places = resolve_places(settings, catalogue)
     layout = layout_of(catalogue)
     variables = [resolve_variable(settings, catalogue, name) for name in settings.variables]
     size = int(np.prod(catalogue.grid.shape, dtype=int))
-    mapped = _map_mode(settings, catalogue) != "none"
+    mapped = plan.mode != "none"
     context = ReadingContext(
         catalogue, tuple(item.source(places, layout, size, mapped) for item in variables)
     )
-    job = _Job(settings, found, context, places, layout, progress)
-    with Engine(_workers(settings, context), context) as engine:
+    factors = calibrated(settings, catalogue, places, variables, maps=mapped)
+    job = _Job(settings, context, places, layout, plan, factors, progress)
+    wanted = 4 * size * len(catalogue.members) * catalogue.leads.size * catalogue.starts.size
+    workers = workers_for(settings.engine.workers, wanted * len(variables))
+    with Engine(workers, context) as engine:
         results = [job.variable(engine, number, item) for number, item in enumerate(variables)]
     return Estimate(results, places, catalogue, [*found.faults, *job.faults])
 
@@ -107,20 +123,22 @@ class _Job:
     def __init__(
         self,
         settings: Settings,
-        found: Input,
         context: ReadingContext,
         places: Places,
         layout: SampleLayout,
+        plan: MapPlan,
+        factors: dict[str, Calibrated],
         progress: Progress,
     ) -> None:
         self.settings = settings
         self.context = context
-        self.catalogue = found.catalogue
+        self.catalogue = context.catalogue
         self.places = places
         self.layout = layout
+        self.plan = plan
+        self.factors = factors
         self.progress = progress
         self.faults: list[Fault] = []
-        self.mode = _map_mode(settings, self.catalogue)
         self._total = (
             len(settings.variables) * self.catalogue.starts.size * self.catalogue.leads.size
         )
@@ -128,30 +146,28 @@ class _Job:
 
     def variable(self, engine: Engine, number: int, variable: Variable) -> VariableResult:
         """All starts of one variable."""
-        settings, catalogue = self.settings, self.catalogue
-        starts = catalogue.starts.size
+        mode, starts = self.plan.mode, self.catalogue.starts.size
         lines: list[list[Curve]] = []
         members: list[int] = []
         maps: list[dict[str, np.ndarray]] = []
-        map_confidence = settings.growth.confidence if settings.products.map_intervals else None
         pooled = PooledFields(self.layout)
         for start in range(starts):
             summary = self._read(engine, number, variable, start)
             kurtosis = pooled_kurtosis(summary.sample_values)
             lines.append(curves_of_start(summary, variable, self.places, kurtosis))
             members.append(members_of_start(summary))
-            if self.mode == "none":
+            if mode == "none":
                 continue
             noise = noise_of_start(summary, self.layout, kurtosis)
-            if self.mode == "pooled":
+            if mode == "pooled":
                 pooled.add(summary, noise)
             else:
                 assert summary.variance is not None
                 fields = Fields(summary.variance, summary.share, noise)
-                maps.append(self._map(engine, fields, variable, members[-1], map_confidence))
-        if self.mode == "pooled":
-            fields = pooled.fields(settings.growth.confidence)
-            maps.append(self._map(engine, fields, variable, max(members), map_confidence))
+                maps.append(self._map(engine, fields, variable, members[-1]))
+        if mode == "pooled":
+            fields = pooled.fields(self.settings.growth.confidence)
+            maps.append(self._map(engine, fields, variable, max(members)))
         return self._result(variable, lines, members, maps)
 
     def _read(self, engine: Engine, number: int, variable: Variable, start: int) -> Summary:
@@ -211,12 +227,7 @@ class _Job:
         self.progress("reading", self._done, self._total)
 
     def _map(
-        self,
-        engine: Engine,
-        fields: Fields,
-        variable: Variable,
-        members: int,
-        confidence: float | None,
+        self, engine: Engine, fields: Fields, variable: Variable, members: int
     ) -> dict[str, np.ndarray]:
         growth = self.settings.growth
         options = MapOptions(
@@ -224,11 +235,14 @@ class _Job:
             hold=variable.hold,
             law=growth.law,
             scale=growth.scale,
-            confidence=confidence,
+            confidence=self.plan.confidence,
             members=members,
         )
+        if variable.name in self.factors:
+            fields = self.factors[variable.name].fields(fields, self.layout)
         with _timed(f"mapping {variable.name}"):
-            return map_fields(engine, self.catalogue.leads, fields, variable, self.layout, options)
+            found = map_fields(engine, self.catalogue.leads, fields, variable, self.layout, options)
+        return {name: found[name] for name in self.plan.fields or found}
 
     def _result(
         self,
@@ -256,6 +270,9 @@ class _Job:
             lines, members = [*lines, pooled], [*members, max(members)]
             curve_labels = [*labels, ALL_STARTS]
             curve_starts = np.concatenate([starts, _no_start(starts)])
+        if variable.name in self.factors:
+            # After the pooling: the noise of the factor is the same in all starts.
+            lines = [self.factors[variable.name].curves(line) for line in lines]
         rows = [
             self._rows(line, variable, count) for line, count in zip(lines, members, strict=True)
         ]
@@ -264,7 +281,7 @@ class _Job:
         space = (grid.dims, grid.shape, dict(grid.coords))
         if not maps:
             return VariableResult(curves, None)
-        if self.mode == "pooled":
+        if self.plan.mode == "pooled":
             starts, labels = curve_starts[-1:], [ALL_STARTS]
         return VariableResult(curves, maps_dataset(frame, starts, labels, space, maps))
 
@@ -289,24 +306,6 @@ class _Job:
 def _no_start(starts: np.ndarray) -> np.ndarray:
     empty = np.datetime64("NaT", "ns") if starts.dtype.kind == "M" else None
     return np.array([empty], dtype=starts.dtype)
-
-
-def _map_mode(settings: Settings, catalogue: Catalogue) -> str:
-    if not catalogue.grid.shape:
-        return "none"
-    if settings.products.maps is not None:
-        return settings.products.maps
-    return "each" if catalogue.starts.size == 1 else "pooled"
-
-
-def _workers(settings: Settings, context: ReadingContext) -> int:
-    catalogue = context.catalogue
-    wanted = settings.engine.workers
-    if wanted is not None:
-        return wanted
-    size = int(np.prod(catalogue.grid.shape, dtype=int)) * len(catalogue.members)
-    size *= 4 * catalogue.leads.size * catalogue.starts.size * len(context.variables)
-    return 1 if size < _SMALL else usable_cores()
 
 
 @contextmanager

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import logging
 import re
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -38,6 +38,12 @@ class Input:
     def faults(self) -> tuple[Fault, ...]:
         """What the headers brought to light."""
         return self.report.faults
+
+    def at(self, starts: Sequence[str]) -> Input:
+        """The same at some of its starts only, given by label."""
+        labels = [self.catalogue.start_label(n) for n in range(self.catalogue.starts.size)]
+        chosen = [number for number, label in enumerate(labels) if label in set(starts)]
+        return replace(self, catalogue=self.catalogue.subset(starts=chosen))
 
 
 def open_input(settings: Settings, progress: Callable[[int, int], None] | None = None) -> Input:

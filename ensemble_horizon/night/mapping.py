@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
@@ -16,6 +17,8 @@ from ensemble_horizon.horizon.map_limits import (
 )
 from ensemble_horizon.night.engine import Engine
 from ensemble_horizon.night.variables import Variable
+from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.moments import member_variance
 from ensemble_horizon.spread.reduction import Summary
 from ensemble_horizon.spread.sample import SampleLayout
@@ -28,6 +31,33 @@ from ensemble_horizon.spread.sampling import (
 )
 
 _BATCH = 32768
+
+
+@dataclass(frozen=True)
+class MapPlan:
+    """Which maps are made, and what is kept of them.
+
+    Parameters
+    ----------
+    mode : of each start, of all starts pooled, or none
+    confidence : float or None
+        Of the intervals at grid points; None without intervals.
+    fields : tuple of str
+        Names of the fields that are kept; all of them where none is named.
+    """
+
+    mode: Literal["each", "pooled", "none"]
+    confidence: float | None = None
+    fields: tuple[str, ...] = ()
+
+
+def map_plan(settings: Settings, catalogue: Catalogue) -> MapPlan:
+    """The maps that the settings ask for: of every start, or pooled where there are several."""
+    confidence = settings.growth.confidence if settings.products.map_intervals else None
+    if not catalogue.grid.shape:
+        return MapPlan("none")
+    mode = settings.products.maps or ("each" if catalogue.starts.size == 1 else "pooled")
+    return MapPlan(mode, confidence)
 
 
 @dataclass(frozen=True)

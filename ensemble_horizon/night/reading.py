@@ -70,7 +70,7 @@ def read_block(block: Block) -> Reading:
     variable = context.variables[block.variable]
     catalogue = context.catalogue
     damage: Damage = {}
-    parts = [_read_part(catalogue, name, block, damage) for name in variable.parts]
+    parts = [read_part(catalogue, name, block, damage) for name in variable.parts]
     reduction = variable.reduction
     if len(parts) == 2 and reduction.geometry is None:
         parts = [np.hypot(parts[0], parts[1], out=parts[0])]
@@ -82,7 +82,7 @@ def read_block(block: Block) -> Reading:
     return Reading(reduce_block(parts[0], reduction, points, *parts[1:]), damage)
 
 
-def _read_part(catalogue: Catalogue, name: str, block: Block, damage: Damage) -> np.ndarray:
+def read_part(catalogue: Catalogue, name: str, block: Block, damage: Damage) -> np.ndarray:
     """Values (member, lead, *window); field by field where a file does not let itself be read."""
     leads = list(range(*block.leads))
     window = tuple(slice(*bounds) for bounds in block.window)
@@ -126,7 +126,9 @@ def read_start(
     """
     blocks = [
         replace(block, without=without)
-        for block in plan_blocks(context, variable, start, block_bytes)
+        for block in plan_blocks(
+            context.catalogue, context.variables[variable].parts, variable, start, block_bytes
+        )
     ]
     catalogue = context.catalogue
     reduction = context.variables[variable].reduction
@@ -142,11 +144,9 @@ def read_start(
 
 
 def plan_blocks(
-    context: ReadingContext, variable: int, start: int, block_bytes: int
+    catalogue: Catalogue, parts: tuple[str, ...], variable: int, start: int, block_bytes: int
 ) -> Iterator[Block]:
     """Blocks of one start that follow the files' own chunks."""
-    catalogue = context.catalogue
-    parts = context.variables[variable].parts
     step, shape = catalogue.natural_block(parts[0], block_bytes // len(parts))
     total = catalogue.leads.size
     windows = [_pieces(size, part) for size, part in zip(catalogue.grid.shape, shape, strict=True)]

@@ -22,6 +22,8 @@ from ensemble_horizon.vocabulary import (
     STATUS_ATTRIBUTES,
 )
 
+ALL_STARTS = "all"
+
 LAW_ATTRIBUTES = {
     "long_name": "law of error growth",
     "flag_values": list(range(len(LAW_NAMES))),
@@ -160,6 +162,11 @@ def curves_dataset(
         }
     )
     return _described(dataset, frame)
+
+
+def without_pooled(curves: xr.Dataset) -> xr.Dataset:
+    """The single starts, without that which stands for all of them."""
+    return curves.isel({START: np.flatnonzero(curves["start_label"].values != ALL_STARTS)})
 
 
 def maps_dataset(

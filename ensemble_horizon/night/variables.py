@@ -135,8 +135,12 @@ def levels_of(settings: Settings) -> dict[str, float]:
     return found
 
 
-def resolve_variable(settings: Settings, catalogue: Catalogue, name: str) -> Variable:
+def resolve_variable(
+    settings: Settings, catalogue: Catalogue, name: str, *, climatology: bool = False
+) -> Variable:
     """Hold one ``[variables.NAME]`` against the files.
+
+    The climatology is read where a criterion needs it, or where it is asked for.
 
     Raises
     ------
@@ -170,7 +174,7 @@ def resolve_variable(settings: Settings, catalogue: Catalogue, name: str) -> Var
         plausible=plausible,
         hold=table.hold,
         criteria=settings.criteria(name, units),
-        climatology=_climatology(settings, catalogue, name, units),
+        climatology=_climatology(settings, catalogue, name, units, climatology),
         offset=offset,
         geometry=None if geometry is None else geometry.kind,
     )
@@ -227,12 +231,11 @@ def _warn_of_hold(name: str, hold: float, catalogue: Catalogue) -> None:
 
 
 def _climatology(
-    settings: Settings, catalogue: Catalogue, name: str, units: str
+    settings: Settings, catalogue: Catalogue, name: str, units: str, wanted: bool
 ) -> np.ndarray | None:
     table = settings.climatology
-    if table is None or not any(
-        item.climatology_fraction for item in settings.variables[name].criteria
-    ):
+    wanted |= any(item.climatology_fraction for item in settings.variables[name].criteria)
+    if table is None or not wanted:
         return None
     source = table.names.get(name, settings.variables[name].source or name)
     try:

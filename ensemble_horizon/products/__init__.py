@@ -18,11 +18,27 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``isolines``       contour lines and their labels
 ``sheet``          a figure measured in pixels
 ``map_legend``     what stands around a map
+``map_ground``     what every map stands on
 ``maps``           horizon maps
 ``curve_panel``    one panel of growth curves
 ``curve_figures``  growth curves, place by place
 ``drawing``        the figures, one record each
 ``folder``         all products together
+``gains``          hours gained: one record per variable, place and criterion
+``gains_table``    ``versions.csv`` and the table for the terminal
+``gains_file``     ``versions.nc``
+``gains_figure``   hours gained with intervals
+``gain_maps``      maps of hours gained
+``share_table``    ``time_to_limit.csv``
+``share_figures``  time to the limit over many starts
+``versions_folder`` all products of a comparison together
+``scores``         scores and skill limits: one record each
+``score_table``    ``scores.csv``, ``skill_limits.csv`` and tables for the terminal
+``score_file``     ``scores.nc`` and ``score_maps.nc``
+``score_panel``    one panel of scores by lead
+``score_figures``  scores by lead, and ranks
+``score_folder``   all products of a verification together
+``calibration_file`` factors from spread to error
 ``run_archive``    run files and analyses of a rehearsal
 ``archive_folder`` what stands where in its archive
 =================  =============================================================
@@ -34,10 +50,13 @@ from ensemble_horizon.products.coast import coastlines
 from ensemble_horizon.products.curve_file import write_horizon_file
 from ensemble_horizon.products.drawing import Drawing, draw_in_turn, load_plotting
 from ensemble_horizon.products.folder import moved_together, write_products
+from ensemble_horizon.products.gains import gains, starts_words, summary_words
+from ensemble_horizon.products.gains_table import gains_table
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
 from ensemble_horizon.products.map_file import MapFile, map_file, write_map_file
 from ensemble_horizon.products.places import PlaceMark
 from ensemble_horizon.products.tables import limits_table, write_horizon_table
+from ensemble_horizon.products.versions_folder import write_versions
 from ensemble_horizon.products.writing import written_whole
 
 __all__ = [
@@ -48,14 +67,19 @@ __all__ = [
     "VariableResult",
     "coastlines",
     "draw_in_turn",
+    "gains",
+    "gains_table",
     "limits",
     "limits_table",
     "load_plotting",
     "map_file",
     "moved_together",
+    "starts_words",
+    "summary_words",
     "write_horizon_file",
     "write_horizon_table",
     "write_map_file",
     "write_products",
+    "write_versions",
     "written_whole",
 ]

@@ -7,7 +7,14 @@ from dataclasses import dataclass
 import numpy as np
 import xarray as xr
 from matplotlib.axes import Axes
-from matplotlib.ticker import FixedLocator, FuncFormatter, LogLocator, MaxNLocator, NullLocator
+from matplotlib.ticker import (
+    FixedLocator,
+    FuncFormatter,
+    Locator,
+    LogLocator,
+    MaxNLocator,
+    NullLocator,
+)
 
 from ensemble_horizon.products.limits import Limit
 from ensemble_horizon.products.sheet import DPI, FAINT, INK, LETTER, SOFT_INK, Sheet, wrapped
@@ -49,6 +56,16 @@ class Panel:
     def single(self, name: str) -> float:
         """Return a single number of the fit, NaN where the dataset has none."""
         return float(self.curves[name].values) if name in self.curves else float("nan")
+
+
+def lead_locator(first: float, last: float, units: str) -> Locator:
+    """Return where an axis of leads has its ticks: on whole parts of days where it counts hours."""
+    if lead_units(units) != "h":
+        return MaxNLocator(6)
+    fitting = [step for step in _LEAD_STEPS if (last - first) / step <= 8]
+    step = fitting[0] if fitting else _LEAD_STEPS[-1]
+    ticks = np.arange(np.ceil(first / step), last / step + 1e-9) * step
+    return FixedLocator(ticks.tolist())
 
 
 def draw_panel(sheet: Sheet, panel: Panel, left: float, top: float) -> None:
@@ -234,11 +251,5 @@ def _lead_axis(axes: Axes, panel: Panel, *, labels: bool) -> None:
     units = str(panel.curves[LEAD].attrs.get("units", "hours"))
     first, last = float(lead[0]), float(lead[-1])
     axes.set_xlim(first, last if last > first else first + 1.0)
-    if lead_units(units) == "h":
-        fitting = [step for step in _LEAD_STEPS if (last - first) / step <= 8]
-        step = fitting[0] if fitting else _LEAD_STEPS[-1]
-        ticks = np.arange(np.ceil(first / step), last / step + 1e-9) * step
-        axes.xaxis.set_major_locator(FixedLocator(ticks.tolist()))
-    else:
-        axes.xaxis.set_major_locator(MaxNLocator(6))
+    axes.xaxis.set_major_locator(lead_locator(first, last, units))
     axes.tick_params(axis="x", labelbottom=labels)

@@ -11,6 +11,7 @@ import importlib
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Protocol
 
 import numpy as np
 import xarray as xr
@@ -21,13 +22,20 @@ from ensemble_horizon.products.places import PlaceMark
 from ensemble_horizon.products.wording import iso_start
 from ensemble_horizon.vocabulary import CRITERION, PLACE, START
 
-_MODULES = ("curve_figures", "maps", "view")
+_MODULES = ("curve_figures", "maps", "view", "score_figures")
 
 
 def load_plotting() -> None:
     """Load the plotting library, for those who know that they will draw."""
     for name in _MODULES:
         importlib.import_module(f"ensemble_horizon.products.{name}")
+
+
+class Drawing(Protocol):
+    """A figure that can be sent to another process and drawn there."""
+
+    def draw(self) -> None:
+        """Draw and write the figure."""
 
 
 @dataclass(frozen=True)
@@ -73,7 +81,20 @@ class MapDrawing:
             )
 
 
-Drawing = CurveDrawing | MapDrawing
+@dataclass(frozen=True)
+class SharesDrawing:
+    """Time to the limit of one variable, once or under several versions."""
+
+    parts: tuple[xr.Dataset, ...]
+    labels: tuple[str, ...]
+    when: str
+    path: Path
+
+    def draw(self) -> None:
+        """Draw and write the figure."""
+        from ensemble_horizon.products.share_figures import Curves, draw_shares  # noqa: PLC0415
+
+        draw_shares(Curves(self.parts, self.labels, self.when), self.path)
 
 
 def draw_in_turn(drawings: Sequence[Drawing]) -> None:
@@ -83,7 +104,10 @@ def draw_in_turn(drawings: Sequence[Drawing]) -> None:
 
 
 def drawings_of(
-    results: Sequence[VariableResult], folder: Path, places: Sequence[PlaceMark]
+    results: Sequence[VariableResult],
+    folder: Path,
+    places: Sequence[PlaceMark],
+    shares: Sequence[xr.Dataset] = (),
 ) -> Iterator[Drawing]:
     """Yield all figures: the maps of each variable and start first, as they take longest."""
     curves: list[Drawing] = []
@@ -94,6 +118,11 @@ def drawings_of(
         if result.maps is not None:
             yield from _map_drawings(result.maps, result.curves, variable, folder, places)
     yield from curves
+    taken = set()
+    for part in shares:
+        name = valid_name(str(part.attrs["variable"]), taken)
+        when = f"{int(part.attrs['start_count'])} starts"
+        yield SharesDrawing((part,), ("",), when, folder / f"{name}_time_to_limit.png")
 
 
 def _curve_drawings(curves: xr.Dataset, variable: str, folder: Path) -> Iterator[Drawing]:

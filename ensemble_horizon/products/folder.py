@@ -7,8 +7,11 @@ import os
 import secrets
 import shutil
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
+
+import xarray as xr
 
 from ensemble_horizon.errors import ArgumentError, ProductError
 from ensemble_horizon.products.curve_file import write_horizon_file
@@ -16,6 +19,8 @@ from ensemble_horizon.products.drawing import Drawing, draw_in_turn, drawings_of
 from ensemble_horizon.products.limits import VariableResult
 from ensemble_horizon.products.map_file import write_map_file
 from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.share_table import COLUMN_NOTES as SHARE_NOTES
+from ensemble_horizon.products.share_table import write_share_table
 from ensemble_horizon.products.tables import COLUMN_NOTES, write_horizon_table
 from ensemble_horizon.products.writing import disk_errors, refuse_folder
 from ensemble_horizon.vocabulary import CAUTION, STATUS_MEANING
@@ -23,13 +28,45 @@ from ensemble_horizon.vocabulary import CAUTION, STATUS_MEANING
 FIGURES = "figures"
 README = "README.txt"
 
-_TITLE = "Products of Ensemble Horizon"
-_LIST = "Files"  # the lines below it tell the next estimate which files are products
-_NOTES = {
-    "horizons.csv": "one row per start, variable, place and criterion",
-    "horizons.nc": "curves, fits and limits of regions and sites (CF-1.11)",
-    "horizon_maps.nc": "limits and fits per grid point (CF-1.11)",
-}
+PROGRAM = "Ensemble Horizon"
+_LIST = "Files"  # the lines below it tell the next run which files are products
+
+
+@dataclass(frozen=True)
+class Leaflet:
+    """What ``README.txt`` says of a folder of products.
+
+    Attributes
+    ----------
+    title : str
+        The first line, ending in the name of the program; later runs know by it whose folder it is.
+    notes : mapping of str to str
+        What each file beside the figures holds.
+    sections : mapping of heading to names and notes
+        Such as the columns of a table.
+    readme : str
+        Its name, one of its own where products of several kinds stand in one folder.
+    """
+
+    title: str
+    notes: Mapping[str, str]
+    sections: Mapping[str, Mapping[str, str]]
+    readme: str = README
+
+
+_ESTIMATE = Leaflet(
+    f"Products of {PROGRAM}",
+    {
+        "horizons.csv": "one row per start, variable, place and criterion",
+        "horizons.nc": "curves, fits and limits of regions and sites (CF-1.11)",
+        "horizon_maps.nc": "limits and fits per grid point (CF-1.11)",
+        "time_to_limit.csv": "when how many of the starts have met their limit",
+    },
+    {
+        "Columns of horizons.csv": COLUMN_NOTES,
+        "Statuses": {status.name: meaning for status, meaning in STATUS_MEANING.items()},
+    },
+)
 
 
 def write_products(
@@ -39,6 +76,7 @@ def write_products(
     *,
     figures: bool = True,
     places: Sequence[PlaceMark] = (),
+    shares: Sequence[xr.Dataset] = (),
     draw: Callable[[Sequence[Drawing]], None] = draw_in_turn,
 ) -> list[Path]:
     """Write all products of an estimate into ``folder``.
@@ -61,6 +99,9 @@ def write_products(
         Whether to draw.
     places : sequence of PlaceMark
         Regions and sites to show on the maps.
+    shares : sequence of Dataset
+        Time to the limit of each variable, where there are several starts: ``time_to_limit.csv``
+        and a figure per variable.
     draw : callable
         Draws all the figures it is given; in this process by default.
 
@@ -84,18 +125,47 @@ def write_products(
             found="none",
             remedy="name a variable in the settings",
         )
-    with moved_together(folder, earlier_products(Path(folder))) as aside:
+
+    def write(aside: Path) -> None:
         write_horizon_table(aside / "horizons.csv", found)
         write_horizon_file(aside / "horizons.nc", found, provenance)
         maps = [result.maps for result in found if result.maps is not None]
         if maps:
             write_map_file(aside / "horizon_maps.nc", maps, provenance)
+        if shares:
+            write_share_table(aside / "time_to_limit.csv", shares)
         if figures:
-            draw(list(drawings_of(found, aside / FIGURES, places)))
+            draw(list(drawings_of(found, aside / FIGURES, places, shares)))
+
+    sections = dict(_ESTIMATE.sections)
+    if shares:
+        sections["Columns of time_to_limit.csv"] = SHARE_NOTES
+    return write_folder(folder, replace(_ESTIMATE, sections=sections), write)
+
+
+def write_folder(
+    folder: str | os.PathLike[str], leaflet: Leaflet, write: Callable[[Path], None]
+) -> list[Path]:
+    """Let ``write`` fill a hidden folder, add ``README.txt``, and move all of it in together.
+
+    Products of an earlier run of the same kind that have no successor go at the same time.
+
+    Returns
+    -------
+    list of pathlib.Path
+        The files, in the order written.
+
+    Raises
+    ------
+    ProductError
+        If the folder cannot be written, or holds products of another kind.
+    """
+    with moved_together(folder, earlier_products(Path(folder), leaflet)) as aside:
+        write(aside)
         names = [path.relative_to(aside) for path in written_files(aside)]
-        with disk_errors(aside / README):
-            (aside / README).write_text(_readme(names), encoding="utf-8")
-        names.append(Path(README))
+        with disk_errors(aside / leaflet.readme):
+            (aside / leaflet.readme).write_text(_readme(names, leaflet), encoding="utf-8")
+        names.append(Path(leaflet.readme))
     return [Path(folder) / name for name in names]
 
 
@@ -146,16 +216,29 @@ def written_files(folder: Path) -> list[Path]:
     return sorted(files, key=lambda path: (len(path.relative_to(folder).parts), path.name))
 
 
-def earlier_products(folder: Path) -> list[Path]:
-    """Products that the ``README.txt`` of an earlier estimate lists: all that is ours to remove.
+def earlier_products(folder: Path, leaflet: Leaflet) -> list[Path]:
+    """Products that the ``README.txt`` of an earlier run lists: all that is ours to remove.
 
     Names relative to ``folder``; none where the file is missing or not one of ours.
+
+    Raises
+    ------
+    ProductError
+        If they are products of another kind, whose description would be lost.
     """
     try:
-        lines = (folder / README).read_text(encoding="utf-8").splitlines()
+        lines = (folder / leaflet.readme).read_text(encoding="utf-8").splitlines()
     except (OSError, UnicodeDecodeError):
         return []
-    if lines[:1] != [_TITLE] or _LIST not in lines:
+    title = lines[0] if lines else ""
+    if title != leaflet.title and title.endswith(PROGRAM):
+        raise ProductError(
+            str(folder),
+            expected=f"a folder of its own for: {leaflet.title}",
+            found=f"a folder of: {title}",
+            remedy="name another folder",
+        )
+    if title != leaflet.title or _LIST not in lines:
         return []
     names = []
     for line in lines[lines.index(_LIST) + 1 :]:
@@ -163,7 +246,7 @@ def earlier_products(folder: Path) -> list[Path]:
             break
         name = Path(line.strip().partition(": ")[0])
         figure = name.parent == Path(FIGURES) and name.suffix == ".png"
-        if figure or name.as_posix() in _NOTES:
+        if figure or name.as_posix() in leaflet.notes:
             names.append(name)
     return names
 
@@ -216,14 +299,11 @@ def _keep(old: Path, copy: Path) -> None:
         shutil.copy2(old, copy)
 
 
-def _readme(names: Sequence[Path]) -> str:
-    lines = [_TITLE, "", CAUTION, "", _LIST]
-    lines += [
-        f"  {name.as_posix()}" + (f": {_NOTES[str(name)]}" if str(name) in _NOTES else "")
-        for name in names
-    ]
-    lines += ["", "Columns of horizons.csv"]
-    lines += [f"  {column}: {note}" for column, note in COLUMN_NOTES.items()]
-    lines += ["", "Statuses"]
-    lines += [f"  {status.name}: {meaning}" for status, meaning in STATUS_MEANING.items()]
+def _readme(names: Sequence[Path], leaflet: Leaflet) -> str:
+    lines = [leaflet.title, "", CAUTION, "", _LIST]
+    for name in names:
+        note = leaflet.notes.get(name.as_posix())
+        lines.append(f"  {name.as_posix()}" + (f": {note}" if note else ""))
+    for heading, entries in leaflet.sections.items():
+        lines += ["", heading, *(f"  {name}: {note}" for name, note in entries.items())]
     return "\n".join(lines) + "\n"

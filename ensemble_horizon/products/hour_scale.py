@@ -59,7 +59,7 @@ def hour_scale(values: np.ndarray, units: str) -> HourScale:
     """
     known = values[np.isfinite(values)]
     low, high = (np.percentile(known, (1, 99))) if known.size else (0.0, 1.0)
-    step = _step(float(low), float(high), hours=lead_units(units) == "h")
+    step = hour_step(float(low), float(high), hours=lead_units(units) == "h", most=_MOST_STEPS)
     first, last = np.floor(low / step + 1e-9), np.ceil(high / step - 1e-9)
     last = max(last, first + 2)
     bounds = tuple(float(number * step) for number in np.arange(first, last + 1))
@@ -104,7 +104,8 @@ def status_colours(status: Status, rows: np.ndarray, columns: np.ndarray) -> np.
     return np.asarray(np.where(hatch[..., None], ink, ground))
 
 
-def _step(low: float, high: float, *, hours: bool) -> float:
+def hour_step(low: float, high: float, *, hours: bool, most: int) -> float:
+    """Return the smallest step that covers ``low`` to ``high`` in ``most`` steps."""
     if hours:
         steps = [float(step) for step in _HOUR_STEPS]
         steps += [240.0 * 2**power for power in range(2, 12)]
@@ -112,7 +113,7 @@ def _step(low: float, high: float, *, hours: bool) -> float:
         scale = 10.0 ** np.floor(np.log10(max(high - low, abs(high), 1e-9)))
         steps = [scale * part for part in (0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5, 10)]
     for step in steps:
-        if np.ceil(high / step - 1e-9) - np.floor(low / step + 1e-9) <= _MOST_STEPS:
+        if np.ceil(high / step - 1e-9) - np.floor(low / step + 1e-9) <= most:
             return step
     return steps[-1]
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -34,6 +35,7 @@ class MapField:
     last_lead: float | None
     title: str
     subtitle: str
+    words: Mapping[Status, str] = field(default_factory=lambda: STATUS_WORDS)
 
 
 def draw_colour_bar(
@@ -78,7 +80,7 @@ def legend_entries(content: MapField, shares: dict[Status, float]) -> list[tuple
         if share <= 0:
             continue
         percent = "< 1 %" if share < 0.01 else f"{100 * share:.0f} %"
-        words = STATUS_WORDS.get(status, "limit within the run")
+        words = content.words.get(status, "limit within the run")
         if status == Status.beyond_run and content.last_lead is not None:
             words += f" (> {duration(content.last_lead, content.units)})"
         entries.append((status, f"{words}: {percent}"))

@@ -48,6 +48,21 @@ def lead_number(value: float, units: str) -> str:
     return f"{value:.0f}" if value >= 9.95 else f"{value:.1f}".removesuffix(".0")
 
 
+def signed(value: float, units: str) -> str:
+    """Return a difference of leads with its sign: hours below ten to tenths, others in full.
+
+    Examples
+    --------
+    >>> signed(7.24, "hours"), signed(-12.4, "hours"), signed(0.0, "hours"), signed(0.1234, "1")
+    ('+7.2', '−12', '0', '+0.123')
+    """
+    hours = lead_units(units) == "h"
+    size = abs(value)
+    words = number(size) if not hours else f"{size:.0f}" if size >= 9.95 else f"{size:.1f}"
+    words = words.removesuffix(".0") if hours else words
+    return words if float(words) == 0 else f"{'+' if value > 0 else '−'}{words}"
+
+
 def duration(value: float, units: str) -> str:
     """Return a lead or doubling time with its unit, or a dash where there is none.
 

@@ -19,15 +19,19 @@ from ensemble_horizon.settings.criteria import (
 )
 from ensemble_horizon.settings.mistakes import mistake, read_toml, refuse_mistakes
 from ensemble_horizon.settings.tables import (
+    AnalysesTable,
+    CalibrationTable,
     ClimatologyTable,
     EngineTable,
     GrowthTable,
+    ObservationsTable,
     ProductsTable,
     RegionTable,
     RunsTable,
     Settings,
     SiteTable,
     VariableTable,
+    VerificationTable,
 )
 from ensemble_horizon.spread import Region, Site
 
@@ -122,6 +126,7 @@ def _cross_checks(settings: Settings) -> list[str]:
                 (Region if kind == "regions" else Site)(name, **table.model_dump())
             except EnsembleHorizonError as error:
                 found.append(f"{kind}.{name}: expected {error.expected}, found {error.found}")
+    found += _strange_names(settings)
     for name, variable in settings.variables.items():
         labels: set[str] = set()
         for number, item in enumerate(variable.criteria):
@@ -141,6 +146,22 @@ def _cross_checks(settings: Settings) -> list[str]:
     return found
 
 
+def _strange_names(settings: Settings) -> list[str]:
+    """Analyses and observations of variables that the settings do not name."""
+    given = {"observations": list(settings.observations)}
+    if settings.analyses is not None:
+        given["analyses.names"] = list(settings.analyses.names)
+    if settings.climatology is not None:
+        given["climatology.mean_names"] = list(settings.climatology.mean_names)
+    known = ", ".join(settings.variables)
+    return [
+        f"{key}.{name}: no variable of that name; there are {known}"
+        for key, names in given.items()
+        for name in names
+        if name not in settings.variables
+    ]
+
+
 def _known_keys(loc: tuple[int | str, ...]) -> list[str]:
     tables: dict[str, type[Table]] = {
         "runs": RunsTable,
@@ -149,6 +170,10 @@ def _known_keys(loc: tuple[int | str, ...]) -> list[str]:
         "sites": SiteTable,
         "growth": GrowthTable,
         "climatology": ClimatologyTable,
+        "analyses": AnalysesTable,
+        "observations": ObservationsTable,
+        "verification": VerificationTable,
+        "calibration": CalibrationTable,
         "engine": EngineTable,
         "products": ProductsTable,
     }

@@ -121,10 +121,43 @@ class GrowthTable(Table):
 
 
 class ClimatologyTable(Table):
-    """``[climatology]``: a file of climatological standard deviations, and names in it."""
+    """``[climatology]``: standard deviations and means, the files and the names in them."""
 
     file: str
     names: dict[str, str] = Field(default_factory=dict)
+    mean_file: str | None = None
+    mean_names: dict[str, str] = Field(default_factory=dict)
+
+
+class AnalysesTable(Table):
+    """``[analyses]``: verifying analyses, found by valid time, and names in their files."""
+
+    files: str | tuple[str, ...]
+    names: dict[str, str | tuple[str, str]] = Field(default_factory=dict)
+
+
+class ObservationsTable(Table):
+    """``[observations.NAME]``: a CSV file of observations of one variable at the sites."""
+
+    file: str
+    units: str | None = None
+    time: str = "time"
+    site: str = "site"
+    value: str = "value"
+
+
+class VerificationTable(Table):
+    """``[verification]``: what skill must stay above, and how certain a calibration must be."""
+
+    skill: Annotated[float, Field(lt=1, allow_inf_nan=False)] = 0.0
+    correlation: Annotated[float, Field(gt=-1, lt=1)] = 0.6
+    factor_uncertainty: Fraction = 0.15
+
+
+class CalibrationTable(Table):
+    """``[calibration]``: a file that ``verify --calibration`` wrote, for ``estimate`` to apply."""
+
+    file: str
 
 
 class EngineTable(Table):
@@ -153,6 +186,10 @@ class Settings(Table):
     sites: dict[str, SiteTable] = Field(default_factory=dict)
     growth: GrowthTable = Field(default_factory=GrowthTable)
     climatology: ClimatologyTable | None = None
+    analyses: AnalysesTable | None = None
+    observations: dict[str, ObservationsTable] = Field(default_factory=dict)
+    verification: VerificationTable = Field(default_factory=VerificationTable)
+    calibration: CalibrationTable | None = None
     engine: EngineTable = Field(default_factory=EngineTable)
     products: ProductsTable
 
@@ -165,9 +202,13 @@ class Settings(Table):
 
     def run_files(self) -> str | list[str]:
         """The ``files`` of ``[runs]``, counted from the folder of the settings file."""
-        if isinstance(self.runs.files, str):
-            return str(self.path(self.runs.files))
-        return [str(self.path(name)) for name in self.runs.files]
+        return self.files(self.runs.files)
+
+    def files(self, names: str | tuple[str, ...]) -> str | list[str]:
+        """A template, or paths, counted from the folder of the settings file."""
+        if isinstance(names, str):
+            return str(self.path(names))
+        return [str(self.path(name)) for name in names]
 
     def places(self) -> tuple[tuple[Region, ...], tuple[Site, ...]]:
         """Regions and sites; the whole domain where neither is named."""

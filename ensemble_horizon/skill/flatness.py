@@ -26,8 +26,7 @@ from scipy import special
 from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.serial import REASON_ATTRIBUTES, mean_noise
 from ensemble_horizon.serial.starts import in_order
-from ensemble_horizon.skill.ranks import RANK
-from ensemble_horizon.vocabulary import START
+from ensemble_horizon.vocabulary import RANK, START
 
 
 class Flatness(NamedTuple):

@@ -12,9 +12,7 @@ from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.skill.alignment import aligned, over_members
 from ensemble_horizon.skill.averages import average, space_weights
 from ensemble_horizon.spread.places import Region
-from ensemble_horizon.vocabulary import LATITUDE, LONGITUDE, MEMBER
-
-RANK = "rank"
+from ensemble_horizon.vocabulary import LATITUDE, LONGITUDE, MEMBER, RANK
 
 
 def rank_counts(

@@ -1,4 +1,4 @@
-"""Versions: two versions of a model on the same starts, and whether one sees further."""
+"""Versions: two versions of a model on the same starts, and whether one holds longer."""
 
 from ensemble_horizon.versions.discovery import false_discovery
 from ensemble_horizon.versions.horizons import compare_horizons

@@ -1,0 +1,296 @@
+"""Verify: the runs of many starts held against analyses and observations, in one pass."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Iterator
+from contextlib import ExitStack
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from ensemble_horizon.errors import InputError
+from ensemble_horizon.night.cells import grid_cells
+from ensemble_horizon.night.engine import Engine, workers_for
+from ensemble_horizon.night.estimate import Progress, silent
+from ensemble_horizon.night.input import open_input
+from ensemble_horizon.night.mapping import map_plan
+from ensemble_horizon.night.reading import Block, plan_blocks, window_points
+from ensemble_horizon.night.scratch import Scratch, scratch_file
+from ensemble_horizon.night.variables import (
+    Places,
+    Variable,
+    resolve_places,
+    resolve_variable,
+)
+from ensemble_horizon.night.verifying_climate import (
+    climatological_mean,
+    only_where,
+    usable_deviation,
+)
+from ensemble_horizon.night.verifying_faults import block_faults, refuse_if_stopped
+from ensemble_horizon.night.verifying_input import (
+    Gap,
+    Observed,
+    open_analyses_of,
+    read_observed,
+    require_truth,
+)
+from ensemble_horizon.night.verifying_maps import (
+    MapSums,
+    kept_quantities,
+    map_falls,
+    mapped_quantities,
+    skill_interval,
+)
+from ensemble_horizon.night.verifying_reading import (
+    VerifiedVariable,
+    VerifyingContext,
+    verify_block,
+)
+from ensemble_horizon.night.verifying_results import (
+    Frame,
+    VerifiedResult,
+    maps_dataset,
+    places_dataset,
+)
+from ensemble_horizon.night.verifying_scores import SKILLS, limit_levels, place_scores
+from ensemble_horizon.runs import Catalogue, Fault
+from ensemble_horizon.serial.mean import LEAST_STARTS
+from ensemble_horizon.settings import Settings
+from ensemble_horizon.skill.reduction import ScoreReduction, ScoreSums, empty_scores
+from ensemble_horizon.spread.reduction import RegionWeights
+
+_CLIMATOLOGY = {"climatology_crps", "product", "forecast_squared", "anomaly_squared"}
+
+log = logging.getLogger(__name__)
+
+
+@dataclass
+class Verification:
+    """What verifying found.
+
+    Parameters
+    ----------
+    results : one per variable, in the order of the settings
+    catalogue : the runs used
+    analyses : paths of the analyses
+    gaps : valid times that nothing could be held against
+    faults : what was wrong with the runs
+    """
+
+    results: list[VerifiedResult]
+    catalogue: Catalogue
+    analyses: tuple[str, ...]
+    gaps: list[Gap] = field(default_factory=list)
+    faults: list[Fault] = field(default_factory=list)
+
+
+def verify(settings: Settings, progress: Progress = silent, *, cells: bool = False) -> Verification:
+    """Read runs and analyses once and score the runs.
+
+    Parameters
+    ----------
+    settings : Settings
+        With a table ``[analyses]`` or tables ``[observations.NAME]``.
+    progress : callable
+        Called with the name of a stage, what is done of it, and its total.
+    cells : bool
+        Whether sums over coarse cells of the grid are wanted, for a calibration of maps.
+
+    Raises
+    ------
+    SettingsError
+        if there is nothing to verify against, or a variable cannot be verified.
+    InputError
+        if runs, analyses or observations cannot be used, or do not fit each other.
+    """
+    require_truth(settings)
+    found = open_input(settings, lambda done, total: progress("headers", done, total))
+    catalogue = found.catalogue
+    places = resolve_places(settings, catalogue)
+    gaps: list[Gap] = []
+    variables = [resolve_variable(settings, catalogue, name, climatology=True)
+                 for name in settings.variables]  # fmt: skip
+    with_maps = map_plan(settings, catalogue).mode != "none" and settings.analyses is not None
+    blocks = grid_cells(catalogue) if cells and with_maps else ()
+    sources = tuple(
+        _source(settings, catalogue, item, places, gaps, blocks if with_maps else None)
+        for item in variables
+    )
+    _tell_few_starts(catalogue)
+    job = _Job(settings, catalogue, progress)
+    size = int(np.prod(catalogue.grid.shape, dtype=int))
+    kept = max(len(item.kept) for item in sources)
+    bytes_read = 4 * size * len(catalogue.members) * catalogue.leads.size
+    bytes_read *= catalogue.starts.size * len(sources)
+    with ExitStack() as stack:
+        scratch: Scratch | None = None
+        if kept:
+            wanted = (kept, catalogue.leads.size, catalogue.starts.size, size)
+            scratch = stack.enter_context(scratch_file(*wanted))
+        context = VerifyingContext(catalogue, sources, scratch)
+        workers = workers_for(settings.engine.workers, bytes_read)
+        engine = stack.enter_context(Engine(workers, context))
+        results = [
+            job.variable(engine, number, variable, sources[number], places)
+            for number, variable in enumerate(variables)
+        ]
+    opened = [item.analyses.catalogue for item in sources if item.analyses is not None]
+    paths = tuple(dict.fromkeys(path for item in opened for path in item.paths))
+    return Verification(results, catalogue, paths, gaps, [*found.faults, *job.faults])
+
+
+def _source(
+    settings: Settings,
+    catalogue: Catalogue,
+    variable: Variable,
+    places: Places,
+    gaps: list[Gap],
+    cells: tuple[RegionWeights, ...] | None,
+) -> VerifiedVariable:
+    """A variable with all that it is held against; without cells, not even none, no maps."""
+    analyses = open_analyses_of(settings, catalogue, variable, gaps)
+    observed = read_observed(settings, catalogue, variable, places, gaps)
+    if analyses is None and observed is None:
+        raise InputError(
+            f"variable {variable.name}",
+            expected="analyses or observations of it",
+            found="neither in the settings",
+            remedy=f"add [analyses] or [observations.{variable.name}]",
+        )
+    mean = climatological_mean(settings, catalogue, variable)
+    deviation = usable_deviation(variable, mean)
+    mean = only_where(mean, deviation)
+    control = settings.runs.control
+    position = catalogue.members.index(control) if control in catalogue.members else None
+    absent: set[str] = set() if mean is not None else set(_CLIMATOLOGY)
+    absent |= set() if deviation is not None else {"climatology_crps"}
+    absent |= {"persistence_crps"} if deviation is not None else set()
+    fields = mapped_quantities(absent) if cells is not None and analyses is not None else ()
+    size = int(np.prod(catalogue.grid.shape, dtype=int))
+    sites = [
+        RegionWeights(name, np.array([index]), np.ones(1))
+        for name, index in zip(places.sites, places.site_index, strict=True)
+    ]
+    every = (*places.regions, *sites, *(cells or ()))
+    reduction = ScoreReduction(size, every, position, mean, deviation, fields)
+    return VerifiedVariable(
+        variable.name, variable.parts, variable.plausible, reduction, analyses, observed,
+        _at_sites(observed, reduction), kept_quantities(fields),
+    )  # fmt: skip
+
+
+def _at_sites(observed: Observed | None, whole: ScoreReduction) -> ScoreReduction:
+    """The reduction of the observed sites: a grid of their own, one place a site."""
+    if observed is None:
+        return ScoreReduction(0)
+    number = observed.index.size
+    places = tuple(
+        RegionWeights(name, np.array([k]), np.ones(1)) for k, name in enumerate(observed.sites)
+    )
+    mean, deviation = (
+        None if item is None else item[observed.index] for item in (whole.mean, whole.deviation)
+    )
+    return ScoreReduction(number, places, whole.control, mean, deviation)
+
+
+def _tell_few_starts(catalogue: Catalogue) -> None:
+    if catalogue.starts.size < LEAST_STARTS:
+        log.warning(
+            "runs: %d %s: scores are given without intervals, which need %d starts",
+            catalogue.starts.size, "start" if catalogue.starts.size == 1 else "starts",
+            LEAST_STARTS,
+        )  # fmt: skip
+
+
+class _Job:
+    """One verification under way: what every step needs."""
+
+    def __init__(self, settings: Settings, catalogue: Catalogue, progress: Progress) -> None:
+        self.settings = settings
+        self.catalogue = catalogue
+        self.progress = progress
+        self.faults: list[Fault] = []
+        self._done = 0
+        self._total = len(settings.variables) * catalogue.starts.size * catalogue.leads.size
+
+    def variable(
+        self,
+        engine: Engine,
+        number: int,
+        variable: Variable,
+        source: VerifiedVariable,
+        places: Places,
+    ) -> VerifiedResult:
+        """All starts of one variable, scored."""
+        maps, against = self._read(engine, number, variable, source)
+        settings = self.settings
+        levels = limit_levels(settings.verification.skill, settings.verification.correlation)
+        confidence, lead = settings.growth.confidence, self.catalogue.leads
+        frame = Frame(
+            variable.name, variable.long_name, variable.units, lead, self.catalogue.lead_units,
+            confidence, self.catalogue.starts.size, len(self.catalogue.members), levels,
+        )  # fmt: skip
+        kinds = {"analysis": places.names}
+        if source.observed is not None:
+            kinds["observation"] = [(name, "site") for name in source.observed.sites]
+        scored = {
+            what: place_scores(lead, sums, variable.factor, levels, confidence, len(kinds[what]))
+            for what, sums in against.items()
+        }
+        data = places_dataset(frame, kinds, scored)
+        if not maps.total:
+            return VerifiedResult(data, None, frame, kinds, against)
+        scores = maps.scores(variable.factor)
+        interval: dict[str, tuple[np.ndarray, np.ndarray]] = {}
+        if source.kept:
+            name = next(name for name in SKILLS if name in scores)
+            _, *ends = skill_interval(engine, lead.size, maps.size, confidence)
+            interval[name] = (ends[0], ends[1])
+        falls = map_falls(lead, scores, levels, interval)
+        return VerifiedResult(
+            data, maps_dataset(frame, self.catalogue.grid, scores, falls, interval), frame, kinds,
+            against,
+        )  # fmt: skip
+
+    def _read(
+        self, engine: Engine, number: int, variable: Variable, source: VerifiedVariable
+    ) -> tuple[MapSums, dict[str, list[ScoreSums]]]:
+        catalogue = self.catalogue
+        members, leads, starts = (
+            len(catalogue.members), catalogue.leads.size, catalogue.starts.size,
+        )  # fmt: skip
+        maps = MapSums(leads, source.reduction.size)
+        plain = ScoreReduction(source.reduction.size, source.reduction.places)
+        found = {}
+        for what, there, reduction in (
+            ("analysis", source.analyses, plain),
+            ("observation", source.observed, source.at_sites),
+        ):
+            if there is not None:
+                found[what] = [
+                    empty_scores(reduction, members, leads, reduction.size) for _ in range(starts)
+                ]
+        blocks = list(self._blocks(number, source))
+        for position, part in engine.run(verify_block, blocks):
+            block = blocks[position]
+            span = slice(*block.leads)
+            points = window_points(catalogue.grid.shape, block.window)
+            if part.sums is not None:
+                maps.add(part.sums, span, points)
+                part.sums.fields.clear()
+                found["analysis"][block.start].add(part.sums, span, points)
+            if part.at_sites is not None:
+                found["observation"][block.start].add(part.at_sites, span, None)
+            faults = block_faults(part, block, catalogue, variable)
+            refuse_if_stopped(faults, self.settings)
+            self.faults += faults
+            self._done += block.leads[1] - block.leads[0]
+            self.progress("verifying", self._done, self._total)
+        return maps, found
+
+    def _blocks(self, number: int, source: VerifiedVariable) -> Iterator[Block]:
+        budget = self.settings.engine.block_memory_mib * 2**20 // 3
+        for start in range(self.catalogue.starts.size):
+            yield from plan_blocks(self.catalogue, source.parts, number, start, budget)

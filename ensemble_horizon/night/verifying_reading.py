@@ -1,0 +1,184 @@
+"""One block of runs and analyses read and reduced to scores, in one task.
+
+A task reads all members of one start over a block of leads, and the analyses at its valid times,
+and gives back sums. Fields go to a file (`Scratch`) or come back for running means; nothing of the
+size of the ensemble leaves the process that read it.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from ensemble_horizon.night.engine import shared
+from ensemble_horizon.night.reading import Block, Damage, read_part, window_points
+from ensemble_horizon.night.scratch import Scratch
+from ensemble_horizon.night.verifying_input import Analyses, Observed
+from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.skill.reduction import (
+    ScoreReduction,
+    ScoreSums,
+    empty_scores,
+    reduce_scores,
+)
+
+
+@dataclass(frozen=True)
+class VerifiedVariable:
+    """A variable of the settings, and what it is held against.
+
+    Parameters
+    ----------
+    name : str
+    parts : tuple of str
+        One source name, or the two components of a vector whose magnitude is meant.
+    plausible : (lowest, highest) in the units of the files, or None
+    reduction : ScoreReduction
+        Of the grid, against analyses.
+    analyses : Analyses, or None
+    observed : Observed, or None
+    at_sites : ScoreReduction
+        Of the observed sites, which are a grid of their own.
+    kept : tuple of str
+        Fields that go to the scratch file, start by start.
+    """
+
+    name: str
+    parts: tuple[str, ...]
+    plausible: tuple[float, float] | None
+    reduction: ScoreReduction
+    analyses: Analyses | None
+    observed: Observed | None
+    at_sites: ScoreReduction
+    kept: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
+class VerifyingContext:
+    """What every task needs: sent to each worker once."""
+
+    catalogue: Catalogue
+    variables: tuple[VerifiedVariable, ...]
+    scratch: Scratch | None = None
+
+
+@dataclass
+class Verified:
+    """What a block gives: sums against analyses and against observations, and what was wrong.
+
+    damage : fields that could not be read; implausible : members left out, with their extremes
+    """
+
+    sums: ScoreSums | None
+    at_sites: ScoreSums | None
+    damage: Damage = field(default_factory=dict)
+    implausible: dict[int, tuple[float, float]] = field(default_factory=dict)
+
+
+def verify_block(block: Block) -> Verified:
+    """Read one block of all members and its analyses, and reduce them: runs in a worker."""
+    context: VerifyingContext = shared()
+    catalogue, variable = context.catalogue, context.variables[block.variable]
+    damage: Damage = {}
+    values = magnitude([read_part(catalogue, name, block, damage) for name in variable.parts])
+    values = values.reshape(*values.shape[:2], -1)
+    found = Verified(None, None, damage, _without_implausible(values, variable))
+    points = window_points(catalogue.grid.shape, block.window)
+    if variable.analyses is not None:
+        truth = _analyses(variable.analyses, block, values)
+        still = _persistence(variable.analyses, block, values.dtype)
+        found.sums = reduce_scores(values, truth, variable.reduction, points, still)
+        _put_aside(found.sums, context.scratch, variable, block, points)
+    if variable.observed is not None:
+        found.at_sites = _at_sites(values, variable, variable.observed, block, points)
+    return found
+
+
+def magnitude(parts: list[np.ndarray]) -> np.ndarray:
+    """The only part, or the length of a vector."""
+    return parts[0] if len(parts) == 1 else np.hypot(parts[0], parts[1], out=parts[0])
+
+
+def _without_implausible(
+    values: np.ndarray, variable: VerifiedVariable
+) -> dict[int, tuple[float, float]]:
+    """Take members with values outside the plausible range out of the block."""
+    if variable.plausible is None:
+        return {}
+    lowest, highest = variable.plausible
+    found = {}
+    for member, rows in enumerate(values):
+        low, high = float(np.fmin.reduce(rows, axis=None)), float(np.fmax.reduce(rows, axis=None))
+        if low < lowest or high > highest:
+            found[member] = (low, high)
+            rows[...] = np.nan
+    return found
+
+
+def _analyses(analyses: Analyses, block: Block, values: np.ndarray) -> np.ndarray:
+    truth = np.full(values.shape[1:], np.nan, dtype=values.dtype)
+    leads = slice(*block.leads)
+    for row, position in enumerate(analyses.position[block.start, leads]):
+        if position >= 0:
+            truth[row] = _one_analysis(analyses, int(position), block)
+    return truth
+
+
+def _persistence(analyses: Analyses, block: Block, dtype: np.dtype) -> np.ndarray | None:
+    position = int(analyses.at_start[block.start])
+    return None if position < 0 else _one_analysis(analyses, position, block).astype(dtype)
+
+
+def _one_analysis(analyses: Analyses, position: int, block: Block) -> np.ndarray:
+    """One analysis over the window of a block, flattened, in the units of the runs."""
+    window = tuple(slice(*bounds) for bounds in block.window)
+    parts = []
+    for name, (scale, offset) in zip(analyses.parts, analyses.scales, strict=True):
+        part = analyses.catalogue.read(name, position, window=window)[0, 0]
+        parts.append(part if (scale, offset) == (1.0, 0.0) else part * scale + offset)
+    return magnitude(parts).ravel()
+
+
+def _at_sites(
+    values: np.ndarray,
+    variable: VerifiedVariable,
+    observed: Observed,
+    block: Block,
+    points: np.ndarray | None,
+) -> ScoreSums | None:
+    """Scores against observations at the sites that lie in the window."""
+    where, which = observed.index, np.arange(observed.index.size)
+    if points is not None:
+        place = np.minimum(np.searchsorted(points, observed.index), points.size - 1)
+        which = np.flatnonzero(points[place] == observed.index)
+        where = place[which]
+    if not which.size:
+        return None
+    leads = slice(*block.leads)
+    found = empty_scores(variable.at_sites, values.shape[0], values.shape[1], observed.index.size)
+    # One by one: what one site lacks, persistence say, must not take the others out.
+    for column, site in zip(where, which, strict=True):
+        still = observed.at_start[block.start, [site]]
+        part = reduce_scores(
+            values[:, :, [column]].astype(float),
+            observed.values[block.start, leads][:, [site]],
+            variable.at_sites,
+            np.array([site]),
+            still if np.isfinite(still).all() else None,
+        )
+        found.add(part, slice(None), None)
+    return found
+
+
+def _put_aside(
+    sums: ScoreSums,
+    scratch: Scratch | None,
+    variable: VerifiedVariable,
+    block: Block,
+    points: np.ndarray | None,
+) -> None:
+    if scratch is None:
+        return
+    for number, name in enumerate(variable.kept):
+        scratch.write(number, block.start, block.leads[0], sums.fields[name], points)
