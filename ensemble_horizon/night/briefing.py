@@ -11,7 +11,7 @@ from ensemble_horizon.night.engine import Engine, usable_cores
 from ensemble_horizon.night.estimate import Estimate, Progress, estimate, silent
 from ensemble_horizon.night.verifying import Verification
 from ensemble_horizon.night.waiting import shares_of_estimate
-from ensemble_horizon.products import Drawing, PlaceMark, load_plotting, write_products
+from ensemble_horizon.products import Drawing, Ground, PlaceMark, load_plotting, write_products
 from ensemble_horizon.settings import Settings
 
 _CALIBRATED = (
@@ -41,7 +41,7 @@ def estimate_and_write(
         found.results,
         about,
         figures=settings.products.figures,
-        places=place_marks(settings),
+        ground=map_ground(settings),
         shares=shares_of_estimate(found.results),
         draw=drawn_by(settings.engine.workers, progress),
     )
@@ -74,10 +74,11 @@ def provenance(settings: Settings, found: Estimate | Verification) -> dict[str, 
     }
 
 
-def place_marks(settings: Settings) -> list[PlaceMark]:
-    """Regions and sites as they stand on maps."""
+def map_ground(settings: Settings) -> Ground:
+    """What the maps stand on: coasts, regions and sites."""
     regions, sites = settings.places()
     if not settings.regions:
         regions = ()  # the whole domain needs no outline
     boxes = [PlaceMark.box(r.name, r.west, r.east, r.south, r.north) for r in regions]
-    return boxes + [PlaceMark.site(s.name, s.longitude, s.latitude) for s in sites]
+    marks = [PlaceMark.site(s.name, s.longitude, s.latitude) for s in sites]
+    return Ground((*boxes, *marks), settings.products.coastline)

@@ -11,7 +11,7 @@ import numpy as np
 import xarray as xr
 
 from ensemble_horizon.errors import ProductError
-from ensemble_horizon.night.briefing import drawn_by, place_marks
+from ensemble_horizon.night.briefing import drawn_by, map_ground
 from ensemble_horizon.night.common import CommonGround, common_ground
 from ensemble_horizon.night.estimate import Progress, estimate_input, silent
 from ensemble_horizon.night.named import Notes
@@ -131,7 +131,7 @@ def compare_and_write(
         },
         notes={"Not compared": found.notes.left_out, "Cautions": found.notes.cautions},
         figures=all(item.products.figures for item in settings),
-        places=place_marks(found.settings),
+        ground=map_ground(found.settings),
         draw=drawn_by(max(workers, default=None), progress),
     )
     return found, paths

@@ -5,7 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-from ensemble_horizon.night.briefing import drawn_by, place_marks, provenance
+from ensemble_horizon.night.briefing import drawn_by, map_ground, provenance
 from ensemble_horizon.night.calibrating import calibrations
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.night.verifying import Verification, verify
@@ -49,7 +49,7 @@ def verify_and_write(
         about,
         notes=notes,
         figures=settings.products.figures,
-        places=place_marks(settings),
+        ground=map_ground(settings),
         draw=drawn_by(settings.engine.workers, progress),
     )
     if calibration is not None and factors is not None:

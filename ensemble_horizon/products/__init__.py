@@ -54,13 +54,14 @@ from ensemble_horizon.products.gains import gains, starts_words, summary_words
 from ensemble_horizon.products.gains_table import gains_table
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
 from ensemble_horizon.products.map_file import MapFile, map_file, write_map_file
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import Ground, PlaceMark
 from ensemble_horizon.products.tables import limits_table, write_horizon_table
 from ensemble_horizon.products.versions_folder import write_versions
 from ensemble_horizon.products.writing import written_whole
 
 __all__ = [
     "Drawing",
+    "Ground",
     "Limit",
     "MapFile",
     "PlaceMark",

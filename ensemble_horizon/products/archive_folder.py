@@ -144,7 +144,9 @@ def estimate_settings(
         lines += [f"criteria = [{', '.join(chosen)}]"]
     if criteria.get("climatology_fraction") and set(variables) != {_POSITION}:
         lines += ["", "[climatology]", f"file = {json.dumps(CLIMATOLOGY)}"]
+    lines += ["", "[analyses]", f"files = {json.dumps(ANALYSES)}"]
     lines += ["", "[products]", f"folder = {json.dumps(f'products_{version}')}"]
+    lines += ["coastline = false  # the place is invented"]
     return "\n".join(lines) + "\n"
 
 

@@ -18,7 +18,7 @@ import xarray as xr
 
 from ensemble_horizon.products.limits import VariableResult, start_labels
 from ensemble_horizon.products.netcdf import valid_name
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import Ground
 from ensemble_horizon.products.wording import iso_start
 from ensemble_horizon.vocabulary import CRITERION, PLACE, START
 
@@ -58,7 +58,7 @@ class MapDrawing:
 
     maps: xr.Dataset
     paths: tuple[Path, ...]
-    places: tuple[PlaceMark, ...]
+    ground: Ground
     members: int | None
     last_lead: float
 
@@ -74,7 +74,7 @@ class MapDrawing:
                 one,
                 path,
                 criterion=column,
-                places=self.places,
+                ground=self.ground,
                 members=self.members,
                 last_lead=self.last_lead,
                 view=view,
@@ -106,7 +106,7 @@ def draw_in_turn(drawings: Sequence[Drawing]) -> None:
 def drawings_of(
     results: Sequence[VariableResult],
     folder: Path,
-    places: Sequence[PlaceMark],
+    ground: Ground,
     shares: Sequence[xr.Dataset] = (),
 ) -> Iterator[Drawing]:
     """Yield all figures: the maps of each variable and start first, as they take longest."""
@@ -116,7 +116,7 @@ def drawings_of(
         variable = valid_name(str(result.curves.attrs.get("variable", "variable")), taken)
         curves += _curve_drawings(result.curves, variable, folder)
         if result.maps is not None:
-            yield from _map_drawings(result.maps, result.curves, variable, folder, places)
+            yield from _map_drawings(result.maps, result.curves, variable, folder, ground)
     yield from curves
     taken = set()
     for part in shares:
@@ -137,7 +137,7 @@ def _map_drawings(
     curves: xr.Dataset,
     variable: str,
     folder: Path,
-    places: Sequence[PlaceMark],
+    ground: Ground,
 ) -> Iterator[Drawing]:
     names: set[str] = set()
     criteria = [valid_name(str(label), names) for label in maps[CRITERION].values]
@@ -147,7 +147,7 @@ def _map_drawings(
         yield MapDrawing(
             maps=maps[drawn].isel({START: [position]}),
             paths=tuple(folder / f"{variable}_map_{name}_{stamp}.png" for name in criteria),
-            places=tuple(places),
+            ground=ground,
             members=maps.attrs.get("members", members),
             last_lead=float(curves["lead"].values[-1]),
         )

@@ -18,7 +18,7 @@ from ensemble_horizon.products.curve_file import write_horizon_file
 from ensemble_horizon.products.drawing import Drawing, draw_in_turn, drawings_of
 from ensemble_horizon.products.limits import VariableResult
 from ensemble_horizon.products.map_file import write_map_file
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import BARE, Ground
 from ensemble_horizon.products.share_table import COLUMN_NOTES as SHARE_NOTES
 from ensemble_horizon.products.share_table import write_share_table
 from ensemble_horizon.products.tables import COLUMN_NOTES, write_horizon_table
@@ -75,7 +75,7 @@ def write_products(
     provenance: Mapping[str, Any],
     *,
     figures: bool = True,
-    places: Sequence[PlaceMark] = (),
+    ground: Ground = BARE,
     shares: Sequence[xr.Dataset] = (),
     draw: Callable[[Sequence[Drawing]], None] = draw_in_turn,
 ) -> list[Path]:
@@ -97,7 +97,7 @@ def write_products(
         See `netcdf.global_attributes`.
     figures : bool
         Whether to draw.
-    places : sequence of PlaceMark
+    ground : Ground
         Regions and sites to show on the maps.
     shares : sequence of Dataset
         Time to the limit of each variable, where there are several starts: ``time_to_limit.csv``
@@ -135,7 +135,7 @@ def write_products(
         if shares:
             write_share_table(aside / "time_to_limit.csv", shares)
         if figures:
-            draw(list(drawings_of(found, aside / FIGURES, places, shares)))
+            draw(list(drawings_of(found, aside / FIGURES, ground, shares)))
 
     sections = dict(_ESTIMATE.sections)
     if shares:

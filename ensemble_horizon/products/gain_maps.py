@@ -15,8 +15,8 @@ from scipy import ndimage
 from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.products.gains import starts_words
 from ensemble_horizon.products.hour_scale import STATUS_COLOURS, hour_step
-from ensemble_horizon.products.map_ground import draw_graticule, draw_places, draw_shore
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.map_ground import draw_graticule, draw_ground
+from ensemble_horizon.products.places import BARE, Ground
 from ensemble_horizon.products.sheet import INK, SOFT_INK, Sheet, line_height, wrapped
 from ensemble_horizon.products.view import MapView, map_view
 from ensemble_horizon.products.wording import duration, lead_units, signed, with_units
@@ -70,7 +70,7 @@ def draw_gain_map(
     path: str | os.PathLike[str],
     *,
     criterion: int = 0,
-    places: Sequence[PlaceMark] = (),
+    ground: Ground = BARE,
     view: MapView | None = None,
 ) -> Path:
     """Draw the hours gained at every grid point for one criterion as PNG.
@@ -83,7 +83,7 @@ def draw_gain_map(
         The picture to write.
     criterion : int
         Position to draw.
-    places : sequence of PlaceMark
+    ground : Ground
         Outlines of regions and marks of sites.
     view : MapView, optional
         View of the same grid from an earlier picture, which saves finding it again.
@@ -127,8 +127,7 @@ def draw_gain_map(
         interpolation="nearest",
         zorder=0,
     )
-    draw_shore(axes, view, width)
-    draw_places(axes, view, places, width)
+    draw_ground(axes, view, ground, width)
     draw_graticule(axes, view, (width, height))
     _bars(sheet, scale, (left + width + 22, top), height, units)
     for position, (picture, text) in enumerate(entries):

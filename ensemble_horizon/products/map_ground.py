@@ -10,16 +10,20 @@ from matplotlib.collections import LineCollection
 from matplotlib.patheffects import withStroke
 
 from ensemble_horizon.products.coast import coastlines
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import Ground, PlaceMark
 from ensemble_horizon.products.view import MapView
 
 _PLACE_INK = "#8a2517"
 
 
-def draw_shore(axes: Axes, view: MapView, width: int) -> None:
-    """Draw the coastlines."""
-    if not view.geographic:
-        return
+def draw_ground(axes: Axes, view: MapView, ground: Ground, width: int) -> list[tuple[float, float]]:
+    """Draw coasts, outlines and sites; return where the names of the places stand."""
+    if ground.coastline and view.geographic:
+        _draw_shore(axes, view, width)
+    return _draw_places(axes, view, ground.marks, width)
+
+
+def _draw_shore(axes: Axes, view: MapView, width: int) -> None:
     wide = view.east - view.west
     shore = coastlines(view.west, view.east, view.south, view.north, smallest=2 * wide / width)
     line = 0.45 if wide > 120 else 0.65
@@ -30,7 +34,7 @@ def draw_shore(axes: Axes, view: MapView, width: int) -> None:
         )
 
 
-def draw_places(
+def _draw_places(
     axes: Axes, view: MapView, places: Sequence[PlaceMark], width: int
 ) -> list[tuple[float, float]]:
     """Draw outlines and sites with their names, inside the map; return where the names stand."""

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
 from pathlib import Path
 
 import numpy as np
@@ -16,7 +15,7 @@ from ensemble_horizon.checks import require_dimension
 from ensemble_horizon.products.hour_scale import HourScale, hour_scale, status_colours
 from ensemble_horizon.products.isolines import contour_lines, label_places
 from ensemble_horizon.products.limits import lead_axis
-from ensemble_horizon.products.map_ground import draw_graticule, draw_places, draw_shore
+from ensemble_horizon.products.map_ground import draw_graticule, draw_ground
 from ensemble_horizon.products.map_legend import (
     STATUS_WORDS,
     MapField,
@@ -27,7 +26,7 @@ from ensemble_horizon.products.map_legend import (
     map_notes,
     status_shares,
 )
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import BARE, Ground
 from ensemble_horizon.products.sheet import INK, SOFT_INK, Sheet, line_height, wrapped
 from ensemble_horizon.products.view import MapView, map_view
 from ensemble_horizon.products.wording import (
@@ -50,7 +49,7 @@ def draw_horizon_map(
     *,
     start: int = 0,
     criterion: int = 0,
-    places: Sequence[PlaceMark] = (),
+    ground: Ground = BARE,
     members: int | None = None,
     last_lead: float | None = None,
     view: MapView | None = None,
@@ -65,7 +64,7 @@ def draw_horizon_map(
         The picture to write.
     start, criterion : int
         Positions to draw.
-    places : sequence of PlaceMark
+    ground : Ground
         Outlines of regions and marks of sites.
     members : int, optional
         Number of members, for the title; ``maps.attrs["members"]`` otherwise.
@@ -107,8 +106,7 @@ def draw_horizon_map(
     values = np.where(content.status == Status.reached, content.horizon, np.nan)
     scale = hour_scale(values, content.units)
     _paint(axes, view, values, content.status, scale, (width, height))
-    draw_shore(axes, view, width)
-    named = draw_places(axes, view, places, width)
+    named = draw_ground(axes, view, ground, width)
     _contours(axes, view, values, scale, (width, height), content.units, named)
     draw_graticule(axes, view, (width, height))
     if np.isfinite(values).any():

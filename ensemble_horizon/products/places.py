@@ -1,4 +1,4 @@
-"""Outlines of regions and marks of sites on a map."""
+"""What a map stands on: outlines of regions, marks of sites, and whether there is a coast."""
 
 from __future__ import annotations
 
@@ -47,3 +47,22 @@ class PlaceMark:
         last = int(np.floor((east - x.min()) / 360.0))
         for turn in range(first, last + 1):
             yield x + 360.0 * turn, y
+
+
+@dataclass(frozen=True)
+class Ground:
+    """What a map stands on.
+
+    Attributes
+    ----------
+    marks : tuple of PlaceMark
+        Regions and sites to show.
+    coastline : bool
+        Whether the coasts of the Earth are drawn; not under a place that is invented.
+    """
+
+    marks: tuple[PlaceMark, ...] = ()
+    coastline: bool = True
+
+
+BARE = Ground()

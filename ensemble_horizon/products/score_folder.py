@@ -14,7 +14,7 @@ import xarray as xr
 from ensemble_horizon.products.drawing import Drawing, draw_in_turn
 from ensemble_horizon.products.folder import FIGURES, PROGRAM, Leaflet, write_folder
 from ensemble_horizon.products.netcdf import valid_name
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import BARE, Ground
 from ensemble_horizon.products.score_file import write_score_file, write_score_maps
 from ensemble_horizon.products.score_table import (
     LIMIT_COLUMNS,
@@ -45,7 +45,7 @@ def write_scores(
     *,
     notes: Sequence[str] = (),
     figures: bool = True,
-    places: Sequence[PlaceMark] = (),
+    ground: Ground = BARE,
     draw: Callable[[Sequence[Drawing]], None] = draw_in_turn,
 ) -> list[Path]:
     """Write all products of verifying into ``folder``, all together or not at all.
@@ -64,7 +64,7 @@ def write_scores(
         See `netcdf.global_attributes`.
     notes : sequence of str
         What was left out.
-    figures, places, draw
+    figures, ground, draw
         As in `write_products`.
 
     Raises
@@ -91,7 +91,7 @@ def write_scores(
         if maps:
             write_score_maps(aside / "score_maps.nc", maps, provenance)
         if figures:
-            draw(list(_drawings(results, aside / FIGURES, places)))
+            draw(list(_drawings(results, aside / FIGURES, ground)))
 
     return write_folder(folder, leaflet, write)
 
@@ -127,7 +127,7 @@ class SkillMapDrawing:
 
     maps: xr.Dataset
     paths: tuple[Path, ...]
-    places: tuple[PlaceMark, ...]
+    ground: Ground
 
     def draw(self) -> None:
         """Draw and write the maps."""
@@ -136,12 +136,10 @@ class SkillMapDrawing:
 
         view = map_view(self.maps["horizon"].isel({START: 0, CRITERION: 0}))
         for column, path in enumerate(self.paths):
-            draw_horizon_map(self.maps, path, criterion=column, places=self.places, view=view)
+            draw_horizon_map(self.maps, path, criterion=column, ground=self.ground, view=view)
 
 
-def _drawings(
-    results: Sequence[ScoredVariable], folder: Path, places: Sequence[PlaceMark]
-) -> Iterator[Drawing]:
+def _drawings(results: Sequence[ScoredVariable], folder: Path, ground: Ground) -> Iterator[Drawing]:
     """Yield all figures, the maps first, as they take longest."""
     others: list[Drawing] = []
     taken: set[str] = set()
@@ -153,7 +151,7 @@ def _drawings(
         if result.maps is not None and result.maps.sizes[LIMIT]:
             names = [str(name) for name in result.maps[LIMIT].values]
             paths = tuple(folder / f"{variable}_limit_{name}.png" for name in names)
-            yield SkillMapDrawing(_as_horizons(result.maps), paths, tuple(places))
+            yield SkillMapDrawing(_as_horizons(result.maps), paths, ground)
     yield from others
 
 

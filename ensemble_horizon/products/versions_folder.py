@@ -16,7 +16,7 @@ from ensemble_horizon.products.gains import VersionsResult, starts_words
 from ensemble_horizon.products.gains_file import write_gains_file
 from ensemble_horizon.products.gains_table import COLUMN_NOTES, write_gains_table
 from ensemble_horizon.products.netcdf import valid_name
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import BARE, Ground
 from ensemble_horizon.vocabulary import CRITERION
 
 _NOTES = {
@@ -32,7 +32,7 @@ def write_versions(
     *,
     notes: Mapping[str, Sequence[str]],
     figures: bool = True,
-    places: Sequence[PlaceMark] = (),
+    ground: Ground = BARE,
     draw: Callable[[Sequence[Drawing]], None] = draw_in_turn,
 ) -> list[Path]:
     """Write all products of a comparison into ``folder``, all together or not at all.
@@ -51,7 +51,7 @@ def write_versions(
         See `netcdf.global_attributes`.
     notes : mapping of heading to lines
         What is not compared, and cautions.
-    figures, places, draw
+    figures, ground, draw
         As in `write_products`.
 
     Returns
@@ -83,7 +83,7 @@ def write_versions(
         write_gains_table(aside / "versions.csv", [item.places for item in results])
         write_gains_file(aside / "versions.nc", results, provenance, notes)
         if figures:
-            draw(list(_drawings(results, aside / FIGURES, places)))
+            draw(list(_drawings(results, aside / FIGURES, ground)))
 
     return write_folder(folder, leaflet, write)
 
@@ -108,7 +108,7 @@ class GainMapDrawing:
 
     maps: xr.Dataset
     paths: tuple[Path, ...]
-    places: tuple[PlaceMark, ...]
+    ground: Ground
 
     def draw(self) -> None:
         """Draw and write the maps."""
@@ -117,12 +117,10 @@ class GainMapDrawing:
 
         view = map_view(self.maps["gained"].isel({CRITERION: 0}))
         for number, path in enumerate(self.paths):
-            draw_gain_map(self.maps, path, criterion=number, places=self.places, view=view)
+            draw_gain_map(self.maps, path, criterion=number, ground=self.ground, view=view)
 
 
-def _drawings(
-    results: Sequence[VersionsResult], folder: Path, places: Sequence[PlaceMark]
-) -> Iterator[Drawing]:
+def _drawings(results: Sequence[VersionsResult], folder: Path, ground: Ground) -> Iterator[Drawing]:
     """Yield all figures, the maps first, as they take longest."""
     others: list[Drawing] = [
         GainsDrawing([item.places for item in results], folder / "hours_gained.png")
@@ -136,7 +134,7 @@ def _drawings(
         others.append(SharesDrawing(result.shares, labels, starts_words(result.places), path))
         if result.maps is not None:
             yield GainMapDrawing(
-                result.maps, tuple(_map_paths(result.maps, folder, variable)), tuple(places)
+                result.maps, tuple(_map_paths(result.maps, folder, variable)), ground
             )
     yield from others
 

@@ -173,6 +173,7 @@ class ProductsTable(Table):
     folder: str
     maps: Literal["each", "pooled", "none"] | None = None
     map_intervals: bool = True
+    coastline: bool = True
     figures: bool = True
 
 

@@ -14,7 +14,7 @@ from ensemble_horizon.products.hour_scale import hour_scale, ramp, status_colour
 from ensemble_horizon.products.isolines import contour_lines, label_places
 from ensemble_horizon.products.map_legend import legend_entries, status_shares
 from ensemble_horizon.products.maps import _field, draw_horizon_map
-from ensemble_horizon.products.places import PlaceMark
+from ensemble_horizon.products.places import Ground, PlaceMark
 from ensemble_horizon.products.view import map_view
 from ensemble_horizon.vocabulary import Status
 
@@ -127,7 +127,7 @@ def test_a_picture_for_every_grid(tmp_path, grid):
         PlaceMark.box("Across", 170, -170, -20, -5),
         PlaceMark.site("Cost $5$ _light_", 178.0, 60.0),
     ]
-    path = draw_horizon_map(make_maps(grid), tmp_path / "map.png", places=marks)
+    path = draw_horizon_map(make_maps(grid), tmp_path / "map.png", ground=Ground(tuple(marks)))
     picture = image.imread(path)
     height, width = picture.shape[:2]
     assert 500 < width < 1300 and 300 < height < 1000
@@ -182,3 +182,17 @@ def test_outlines_are_repeated_on_the_turn_of_the_window():
     west = [x.min() for x, _ in box.shifted(-180, 180)]
     assert west == [-190.0, 170.0]
     assert [x.tolist() for x, _ in PlaceMark.site("s", -170.0, 0.0).shifted(160, 200)] == [[190.0]]
+
+
+def test_no_coast_under_an_invented_place(tmp_path):
+    from matplotlib.image import imread
+
+    maps = make_maps(GRIDS["regional"]())
+    drawn = {
+        coast: imread(
+            draw_horizon_map(maps, tmp_path / f"{coast}.png", ground=Ground(coastline=coast))
+        )
+        for coast in (True, False)
+    }
+    assert drawn[True].shape == drawn[False].shape
+    assert not np.array_equal(drawn[True], drawn[False])

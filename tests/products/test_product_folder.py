@@ -6,7 +6,7 @@ import pytest
 from synthetic_products import GRIDS, Result, make_curves, make_maps
 
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.products import PlaceMark, write_products
+from ensemble_horizon.products import Ground, PlaceMark, write_products
 from ensemble_horizon.vocabulary import CAUTION
 
 
@@ -16,9 +16,9 @@ def everything(folder):
 
 def test_all_products_and_nothing_else(tmp_path, result, provenance):
     folder = tmp_path / "night" / "products"
-    places = [PlaceMark.box("North bank", 3, 6, 51, 53)]
+    ground = Ground((PlaceMark.box("North bank", 3, 6, 51, 53),))
     paths = write_products(
-        folder, [result, Result(make_curves(variable="t"))], provenance, places=places
+        folder, [result, Result(make_curves(variable="t"))], provenance, ground=ground
     )
     expected = [
         "README.txt",
