@@ -8,7 +8,7 @@ import click
 
 from ensemble_horizon.cli.session import common_options, console, progress
 from ensemble_horizon.errors import SettingsError
-from ensemble_horizon.night.comparing import compare_and_write
+from ensemble_horizon.night.comparison.comparing import compare_and_write
 from ensemble_horizon.products import gains, gains_table, starts_words, summary_words
 from ensemble_horizon.settings import read_settings
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import click
 
 from ensemble_horizon.cli.session import common_options, console, progress
-from ensemble_horizon.night.scoring import verify_and_write
+from ensemble_horizon.night.verification.writing import verify_and_write
 from ensemble_horizon.products.score_table import ratio_table, skill_table
 from ensemble_horizon.settings import read_settings
 

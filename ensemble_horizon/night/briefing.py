@@ -9,7 +9,7 @@ from typing import Any
 
 from ensemble_horizon.night.engine import Engine, usable_cores
 from ensemble_horizon.night.estimate import Estimate, Progress, estimate, silent
-from ensemble_horizon.night.verifying import Verification
+from ensemble_horizon.night.verification.verifying import Verification
 from ensemble_horizon.night.waiting import shares_of_estimate
 from ensemble_horizon.products import Drawing, Ground, PlaceMark, load_plotting, write_products
 from ensemble_horizon.settings import Settings

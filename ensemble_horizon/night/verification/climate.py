@@ -8,7 +8,7 @@ import numpy as np
 
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.variables import Variable
-from ensemble_horizon.night.verifying_input import run_scale
+from ensemble_horizon.night.verification.sources import run_scale
 from ensemble_horizon.runs import Catalogue, open_field
 from ensemble_horizon.settings import Settings
 

@@ -10,7 +10,7 @@ import numpy as np
 import xarray as xr
 
 from ensemble_horizon.horizon.skill_limits import Falls
-from ensemble_horizon.night.verifying_scores import SCORES, PlaceScores
+from ensemble_horizon.night.verification.scores import SCORES, PlaceScores
 from ensemble_horizon.runs import Grid
 from ensemble_horizon.serial import REASON_ATTRIBUTES
 from ensemble_horizon.skill.reduction import ScoreSums

@@ -9,10 +9,10 @@ import numpy as np
 import xarray as xr
 
 from ensemble_horizon.errors import ArgumentError, InputError
-from ensemble_horizon.night.cells import cell_middles
-from ensemble_horizon.night.verifying import Verification
-from ensemble_horizon.night.verifying_results import VerifiedResult
-from ensemble_horizon.night.verifying_scores import series_of
+from ensemble_horizon.night.verification.cells import cell_middles
+from ensemble_horizon.night.verification.results import VerifiedResult
+from ensemble_horizon.night.verification.scores import series_of
+from ensemble_horizon.night.verification.verifying import Verification
 from ensemble_horizon.products.calibration_file import Calibration
 from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.serial.starts import start_names

@@ -12,9 +12,9 @@ import xarray as xr
 
 from ensemble_horizon.errors import ProductError
 from ensemble_horizon.night.briefing import drawn_by, map_ground
-from ensemble_horizon.night.common import CommonGround, common_ground
+from ensemble_horizon.night.comparison.common import CommonGround, common_ground
+from ensemble_horizon.night.comparison.named import Notes
 from ensemble_horizon.night.estimate import Progress, estimate_input, silent
-from ensemble_horizon.night.named import Notes
 from ensemble_horizon.night.results import VariableResult, without_pooled
 from ensemble_horizon.night.waiting import shares_of
 from ensemble_horizon.products import write_versions

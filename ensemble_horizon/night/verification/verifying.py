@@ -10,51 +10,51 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from ensemble_horizon.errors import InputError
-from ensemble_horizon.night.cells import grid_cells
 from ensemble_horizon.night.engine import Engine, workers_for
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.night.input import open_input
 from ensemble_horizon.night.mapping import map_plan
 from ensemble_horizon.night.reading import Block, plan_blocks, window_points
-from ensemble_horizon.night.scratch import Scratch, scratch_file
 from ensemble_horizon.night.variables import (
     Places,
     Variable,
     resolve_places,
     resolve_variable,
 )
-from ensemble_horizon.night.verifying_climate import (
+from ensemble_horizon.night.verification.cells import grid_cells
+from ensemble_horizon.night.verification.climate import (
     climatological_mean,
     only_where,
     usable_deviation,
 )
-from ensemble_horizon.night.verifying_faults import block_faults, refuse_if_stopped
-from ensemble_horizon.night.verifying_input import (
-    Gap,
-    Observed,
-    open_analyses_of,
-    read_observed,
-    require_truth,
-)
-from ensemble_horizon.night.verifying_maps import (
+from ensemble_horizon.night.verification.faults import block_faults, refuse_if_stopped
+from ensemble_horizon.night.verification.maps import (
     MapSums,
     kept_quantities,
     map_falls,
     mapped_quantities,
     skill_interval,
 )
-from ensemble_horizon.night.verifying_reading import (
+from ensemble_horizon.night.verification.reading import (
     VerifiedVariable,
     VerifyingContext,
     verify_block,
 )
-from ensemble_horizon.night.verifying_results import (
+from ensemble_horizon.night.verification.results import (
     Frame,
     VerifiedResult,
     maps_dataset,
     places_dataset,
 )
-from ensemble_horizon.night.verifying_scores import SKILLS, limit_levels, place_scores
+from ensemble_horizon.night.verification.scores import SKILLS, limit_levels, place_scores
+from ensemble_horizon.night.verification.scratch import Scratch, scratch_file
+from ensemble_horizon.night.verification.sources import (
+    Gap,
+    Observed,
+    open_analyses_of,
+    read_observed,
+    require_truth,
+)
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.serial.mean import LEAST_STARTS
 from ensemble_horizon.settings import Settings

@@ -13,8 +13,8 @@ import numpy as np
 
 from ensemble_horizon.night.engine import shared
 from ensemble_horizon.night.reading import Block, Damage, read_part, window_points
-from ensemble_horizon.night.scratch import Scratch
-from ensemble_horizon.night.verifying_input import Analyses, Observed
+from ensemble_horizon.night.verification.scratch import Scratch
+from ensemble_horizon.night.verification.sources import Analyses, Observed
 from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.skill.reduction import (
     ScoreReduction,

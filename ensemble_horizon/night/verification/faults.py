@@ -7,7 +7,7 @@ import logging
 from ensemble_horizon.night.health import stopped_by
 from ensemble_horizon.night.reading import Block
 from ensemble_horizon.night.variables import Variable
-from ensemble_horizon.night.verifying_reading import Verified
+from ensemble_horizon.night.verification.reading import Verified
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.faults import Effect
 from ensemble_horizon.runs.report import name_leads

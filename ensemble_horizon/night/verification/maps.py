@@ -8,7 +8,7 @@ import numpy as np
 
 from ensemble_horizon.horizon.skill_limits import Falls, falls_of_curves
 from ensemble_horizon.night.engine import Engine, shared
-from ensemble_horizon.night.verifying_scores import SCORES, SKILLS
+from ensemble_horizon.night.verification.scores import SCORES, SKILLS
 from ensemble_horizon.skill.interval import STATISTICS, statistic_interval
 from ensemble_horizon.skill.quantities import QUANTITIES
 from ensemble_horizon.skill.reduction import ScoreSums

@@ -7,10 +7,15 @@ from dataclasses import dataclass
 import numpy as np
 
 from ensemble_horizon.errors import InputError
+from ensemble_horizon.night.comparison.named import (
+    Notes,
+    named_in_both,
+    nothing_shared,
+    shared_names,
+)
 from ensemble_horizon.night.estimate import Progress
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import MapPlan, map_plan
-from ensemble_horizon.night.named import Notes, named_in_both, nothing_shared, shared_names
 from ensemble_horizon.night.variables import Variable, resolve_variable
 from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.runs.units import same_units
