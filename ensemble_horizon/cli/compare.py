@@ -9,7 +9,13 @@ import click
 from ensemble_horizon.cli.session import common_options, console, progress
 from ensemble_horizon.errors import SettingsError
 from ensemble_horizon.night.comparison.comparing import compare_and_write
-from ensemble_horizon.products import gains, gains_table, starts_words, summary_words
+from ensemble_horizon.products import (
+    difference_table,
+    gains,
+    gains_table,
+    starts_words,
+    summary_words,
+)
 from ensemble_horizon.settings import read_settings
 
 
@@ -31,7 +37,8 @@ def command(
     """Say how many hours version B gains over version A on the starts that both have.
 
     A and B are settings files as for estimate. Writes versions.csv, versions.nc and figures/, and
-    prints the table of hours gained, what is told apart first.
+    prints the table of hours gained, what is told apart first. Where both name analyses or
+    observations, the differences of their scores come with it.
     """
     names = labels or _labels(Path(a), Path(b))
     if names[0] == names[1] or not all(name.strip() for name in names):
@@ -53,6 +60,8 @@ def command(
     for words in (summary_words(rows), f"{starts_words(found.results[0].places)}."):
         screen.print(words, highlight=False, markup=False)
     screen.print(gains_table(rows))
+    if found.scores:
+        screen.print(difference_table(found.scores))
     for heading, lines in (
         ("Not compared", found.notes.left_out),
         ("Keep in mind", found.notes.cautions),

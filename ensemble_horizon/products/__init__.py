@@ -26,6 +26,7 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``folder``         all products together
 ``gains``          hours gained: one record per variable, place and criterion
 ``gains_table``    ``versions.csv`` and the table for the terminal
+``difference_table`` ``score_differences.csv`` and the table for the terminal
 ``gains_file``     ``versions.nc``
 ``gains_figure``   hours gained with intervals
 ``gain_maps``      maps of hours gained
@@ -48,6 +49,7 @@ from __future__ import annotations
 
 from ensemble_horizon.products.coast import coastlines
 from ensemble_horizon.products.curve_file import write_horizon_file
+from ensemble_horizon.products.difference_table import difference_table
 from ensemble_horizon.products.drawing import Drawing, draw_in_turn, load_plotting
 from ensemble_horizon.products.folder import moved_together, write_products
 from ensemble_horizon.products.gains import gains, starts_words, summary_words
@@ -67,6 +69,7 @@ __all__ = [
     "PlaceMark",
     "VariableResult",
     "coastlines",
+    "difference_table",
     "draw_in_turn",
     "gains",
     "gains_table",

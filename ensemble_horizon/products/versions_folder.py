@@ -10,6 +10,10 @@ from typing import Any
 
 import xarray as xr
 
+from ensemble_horizon.products.difference_table import (
+    DIFFERENCE_COLUMNS,
+    write_difference_table,
+)
 from ensemble_horizon.products.drawing import Drawing, SharesDrawing, draw_in_turn
 from ensemble_horizon.products.folder import FIGURES, PROGRAM, Leaflet, write_folder
 from ensemble_horizon.products.gains import VersionsResult, starts_words
@@ -21,6 +25,7 @@ from ensemble_horizon.vocabulary import CRITERION
 
 _NOTES = {
     "versions.csv": "hours gained: one row per variable, place and criterion",
+    "score_differences.csv": "differences of scores by lead, where both versions were verified",
     "versions.nc": "the same, and hours gained at every grid point (CF-1.11)",
 }
 
@@ -30,6 +35,7 @@ def write_versions(
     results: Sequence[VersionsResult],
     provenance: Mapping[str, Any],
     *,
+    scores: Sequence[xr.Dataset] = (),
     notes: Mapping[str, Sequence[str]],
     figures: bool = True,
     ground: Ground = BARE,
@@ -49,6 +55,8 @@ def write_versions(
         One per variable, at least one.
     provenance : mapping
         See `netcdf.global_attributes`.
+    scores : sequence of Dataset
+        Differences of scores (score, lead, place) per variable: ``score_differences.csv``.
     notes : mapping of heading to lines
         What is not compared, and cautions.
     figures, ground, draw
@@ -76,11 +84,14 @@ def write_versions(
                 if lines
             },
             "Columns of versions.csv": COLUMN_NOTES,
+            **({"Columns of score_differences.csv": DIFFERENCE_COLUMNS} if scores else {}),
         },
     )
 
     def write(aside: Path) -> None:
         write_gains_table(aside / "versions.csv", [item.places for item in results])
+        if scores:
+            write_difference_table(aside / "score_differences.csv", scores)
         write_gains_file(aside / "versions.nc", results, provenance, notes)
         if figures:
             draw(list(_drawings(results, aside / FIGURES, ground)))

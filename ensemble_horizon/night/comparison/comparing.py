@@ -14,6 +14,7 @@ from ensemble_horizon.errors import ProductError
 from ensemble_horizon.night.briefing import drawn_by, map_ground
 from ensemble_horizon.night.comparison.common import CommonGround, common_ground
 from ensemble_horizon.night.comparison.named import Notes
+from ensemble_horizon.night.comparison.scores import score_differences
 from ensemble_horizon.night.estimate import Progress, estimate_input, silent
 from ensemble_horizon.night.results import VariableResult, without_pooled
 from ensemble_horizon.night.waiting import shares_of
@@ -54,6 +55,7 @@ class Comparison:
     labels : names of the versions
     starts : the common starts
     results : one per variable, in the order of the first settings
+    scores : differences of scores, one per variable, where both versions can be verified
     notes : what is not common, and what to keep in mind
     inputs : the files read
     settings : the first settings, cut down to what is common
@@ -62,6 +64,7 @@ class Comparison:
     labels: tuple[str, str]
     starts: list[str]
     results: list[VersionsResult]
+    scores: list[xr.Dataset]
     notes: Notes
     inputs: list[str]
     settings: Settings
@@ -89,9 +92,12 @@ def compare(
     ground = common_ground(settings, labels, progress)
     results = [_variable(ground, name, progress) for name in ground.criteria]
     _judge_together([result.places for result in results])
+    scores = score_differences(ground, float(results[0].places.attrs["confidence"]), progress)
     ground.notes.cautions.append(_OF_SPREAD)
     inputs = [path for found in ground.found for path in found.catalogue.paths]
-    return Comparison(labels, ground.starts, results, ground.notes, inputs, ground.settings[0])
+    return Comparison(
+        labels, ground.starts, results, scores, ground.notes, inputs, ground.settings[0]
+    )
 
 
 def compare_and_write(
@@ -129,6 +135,7 @@ def compare_and_write(
             "title": f"{labels[1]} against {labels[0]}",
             "command": "ensemble-horizon compare",
         },
+        scores=found.scores,
         notes={"Not compared": found.notes.left_out, "Cautions": found.notes.cautions},
         figures=all(item.products.figures for item in settings),
         ground=map_ground(found.settings),

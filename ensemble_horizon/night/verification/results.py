@@ -111,7 +111,8 @@ class VerifiedResult:
     maps : Dataset or None
     frame : Frame
     kinds : names and kinds of the places by what they are held against
-    series : sums of each start by what they are held against
+    series : sums of each start by what they are held against, in the units of the files
+    factor : from those units to those of the results, for differences
     """
 
     places: xr.Dataset
@@ -119,6 +120,7 @@ class VerifiedResult:
     frame: Frame
     kinds: Mapping[str, Sequence[tuple[str, str]]]
     series: Mapping[str, Sequence[ScoreSums]]
+    factor: float
 
 
 def places_dataset(

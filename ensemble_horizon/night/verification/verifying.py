@@ -12,7 +12,7 @@ import numpy as np
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.engine import Engine, workers_for
 from ensemble_horizon.night.estimate import Progress, silent
-from ensemble_horizon.night.input import open_input
+from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import map_plan
 from ensemble_horizon.night.reading import Block, plan_blocks, window_points
 from ensemble_horizon.night.variables import (
@@ -107,6 +107,13 @@ def verify(settings: Settings, progress: Progress = silent, *, cells: bool = Fal
     """
     require_truth(settings)
     found = open_input(settings, lambda done, total: progress("headers", done, total))
+    return verify_input(settings, found, progress, cells=cells)
+
+
+def verify_input(
+    settings: Settings, found: Input, progress: Progress = silent, *, cells: bool = False
+) -> Verification:
+    """Verify runs whose headers have been read; otherwise as `verify`."""
     catalogue = found.catalogue
     places = resolve_places(settings, catalogue)
     gaps: list[Gap] = []
@@ -241,7 +248,7 @@ class _Job:
         }
         data = places_dataset(frame, kinds, scored)
         if not maps.total:
-            return VerifiedResult(data, None, frame, kinds, against)
+            return VerifiedResult(data, None, frame, kinds, against, variable.factor)
         scores = maps.scores(variable.factor)
         interval: dict[str, tuple[np.ndarray, np.ndarray]] = {}
         if source.kept:
@@ -251,7 +258,7 @@ class _Job:
         falls = map_falls(lead, scores, levels, interval)
         return VerifiedResult(
             data, maps_dataset(frame, self.catalogue.grid, scores, falls, interval), frame, kinds,
-            against,
+            against, variable.factor,
         )  # fmt: skip
 
     def _read(

@@ -1,0 +1,126 @@
+"""Scores of two versions, start by start against what came."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+import xarray as xr
+
+from ensemble_horizon.night.comparison.common import CommonGround
+from ensemble_horizon.night.estimate import Progress
+from ensemble_horizon.night.verification.results import VerifiedResult
+from ensemble_horizon.night.verification.scores import series_of
+from ensemble_horizon.night.verification.verifying import verify_input
+from ensemble_horizon.settings import Settings
+from ensemble_horizon.versions import compare_scores
+from ensemble_horizon.vocabulary import LEAD, PLACE, SCORE, START
+
+
+class _Compared(NamedTuple):
+    """A quantity that is compared: what it is called, and the power of the units in it."""
+
+    text: str
+    power: int
+
+
+COMPARED = {
+    "crps": _Compared("fair CRPS", 1),
+    "squared_error": _Compared("squared error of the ensemble mean", 2),
+}
+
+
+def score_differences(
+    ground: CommonGround, confidence: float, progress: Progress
+) -> list[xr.Dataset]:
+    """Differences of scores by lead, one dataset (score, lead, place) per variable.
+
+    Empty, with a note where only one version says what to hold it against, unless the settings of
+    both name analyses or observations. The runs are read once more for it.
+    """
+    truth = [bool(item.analyses or item.observations) for item in ground.settings]
+    if not all(truth):
+        if any(truth):
+            lacking = ground.labels[truth.index(False)]
+            ground.notes.left_out.append(
+                f"scores: the settings of {lacking} name no analyses and no observations"
+            )
+        return []
+    found = []
+    for label, settings, input_ in zip(ground.labels, ground.settings, ground.found, strict=True):
+
+        def told(stage: str, done: float, total: float, label: str = label) -> None:
+            progress(f"{stage} {label}", done, total)
+
+        found.append(verify_input(_without_maps(settings), input_, told).results)
+    return [_differences(ground, a, b, confidence) for a, b in zip(found[0], found[1], strict=True)]
+
+
+def _without_maps(settings: Settings) -> Settings:
+    return settings.model_copy(
+        update={"products": settings.products.model_copy(update={"maps": "none"})}
+    )
+
+
+def _differences(
+    ground: CommonGround, a: VerifiedResult, b: VerifiedResult, confidence: float
+) -> xr.Dataset:
+    """The differences of one variable at the places that both have."""
+    names = [name for name in _places(a) if name in _places(b)]
+    parts = []
+    for quantity, (text, power) in COMPARED.items():
+        first, second = (
+            _series(version, input_.catalogue.starts, quantity, power, names).assign_attrs(
+                long_name=text
+            )
+            for version, input_ in zip((a, b), ground.found, strict=True)
+        )
+        parts.append(compare_scores(first, second, confidence=confidence))
+    joined = xr.concat(parts, dim=SCORE, combine_attrs="drop", coords="minimal", compat="override")
+    units = [_units(a, power) for _, power in COMPARED.values()]
+    return joined.assign_coords(
+        {
+            SCORE: list(COMPARED),
+            "score_text": (SCORE, [item.text for item in COMPARED.values()]),
+            "score_units": (SCORE, units),
+            PLACE: [place for place, _ in names],
+            "against": (PLACE, [against for _, against in names]),
+        }
+    ).assign_attrs(
+        variable=a.frame.variable,
+        lead_units=a.frame.lead_units,
+        version_a=ground.labels[0],
+        version_b=ground.labels[1],
+        confidence=confidence,
+    )
+
+
+def _places(result: VerifiedResult) -> list[tuple[str, str]]:
+    """Names of the places, and what they are held against."""
+    return [(name, what) for what, places in result.kinds.items() for name, _ in places]
+
+
+def _series(
+    result: VerifiedResult,
+    starts: np.ndarray,
+    quantity: str,
+    power: int,
+    names: list[tuple[str, str]],
+) -> xr.DataArray:
+    """What each start brings of a quantity: (start, lead, place), in the units of the results."""
+    columns = [
+        series_of(sums, quantity)[..., : len(result.kinds[what])]
+        for what, sums in result.series.items()
+    ]
+    values = np.concatenate(columns, axis=-1) * result.factor**power
+    own = _places(result)
+    return xr.DataArray(
+        values[..., [own.index(name) for name in names]],
+        dims=(START, LEAD, PLACE),
+        coords={START: starts, LEAD: result.frame.lead},
+        attrs={"units": _units(result, power)},
+    )
+
+
+def _units(result: VerifiedResult, power: int) -> str:
+    return result.frame.units if power == 1 else f"({result.frame.units}){power}"
