@@ -6,6 +6,7 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``writing``        files that appear whole or not at all
 ``wording``        plain words for horizons, leads and starts
 ``limits``         one record per start, variable, place and criterion
+``rows``           rows of a table as CSV
 ``tables``         ``horizons.csv`` and the table for the terminal
 ``netcdf``         names, attributes and variables of the NetCDF products
 ``curve_file``     ``horizons.nc``

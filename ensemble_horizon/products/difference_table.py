@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-import csv
 import os
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
+from itertools import product
 from pathlib import Path
 
 import numpy as np
@@ -13,8 +13,8 @@ from rich import box
 from rich.table import Table
 from rich.text import Text
 
+from ensemble_horizon.products.rows import cell, write_rows
 from ensemble_horizon.products.wording import number
-from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.serial import REASON_ATTRIBUTES
 from ensemble_horizon.vocabulary import LEAD, PLACE, SCORE
 
@@ -47,20 +47,13 @@ def write_difference_table(path: str | os.PathLike[str], parts: Iterable[xr.Data
     ProductError
         If the file cannot be written; nothing half-written stays behind.
     """
-    target = Path(path)
-    with (
-        written_whole(target) as neighbour,
-        neighbour.open("w", encoding="utf-8", newline="") as stream,
-    ):
-        writer = csv.writer(stream, lineterminator="\n")
-        writer.writerow(DIFFERENCE_COLUMNS)
-        for part in parts:
-            for row in range(part.sizes[PLACE]):
-                for score in range(part.sizes[SCORE]):
-                    for lead in range(part.sizes[LEAD]):
-                        one = part.isel({PLACE: row, SCORE: score, LEAD: lead})
-                        writer.writerow(_cells(one, part))
-    return target
+    return write_rows(path, DIFFERENCE_COLUMNS, (row for part in parts for row in _rows(part)))
+
+
+def _rows(part: xr.Dataset) -> Iterator[list[str]]:
+    sizes = (part.sizes[dim] for dim in (PLACE, SCORE, LEAD))
+    for place, score, lead in product(*map(range, sizes)):
+        yield _cells(part.isel({PLACE: place, SCORE: score, LEAD: lead}), part)
 
 
 def difference_table(parts: Sequence[xr.Dataset]) -> Table:
@@ -108,10 +101,10 @@ def _words(one: xr.Dataset) -> str:
 def _cells(one: xr.Dataset, part: xr.Dataset) -> list[str]:
     return [
         str(part.attrs["variable"]), str(one[PLACE].values), str(one["against"].values),
-        str(one[SCORE].values), _cell(float(one[LEAD])), str(part.attrs["lead_units"]),
+        str(one[SCORE].values), cell(float(one[LEAD])), str(part.attrs["lead_units"]),
         str(int(one["starts"])),
-        *(_cell(float(one[name])) for name in ("mean_a", "mean_b", "difference")),
-        *(_cell(float(one[name])) for name in (*_ENDS, "p_value")),
+        *(cell(float(one[name])) for name in ("mean_a", "mean_b", "difference")),
+        *(cell(float(one[name])) for name in (*_ENDS, "p_value")),
         str(one["score_units"].values), _REASONS[int(one["reason"])],
     ]  # fmt: skip
 
@@ -121,7 +114,3 @@ def _shown(value: float, sign: bool = False) -> str:
         return "–"
     mark = ("+" if value > 0 else "−" if value < 0 else "") if sign else ""
     return mark + number(abs(value) if sign else value)
-
-
-def _cell(value: float) -> str:
-    return f"{value:.6g}" if np.isfinite(value) else ""

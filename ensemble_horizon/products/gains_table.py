@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import csv
 import os
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -14,8 +13,8 @@ from rich.table import Table
 from rich.text import Text
 
 from ensemble_horizon.products.gains import Gain, gains, telling_first
+from ensemble_horizon.products.rows import cell, write_rows
 from ensemble_horizon.products.wording import duration
-from ensemble_horizon.products.writing import written_whole
 
 COLUMN_NOTES = {
     "variable": "name of the variable in the settings",
@@ -60,16 +59,7 @@ def write_gains_table(path: str | os.PathLike[str], tables: Iterable[xr.Dataset]
     ProductError
         If the file cannot be written; nothing half-written stays behind.
     """
-    rows = [_cells(row) for row in gains(tables)]
-    target = Path(path)
-    with (
-        written_whole(target) as neighbour,
-        neighbour.open("w", encoding="utf-8", newline="") as stream,
-    ):
-        writer = csv.writer(stream, lineterminator="\n")
-        writer.writerow(COLUMNS)
-        writer.writerows(rows)
-    return target
+    return write_rows(path, COLUMNS, [_cells(row) for row in gains(tables)])
 
 
 def gains_table(rows: Sequence[Gain]) -> Table:
@@ -125,18 +115,14 @@ def _cells(row: Gain) -> list[str]:
         row.kind,
         row.criterion,
         str(row.starts),
-        *map(_cell, (row.horizon_a, row.horizon_b, row.gained, row.low, row.high)),
-        _cell(row.p_value),
-        _cell(row.adjusted_p_value),
+        *map(cell, (row.horizon_a, row.horizon_b, row.gained, row.low, row.high)),
+        cell(row.p_value),
+        cell(row.adjusted_p_value),
         ("yes" if row.survives else "no") if told else "",
-        _cell(row.log_rank_p),
+        cell(row.log_rank_p),
         str(row.beyond_a),
         str(row.beyond_b),
-        _cell(row.counted_to),
+        cell(row.counted_to),
         row.units,
         row.reason,
     ]
-
-
-def _cell(value: float) -> str:
-    return f"{value:.6g}" if np.isfinite(value) else ""

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import csv
 import os
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -12,9 +11,9 @@ from rich import box
 from rich.table import Table
 from rich.text import Text
 
+from ensemble_horizon.products.rows import cell, write_rows
 from ensemble_horizon.products.scores import ScoredVariable, score_records, skill_limits
 from ensemble_horizon.products.wording import number
-from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import CAUTION, LEAD, PLACE, SCORE
 
 SCORE_COLUMNS = {
@@ -59,25 +58,25 @@ def write_score_table(path: str | os.PathLike[str], results: Iterable[ScoredVari
     """
     rows = (
         [
-            item.variable, item.place, item.against, _cell(item.lead), item.lead_units, item.score,
-            _cell(item.value), _cell(item.low), _cell(item.high), item.units, str(item.starts),
+            item.variable, item.place, item.against, cell(item.lead), item.lead_units, item.score,
+            cell(item.value), cell(item.low), cell(item.high), item.units, str(item.starts),
         ]
         for item in score_records(results)
     )  # fmt: skip
-    return _write(Path(path), list(SCORE_COLUMNS), rows)
+    return write_rows(path, SCORE_COLUMNS, rows)
 
 
 def write_limit_table(path: str | os.PathLike[str], results: Iterable[ScoredVariable]) -> Path:
     """Write ``skill_limits.csv``: one row per variable, place and score that has a limit."""
     rows = (
         [
-            item.variable, item.place, item.against, item.score, _cell(item.level),
-            _cell(item.horizon), _cell(item.low), _cell(item.high), item.units, item.status.name,
-            _cell(item.significant_until), item.significant_status.name, str(item.starts),
+            item.variable, item.place, item.against, item.score, cell(item.level),
+            cell(item.horizon), cell(item.low), cell(item.high), item.units, item.status.name,
+            cell(item.significant_until), item.significant_status.name, str(item.starts),
         ]
         for item in skill_limits(results)
     )  # fmt: skip
-    return _write(Path(path), list(LIMIT_COLUMNS), rows)
+    return write_rows(path, LIMIT_COLUMNS, rows)
 
 
 def skill_table(results: Sequence[ScoredVariable]) -> Table:
@@ -132,21 +131,6 @@ def ratio_table(results: Sequence[ScoredVariable]) -> Table:
                 ]  # fmt: skip
                 table.add_row(*(Text(cell) for cell in cells))
     return table
-
-
-def _write(target: Path, columns: list[str], rows: Iterable[list[str]]) -> Path:
-    with (
-        written_whole(target) as neighbour,
-        neighbour.open("w", encoding="utf-8", newline="") as stream,
-    ):
-        writer = csv.writer(stream, lineterminator="\n")
-        writer.writerow(columns)
-        writer.writerows(rows)
-    return target
-
-
-def _cell(value: float) -> str:
-    return f"{value:.6g}" if np.isfinite(value) else ""
 
 
 def _shown(value: float) -> str:

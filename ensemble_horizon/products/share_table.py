@@ -2,15 +2,13 @@
 
 from __future__ import annotations
 
-import csv
 import os
 from collections.abc import Iterable, Iterator
 from pathlib import Path
 
-import numpy as np
 import xarray as xr
 
-from ensemble_horizon.products.writing import written_whole
+from ensemble_horizon.products.rows import cell, write_rows
 from ensemble_horizon.vocabulary import CRITERION, PLACE
 
 _QUANTILES = {"quarter": 0.25, "half": 0.5, "three_quarters": 0.75}
@@ -66,16 +64,8 @@ def write_share_table(path: str | os.PathLike[str], shares: Iterable[xr.Dataset]
     ProductError
         If the file cannot be written; nothing half-written stays behind.
     """
-    rows = [row for part in shares for row in _rows(part)]
-    target = Path(path)
-    with (
-        written_whole(target) as neighbour,
-        neighbour.open("w", encoding="utf-8", newline="") as stream,
-    ):
-        writer = csv.DictWriter(stream, COLUMNS, lineterminator="\n")
-        writer.writeheader()
-        writer.writerows(rows)
-    return target
+    rows = (row for part in shares for row in _rows(part))
+    return write_rows(path, COLUMNS, ([row[name] for name in COLUMNS] for row in rows))
 
 
 def _rows(shares: xr.Dataset) -> Iterator[dict[str, str]]:
@@ -90,21 +80,17 @@ def _rows(shares: xr.Dataset) -> Iterator[dict[str, str]]:
                 "kind": str(one["place_kind"].values),
                 "criterion": str(one[CRITERION].values),
                 **{name: str(int(one[name])) for name in _COUNTS},
-                "mean": _cell(one["restricted_mean"]),
-                "mean_low": _cell(one["restricted_mean_low"]),
-                "mean_high": _cell(one["restricted_mean_high"]),
-                "counted_to": _cell(one["restricted_to"]),
+                "mean": cell(one["restricted_mean"]),
+                "mean_low": cell(one["restricted_mean_low"]),
+                "mean_high": cell(one["restricted_mean_high"]),
+                "counted_to": cell(one["restricted_to"]),
                 "units": str(shares.attrs["lead_units"]),
                 "reason": reasons[int(one["interval_reason"])],
             }
             for name, part in _QUANTILES.items():
                 limit = one.sel(quantile=part)
-                row[name] = _cell(limit["limit"])
-                row[f"{name}_low"] = _cell(limit["limit_low"])
-                row[f"{name}_high"] = _cell(limit["limit_high"])
+                row[name] = cell(limit["limit"])
+                row[f"{name}_low"] = cell(limit["limit_low"])
+                row[f"{name}_high"] = cell(limit["limit_high"])
                 row[f"{name}_status"] = statuses[int(limit["limit_status"])]
             yield row
-
-
-def _cell(value: xr.DataArray) -> str:
-    return f"{float(value):.6g}" if np.isfinite(value) else ""

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import csv
 import os
 from collections.abc import Iterable
 from pathlib import Path
@@ -13,8 +12,8 @@ from rich.table import Table
 from rich.text import Text
 
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
+from ensemble_horizon.products.rows import cell, write_rows
 from ensemble_horizon.products.wording import criterion_words, duration
-from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import CAUTION, Status
 
 COLUMNS = (
@@ -84,16 +83,7 @@ def write_horizon_table(path: str | os.PathLike[str], results: Iterable[Variable
     ProductError
         If the file cannot be written; nothing half-written stays behind.
     """
-    rows = [table_row(limit) for limit in limits(results)]
-    target = Path(path)
-    with (
-        written_whole(target) as neighbour,
-        neighbour.open("w", encoding="utf-8", newline="") as stream,
-    ):
-        writer = csv.writer(stream, lineterminator="\n")
-        writer.writerow(COLUMNS)
-        writer.writerows(rows)
-    return target
+    return write_rows(path, COLUMNS, [table_row(limit) for limit in limits(results)])
 
 
 def table_row(limit: Limit) -> list[str]:
@@ -104,15 +94,15 @@ def table_row(limit: Limit) -> list[str]:
         limit.variable,
         limit.place,
         limit.criterion,
-        _cell(limit.threshold),
+        cell(limit.threshold),
         limit.threshold_units,
-        _cell(horizon),
-        _cell(limit.low),
-        _cell(limit.high),
+        cell(horizon),
+        cell(limit.low),
+        cell(limit.high),
         limit.horizon_units,
         limit.status.name,
-        _cell(limit.projected),
-        _cell(limit.doubling_time),
+        cell(limit.projected),
+        cell(limit.doubling_time),
         limit.law,
         "" if limit.members is None else str(limit.members),
     ]
@@ -180,7 +170,3 @@ def _shortest_first(limit: Limit) -> tuple[int, float, str, str]:
         limit.place,
         limit.variable,
     )
-
-
-def _cell(value: float) -> str:
-    return f"{value:.6g}" if np.isfinite(value) else ""
