@@ -95,8 +95,8 @@ class Exponents:
 
         j is the largest number of leading exponents with a sum of at least zero; exponents whose
         interval holds zero count as zero. The interval follows to first order in the exponents.
-        Source: Kaplan and Yorke 1979, Lecture Notes in
-        Mathematics 730 (from memory).
+        Source: Kaplan and Yorke 1979, in Functional Differential Equations and Approximation of
+        Fixed Points, Springer (from memory).
 
         Raises
         ------
