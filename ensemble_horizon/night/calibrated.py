@@ -43,9 +43,11 @@ class Factors:
 
     def noise(self, noise: LeadNoise, columns: np.ndarray | int) -> LeadNoise:
         """Noise of a spread with that of the factor, averaged over columns."""
-        variance = self.log_variance[:, columns]
+        variance, known = self.log_variance[:, columns], np.isfinite(self.factor[:, columns])
         if variance.ndim > 1:
-            variance = variance.mean(axis=1)
+            # Points without a factor are not calibrated: they say nothing of its uncertainty.
+            count = np.maximum(known.sum(axis=1), 1)
+            variance = np.where(known, variance, 0.0).sum(axis=1) / count
         return calibrated_noise(noise, variance, self.correlation)
 
 

@@ -256,10 +256,11 @@ class HeaderReading:
             found = [name for name, role in self.roles.items() if role == LEVEL]
             alone = [self.variables[name] for name in found if not self._span(name)]
             refuse_other_level(self.file.path, names, alone, self.wanted.level)
-        space_dims = tuple(dim for dim in dims if dim in space)
+        # Latitude first, as `grid_points` counts, in whichever order the file holds them.
+        space_dims = tuple(sorted(space, key=lambda dim: space[dim] in (LONGITUDE, X)))
         run_dims = tuple(dims[axis] for axis in run_axes)
         lengths = tuple(self.sizes[dim] for dim in run_dims)
-        space_axes = tuple(axis for axis, dim in enumerate(dims) if dim in space)
+        space_axes = tuple(dims.index(dim) for dim in space_dims)
         source = Source(self.file.path, tuple(run_axes), lengths, space_axes, tuple(fixed))
         moments = self._moments(run_dims, names[0])
         grid = read_grid(space_dims, space, self.sizes, places, self.known)

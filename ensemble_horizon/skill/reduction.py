@@ -106,6 +106,7 @@ def reduce_scores(
     reduction: ScoreReduction,
     points: np.ndarray | None = None,
     persistence: np.ndarray | None = None,
+    moment: tuple[int, ...] = (),
 ) -> ScoreSums:
     """Reduce members and analyses of a block to sums of scores.
 
@@ -118,6 +119,9 @@ def reduce_scores(
         Which points of the flattened grid these are; None means all of them.
     persistence : (P,), optional
         The analysis at the start.
+    moment : tuple of int
+        What tells this block from others in time, such as start and first lead: ties between
+        members and analysis are broken by random numbers of its own.
 
     Examples
     --------
@@ -141,7 +145,7 @@ def reduce_scores(
     for lead in range(leads):
         block = _Lead(values[:, lead], analysis[lead], reduction, still, deviation)
         generator = np.random.default_rng(
-            [reduction.seed, lead, 0 if points is None else int(points[0])]
+            [reduction.seed, *moment, lead, 0 if points is None else int(points[0])]
         )
         if block.present.sum() < 2:
             continue

@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+import scipy.stats
 import xarray as xr
 
 import ensemble_horizon as eh
@@ -194,3 +195,18 @@ def test_a_reference_present_in_part_of_the_windows_is_not_averaged(block):
         joined.add(part, slice(None), points)
     assert np.isnan(joined.mean("persistence_crps")[:, :2]).all()
     np.testing.assert_allclose(joined.mean("crps"), whole.mean("crps"), rtol=1e-6)
+
+
+def test_ties_are_broken_anew_at_every_start():
+    # Two in three values are zero, in truth as in members: a reliable forecast of dry days.
+    random = np.random.default_rng(3)
+    drawn = random.normal(size=(10, 400)) * (random.random((10, 400)) > 0.67)
+    one = ScoreReduction(1, (RegionWeights("site", np.zeros(1, dtype=int), np.ones(1)),))
+    counts = np.zeros(10)
+    for start in range(400):
+        values, truth = drawn[:9, start].reshape(9, 1, 1), drawn[9, start].reshape(1, 1)
+        counts += reduce_scores(values, truth, one, moment=(start, 0)).ranks[0, 0]
+    # Pearson's chi-square with 9 degrees of freedom: 27.9 at the 0.1 percent level (scipy).
+    assert scipy.stats.chisquare(counts).pvalue > 1e-3
+    same = [reduce_scores(values, truth, one, moment=(7, 0)).ranks for _ in range(2)]
+    assert np.array_equal(*same)

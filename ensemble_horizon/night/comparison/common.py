@@ -191,6 +191,10 @@ def _criteria(
         if not same_units(a.units, b.units):
             notes.left_out.append(f"variable {name}: in {a.units!r} and in {b.units!r}")
             continue
+        kinds = [_what_it_is(item, name) for item in settings]
+        if kinds[0] != kinds[1]:
+            notes.left_out.append(f"variable {name}: {' and '.join(kinds)}")
+            continue
         if a.hold != b.hold:
             notes.left_out.append(f"variable {name}: hold {a.hold:g} and {b.hold:g}")
             continue
@@ -203,11 +207,18 @@ def _criteria(
         ]
         if alike:
             found[name] = alike
-            kinds = {a.criteria[label].kind for label in alike}
-            _caution_of_thresholds(settings, (a, b), kinds, notes)
+            kinds_used = {a.criteria[label].kind for label in alike}
+            _caution_of_thresholds(settings, (a, b), kinds_used, notes)
     if not found:
         raise nothing_shared("criteria", labels, "; ".join(notes.left_out))
     return found
+
+
+def _what_it_is(settings: Settings, name: str) -> str:
+    """Kind and level of a variable in words; the names in the files may differ."""
+    table = settings.variables[name]
+    kind = "position" if table.position else "speed" if table.speed else "scalar"
+    return kind if table.level is None else f"{kind} at level {table.level:g}"
 
 
 def _caution_of_thresholds(

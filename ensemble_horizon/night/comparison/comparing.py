@@ -93,7 +93,7 @@ def compare(
     results = [_variable(ground, name, progress) for name in ground.criteria]
     _judge_together([result.places for result in results])
     scores = score_differences(ground, float(results[0].places.attrs["confidence"]), progress)
-    ground.notes.cautions.append(_OF_SPREAD)
+    ground.notes.cautions.append(_caution_of_spread(ground))
     inputs = [path for found in ground.found for path in found.catalogue.paths]
     return Comparison(
         labels, ground.starts, results, scores, ground.notes, inputs, ground.settings[0]
@@ -173,6 +173,20 @@ def _variable(ground: CommonGround, name: str, progress: Progress) -> VersionsRe
     if ground.plan.mode != "none":
         maps = _maps(found, ground, name, ends, confidence).assign_attrs(about)
     return VersionsResult(places.assign_attrs(about), maps, (shares[0], shares[1]))
+
+
+def _caution_of_spread(ground: CommonGround) -> str:
+    """What the limits of both versions rest on."""
+    files = [item.calibration and item.path(item.calibration.file) for item in ground.settings]
+    if all(files):
+        return (
+            "limits rest on spread calibrated by past errors of each version; the uncertainty of "
+            "the factors is not in the intervals of the gains"
+        )
+    if any(files):
+        one = ground.labels[0 if files[0] else 1]
+        return f"only the spread of {one} is calibrated, so the limits are not of one kind"
+    return _OF_SPREAD
 
 
 def _limits(result: VariableResult, criteria: Sequence[str], first: float) -> xr.Dataset:

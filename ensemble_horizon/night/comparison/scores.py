@@ -46,19 +46,53 @@ def score_differences(
                 f"scores: the settings of {lacking} name no analyses and no observations"
             )
         return []
+    names = [name for name in ground.criteria if all(_scored(i, name) for i in ground.settings)]
+    ground.notes.left_out += [
+        f"scores of {name}: a position, or nothing to hold it against in one of them"
+        for name in ground.criteria
+        if name not in names
+    ]
+    if not names:
+        return []
+    if _truth(ground.settings[0]) != _truth(ground.settings[1]):
+        ground.notes.cautions.append(
+            "scores: the two versions are held against other analyses or observations, and part "
+            "of the difference may come from there"
+        )
     found = []
-    for label, settings, input_ in zip(ground.labels, ground.settings, ground.found, strict=True):
+    chosen = [_only(settings, names) for settings in ground.settings]
+    for label, settings, input_ in zip(ground.labels, chosen, ground.found, strict=True):
 
         def told(stage: str, done: float, total: float, label: str = label) -> None:
             progress(f"{stage} {label}", done, total)
 
-        found.append(verify_input(_without_maps(settings), input_, told).results)
+        found.append(verify_input(settings, input_, told).results)
     return [_differences(ground, a, b, confidence) for a, b in zip(found[0], found[1], strict=True)]
 
 
-def _without_maps(settings: Settings) -> Settings:
+def _scored(settings: Settings, name: str) -> bool:
+    """Whether a variable can be held against anything."""
+    held = settings.analyses is not None or name in settings.observations
+    return held and settings.variables[name].position is None
+
+
+def _truth(settings: Settings) -> list[object]:
+    """Where what the runs are held against comes from."""
+    files: list[object] = []
+    if settings.analyses is not None:
+        given = settings.analyses.files
+        names = (given,) if isinstance(given, str) else given
+        files += [settings.path(name) for name in names]
+    return files + [settings.path(item.file) for item in settings.observations.values()]
+
+
+def _only(settings: Settings, names: list[str]) -> Settings:
+    """The settings with these variables, and without maps."""
     return settings.model_copy(
-        update={"products": settings.products.model_copy(update={"maps": "none"})}
+        update={
+            "variables": {name: settings.variables[name] for name in names},
+            "products": settings.products.model_copy(update={"maps": "none"}),
+        }
     )
 
 
@@ -71,7 +105,7 @@ def _differences(
     for quantity, (text, power) in COMPARED.items():
         first, second = (
             _series(version, input_.catalogue.starts, quantity, power, names).assign_attrs(
-                long_name=text
+                long_name=text, units=_units(a, power)
             )
             for version, input_ in zip((a, b), ground.found, strict=True)
         )
@@ -118,7 +152,6 @@ def _series(
         values[..., [own.index(name) for name in names]],
         dims=(START, LEAD, PLACE),
         coords={START: starts, LEAD: result.frame.lead},
-        attrs={"units": _units(result, power)},
     )
 
 

@@ -88,11 +88,15 @@ def verify_block(block: Block) -> Verified:
     if variable.analyses is not None:
         truth = _analyses(variable.analyses, block, values)
         still = _persistence(variable.analyses, block, values.dtype)
-        found.sums = reduce_scores(values, truth, variable.reduction, points, still)
+        found.sums = reduce_scores(values, truth, variable.reduction, points, still, _moment(block))
         _put_aside(found.sums, context.scratch, variable, block, points)
     if variable.observed is not None:
         found.at_sites = _at_sites(values, variable, variable.observed, block, points)
     return found
+
+
+def _moment(block: Block) -> tuple[int, int]:
+    return block.start, block.leads[0]
 
 
 def magnitude(parts: list[np.ndarray]) -> np.ndarray:
@@ -166,6 +170,7 @@ def _at_sites(
             variable.at_sites,
             np.array([site]),
             still if np.isfinite(still).all() else None,
+            _moment(block),
         )
         found.add(part, slice(None), None)
     return found

@@ -253,7 +253,8 @@ class _Job:
         interval: dict[str, tuple[np.ndarray, np.ndarray]] = {}
         if source.kept:
             name = next(name for name in SKILLS if name in scores)
-            _, *ends = skill_interval(engine, lead.size, maps.size, confidence)
+            # Its value, too, from the starts that have both inputs.
+            scores[name], *ends = skill_interval(engine, lead.size, maps.size, confidence)
             interval[name] = (ends[0], ends[1])
         falls = map_falls(lead, scores, levels, interval)
         return VerifiedResult(
