@@ -64,10 +64,10 @@ def skill_limits(
     - ``horizon`` in lead units, where the score over all starts falls to ``above``, with
       ``status``; a number only where the status is ``reached``;
     - ``low``, ``high``: its interval; infinite beyond the run, the first lead where it is met
-      there, NaN where there are too few starts;
+      there, NaN where there are too few starts, at the last leads too;
     - ``significant_until``, where the lower end of the score's interval falls to ``above``, with
       ``significant_status``: ``at_start`` where the score is not significantly above it even at the
-      first lead.
+      first lead, ``no_data`` where it did not fall but the last lead could not be judged.
 
     Raises
     ------
@@ -150,7 +150,12 @@ def falls_of_curves(
     ([1.75], [1.5])
     """
     middle, lower, upper = (_fall(lead, curve, level, hold) for curve in (value, low, high))
-    return Falls(middle.time, _end(lower), _end(upper), _status(middle), lower.time, _status(lower))
+    # A curve that is unknown at the last lead says nothing of what lies beyond the run.
+    known, low_known, high_known = (np.isfinite(curve[-1]) for curve in (value, low, high))
+    return Falls(
+        middle.time, _end(lower, low_known), _end(upper, high_known), _status(middle, known),
+        lower.time, _status(lower, low_known),
+    )  # fmt: skip
 
 
 def _fall(lead: np.ndarray, values: np.ndarray, level: float, hold: float) -> Crossing:
@@ -158,15 +163,16 @@ def _fall(lead: np.ndarray, values: np.ndarray, level: float, hold: float) -> Cr
     return first_crossing(lead, -values, -level, hold)
 
 
-def _status(crossing: Crossing) -> np.ndarray:
-    status = np.where(np.isfinite(crossing.time), Status.reached, Status.beyond_run)
+def _status(crossing: Crossing, known: np.ndarray) -> np.ndarray:
+    open_end = np.where(known, Status.beyond_run, Status.no_data)
+    status = np.where(np.isfinite(crossing.time), Status.reached, open_end)
     status = np.where(crossing.at_start, Status.at_start, status)
     return np.where(crossing.points == 0, Status.no_data, status).astype(np.int8)
 
 
-def _end(crossing: Crossing) -> np.ndarray:
+def _end(crossing: Crossing, known: np.ndarray) -> np.ndarray:
     time = np.where(crossing.at_start, crossing.first, crossing.time)
-    return np.where((crossing.points > 0) & np.isnan(time), np.inf, time)
+    return np.where(known & np.isnan(time), np.inf, time)
 
 
 def _labelled(

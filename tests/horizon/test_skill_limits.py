@@ -135,3 +135,18 @@ def test_intervals_cover_and_claims_of_significance_are_kept(starts, correlation
     # A lead without skill is claimed in no more than five of a hundred, with the noise of 2000.
     beyond = float((found.low > end).mean())
     assert beyond < 0.05 + 0.02
+
+
+def test_what_was_not_judged_at_the_last_lead_is_not_beyond_the_run():
+    # Long leads with too few starts have a score but no interval, or neither.
+    from ensemble_horizon.horizon.skill_limits import falls_of_curves
+
+    value = np.array([[0.9, 0.9], [0.8, 0.8], [0.7, np.nan]])
+    low, high = value - 0.2, value + 0.05
+    low[2], high[2] = np.nan, np.nan
+    found = falls_of_curves(np.arange(3.0), value, low, high, level=0.0)
+    assert found.status.tolist() == [eh.Status.beyond_run, eh.Status.no_data]
+    assert found.significant_status.tolist() == [eh.Status.no_data, eh.Status.no_data]
+    assert np.isnan(found.low).all()
+    assert np.isnan(found.high).all()
+    assert np.isnan(found.significant_until).all()
