@@ -18,7 +18,7 @@ from ensemble_horizon.skill.crps import crps_of_departures, gaussian_crps
 from ensemble_horizon.skill.quantities import CLIMATOLOGY, CONTROL, PERSISTENCE, QUANTITIES
 from ensemble_horizon.skill.ranks import outside, ranks, sides
 from ensemble_horizon.spread.moments import member_deviations, variance_of
-from ensemble_horizon.spread.reduction import RegionWeights
+from ensemble_horizon.spread.reduction import RegionWeights, located
 
 # Points handled at once: members x slab x 4 bytes should stay inside a core's own cache.
 _SLAB = 8192
@@ -141,7 +141,7 @@ def reduce_scores(
         PERSISTENCE: persistence,
     }
     deviation = None if reduction.deviation is None else reduction.deviation[window]
-    places = [_Part(*_within(place, points)) for place in reduction.places]
+    places = [_part(place, points) for place in reduction.places]
     for lead in range(leads):
         block = _Lead(values[:, lead], analysis[lead], reduction, still, deviation)
         generator = np.random.default_rng(
@@ -260,13 +260,9 @@ class _Part:
         return position, weight
 
 
-def _within(place: RegionWeights, points: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
-    if points is None:
-        return place.index, place.weight
-    _, position, target = np.intersect1d(
-        points, place.index, assume_unique=True, return_indices=True
-    )
-    return position, place.weight[target]
+def _part(place: RegionWeights, points: np.ndarray | None) -> _Part:
+    position, target = located(place.index, points)
+    return _Part(position, place.weight[target])
 
 
 def _sum_up(

@@ -124,8 +124,8 @@ def reduce_block(
     summary = empty_summary(reduction, members, leads, size)
     parts = [_part(region, points) for region in reduction.regions]
     single = [
-        (summary.site_values, *_locate(reduction.sites, points)),
-        (summary.sample_values, *_locate(reduction.sample, points)),
+        (summary.site_values, *located(reduction.sites, points)),
+        (summary.sample_values, *located(reduction.sample, points)),
     ]
     for lead in range(leads):
         fields = [values[:, lead]]
@@ -165,7 +165,7 @@ class _Part:
 
 
 def _part(region: RegionWeights, points: np.ndarray | None) -> _Part:
-    position, target = _locate(region.index, points)
+    position, target = located(region.index, points)
     return _Part(position, region.weight[target])
 
 
@@ -257,7 +257,7 @@ def _note_health(summary: Summary, lead: int, values: np.ndarray) -> np.ndarray:
     return np.asarray(np.isfinite(low))
 
 
-def _locate(index: np.ndarray, points: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
+def located(index: np.ndarray, points: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
     """Positions of wanted points within a window, and which of the wanted they are."""
     if points is None:
         return index, np.arange(index.size)

@@ -22,6 +22,7 @@ from ensemble_horizon.skill.reduction import (
     empty_scores,
     reduce_scores,
 )
+from ensemble_horizon.spread.reduction import located
 
 
 @dataclass(frozen=True)
@@ -152,11 +153,7 @@ def _at_sites(
     points: np.ndarray | None,
 ) -> ScoreSums | None:
     """Scores against observations at the sites that lie in the window."""
-    where, which = observed.index, np.arange(observed.index.size)
-    if points is not None:
-        place = np.minimum(np.searchsorted(points, observed.index), points.size - 1)
-        which = np.flatnonzero(points[place] == observed.index)
-        where = place[which]
+    where, which = located(observed.index, points)
     if not which.size:
         return None
     leads = slice(*block.leads)

@@ -18,7 +18,7 @@ from ensemble_horizon.toys.perturbations.method import (
     Start,
     require_option,
     require_whole,
-    steps_in,
+    steps_of,
 )
 from ensemble_horizon.toys.perturbations.past import require_arrival, require_past
 
@@ -105,8 +105,7 @@ def bred_vectors(
     norms = system.norms()
     measure = norms[require_choice(norm, norms, "norm")]
     length = require_positive(amplitude, "amplitude")
-    step = system.step if dt is None else require_positive(dt, "dt")
-    steps = steps_in(require_positive(cycle, "cycle"), step, "cycle")
+    step, steps = steps_of(system, require_positive(cycle, "cycle"), dt, "cycle")
     random = np.random.default_rng(require_whole(seed, "seed", 0))
     shape = (*control.shape[:-1], require_whole(members, "members"), system.size)
     first = measure.restore(random.standard_normal(shape))
@@ -177,8 +176,7 @@ class BredVectors(Perturbation):
         amplitude = require_positive(start.amplitude or 0.0, "amplitude")
         cycle = require_option(self.cycle, "cycle", "the time from one rescaling to the next")
         cycles = require_whole(self.cycles, "cycles")
-        dt = start.system.step if self.dt is None else require_positive(self.dt, "dt")
-        steps = steps_in(cycle, dt, "cycle")
+        dt, steps = steps_of(start.system, cycle, self.dt, "cycle")
         span = cycles * steps * dt
         past = require_past(start, self.past, span)
         first = start.measure.restore(random.standard_normal((members, start.system.size)))

@@ -19,7 +19,7 @@ from ensemble_horizon.toys.perturbations.method import (
     require_option,
     require_whole,
     signed,
-    steps_in,
+    steps_of,
     vectors_needed,
 )
 from ensemble_horizon.toys.perturbations.past import require_arrival, require_past, tangent_run
@@ -102,8 +102,7 @@ def lyapunov_vectors(
     wanted = require_whole(count, "count")
     things = f"variables of {system.name}"
     require_at_most(wanted, system.size, "count", things, "take a smaller count")
-    step = system.step if dt is None else require_positive(dt, "dt")
-    steps = steps_in(require_positive(span, "span"), step, "span")
+    step, steps = steps_of(system, require_positive(span, "span"), dt, "span")
     random = np.random.default_rng(require_whole(seed, "seed", 0))
     return _carry(system, control, wanted, measure, steps, step, time, random)
 
@@ -167,8 +166,7 @@ class BackwardLyapunovVectors(Perturbation):
         system = start.system
         wanted = vectors_needed(members, self.count, system.size, system.name)
         span = require_option(self.span, "span", "the length of the run up to the start")
-        dt = system.step if self.dt is None else require_positive(self.dt, "dt")
-        steps = steps_in(span, dt, "span")
+        dt, steps = steps_of(system, span, self.dt, "span")
         past = require_past(start, self.past, span)
         begin = start.time - steps * dt
         # A stream of its own, so that the sums do not depend on how many vectors were carried.

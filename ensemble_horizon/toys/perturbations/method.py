@@ -90,6 +90,12 @@ def steps_in(duration: float, dt: float, argument: str) -> int:
     return steps
 
 
+def steps_of(system: System, duration: float, dt: float | None, argument: str) -> tuple[float, int]:
+    """Return the time step, that of ``system`` if none is given, and how many of it there are."""
+    step = system.step if dt is None else require_positive(dt, "dt")
+    return step, steps_in(duration, step, argument)
+
+
 def require_at_most(count: int, limit: int, argument: str, things: str, remedy: str) -> None:
     """Raise `ArgumentError` naming both numbers if ``count`` is above ``limit``."""
     if count > limit:

@@ -21,7 +21,7 @@ from ensemble_horizon.toys.perturbations.method import (
     require_option,
     require_whole,
     signed,
-    steps_in,
+    steps_of,
     vectors_needed,
 )
 from ensemble_horizon.toys.perturbations.past import tangent_run
@@ -109,8 +109,7 @@ def singular_vectors(
     wanted = require_whole(count, "count")
     things = f"variables of {system.name}"
     require_at_most(wanted, system.size, "count", things, "take a smaller count")
-    step = system.step if dt is None else require_positive(dt, "dt")
-    steps = steps_in(require_positive(window, "window"), step, "window")
+    step, steps = steps_of(system, require_positive(window, "window"), dt, "window")
     return _decompose(Start(system, control, time, measure, None), steps, step, wanted)
 
 
@@ -172,6 +171,6 @@ class SingularVectors(Perturbation):
         system = start.system
         wanted = vectors_needed(members, self.count, system.size, system.name)
         window = require_option(self.window, "window", "the time over which growth is counted")
-        dt = system.step if self.dt is None else require_positive(self.dt, "dt")
-        found = _decompose(start, steps_in(window, dt, "window"), dt, wanted)
+        dt, steps = steps_of(system, window, self.dt, "window")
+        found = _decompose(start, steps, dt, wanted)
         return combined(found.vectors, members, self.count, random)
