@@ -24,6 +24,7 @@ from ensemble_horizon.settings.tables import (
     ClimatologyTable,
     EngineTable,
     GrowthTable,
+    NightTable,
     ObservationsTable,
     ProductsTable,
     RegionTable,
@@ -174,6 +175,7 @@ def _known_keys(loc: tuple[int | str, ...]) -> list[str]:
         "observations": ObservationsTable,
         "verification": VerificationTable,
         "calibration": CalibrationTable,
+        "night": NightTable,
         "engine": EngineTable,
         "products": ProductsTable,
     }

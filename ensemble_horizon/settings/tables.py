@@ -177,6 +177,17 @@ class ProductsTable(Table):
     figures: bool = True
 
 
+class NightTable(Table):
+    """``[night]``: the nightly chain, its archive, and what "usual" is measured by."""
+
+    archive: str
+    usual_nights: Annotated[int, Field(ge=5)] = 30
+    season_days: Annotated[int, Field(ge=1, le=182)] = 45
+    verify_starts: Annotated[int, Field(ge=1)] = 30
+    wait_minutes: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 0.0
+    versions: str | None = None
+
+
 class Settings(Table):
     """A whole settings file. Relative paths count from the folder of the file."""
 
@@ -191,6 +202,7 @@ class Settings(Table):
     observations: dict[str, ObservationsTable] = Field(default_factory=dict)
     verification: VerificationTable = Field(default_factory=VerificationTable)
     calibration: CalibrationTable | None = None
+    night: NightTable | None = None
     engine: EngineTable = Field(default_factory=EngineTable)
     products: ProductsTable
 
