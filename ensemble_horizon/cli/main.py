@@ -15,6 +15,11 @@ COMMANDS = {
         "ensemble_horizon.cli.estimate",
         "Measure spread and growth, and place the limits.",
     ),
+    "brief": ("ensemble_horizon.cli.brief", "Make the briefing page and its sheet of paper."),
+    "nightly": (
+        "ensemble_horizon.cli.nightly",
+        "All of it for the newest start: survey to briefing and archive.",
+    ),
     "compare": ("ensemble_horizon.cli.compare", "Say what one version gains over another."),
     "verify": (
         "ensemble_horizon.cli.verify",

@@ -10,9 +10,14 @@ import numpy as np
 from scipy import special
 
 from ensemble_horizon.growth.laws import LAWS
-from ensemble_horizon.growth.selection import Selection
+from ensemble_horizon.growth.selection import NO_LAW, Selection
 from ensemble_horizon.horizon.chosen import chosen_groups, quantity_sensitivity
-from ensemble_horizon.horizon.criteria import Chance, Criterion, Levels
+from ensemble_horizon.horizon.criteria import (
+    Chance,
+    Criterion,
+    Levels,
+    SaturationFraction,
+)
 from ensemble_horizon.horizon.curve_growth import select_where_enough
 from ensemble_horizon.horizon.horizon import judge
 from ensemble_horizon.horizon.interval import (
@@ -47,6 +52,8 @@ class MapOptions:
         None leaves the intervals out.
     members : int
         Members that shares rest on.
+    fields : tuple of str
+        What is wanted of that which `limits_of_points` gives; all of it where nothing is named.
     """
 
     criteria: tuple[Criterion, ...]
@@ -55,6 +62,14 @@ class MapOptions:
     scale: str
     confidence: float | None
     members: int
+    fields: tuple[str, ...] = ()
+
+    @property
+    def rests_on_law(self) -> bool:
+        """Whether a law has to be fitted for what is wanted."""
+        told_without = {"horizon", "status", "threshold"}
+        plain = self.confidence is None and self.fields and told_without.issuperset(self.fields)
+        return not plain or any(isinstance(item, SaturationFraction) for item in self.criteria)
 
 
 @dataclass(frozen=True)
@@ -92,11 +107,17 @@ def limits_of_points(batch: PointBatch, options: MapOptions) -> dict[str, np.nda
         ``growth_rate``, ``doubling_time``, ``initial_error``, ``saturation`` (N,) float32,
         ``law`` (N,) int8 position in `LAW_NAMES`; ``horizon``, ``threshold`` and with intervals
         ``low``, ``high`` (C, N) float32, ``status`` (C, N) int8. With intervals also
-        ``growth_rate_low`` and so on, (N,) float32.
+        ``growth_rate_low`` and so on, (N,) float32. Only the fields of the options, where these
+        name any; laws are fitted, by far the most of the work, if any of those rests on them.
     """
     with np.errstate(invalid="ignore"):
         spread = np.sqrt(batch.variance.astype(np.float64))
-    selection = select_where_enough(batch.lead, spread.T, options.law, options.scale, MAP_TOLERANCE)
+    if options.rests_on_law:
+        selection = select_where_enough(
+            batch.lead, spread.T, options.law, options.scale, MAP_TOLERANCE
+        )
+    else:
+        selection = Selection((), np.full(spread.shape[1], NO_LAW), ())
     result = _growth_values(selection)
     if options.confidence is not None:
         result |= _rate_intervals(batch, spread, selection, options)
@@ -107,7 +128,7 @@ def limits_of_points(batch: PointBatch, options: MapOptions) -> dict[str, np.nda
     result.pop("exact_saturation")
     for name in rows[0]:
         result[name] = np.stack([row[name] for row in rows])
-    return result
+    return {name: result[name] for name in options.fields or result}
 
 
 def _growth_values(selection: Selection) -> dict[str, np.ndarray]:

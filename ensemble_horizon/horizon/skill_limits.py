@@ -10,6 +10,13 @@ make the significant lead later, and the horizon only more certain.
 
 The ends of the horizon's interval are where the two ends of the score's interval fall to the value:
 the inversion of the band at each lead, exact where neighbouring leads share their noise.
+
+A lead without a score, as where no analysis was there, is not stepped over in silence. Where the
+score lies above the value on both sides of such a gap it is taken to have stayed there, as between
+any two leads. Where it falls across the gap, nothing tells at which lead: the horizon is
+interpolated, but its interval reaches over the whole gap, the claim of significance ends at the
+last lead before it, and ``gap`` says how wide it is. Beyond the last lead that has a score nothing
+is stated.
 """
 
 from __future__ import annotations
@@ -65,6 +72,8 @@ def skill_limits(
       ``status``; a number only where the status is ``reached``;
     - ``low``, ``high``: its interval; infinite beyond the run, the first lead where it is met
       there, NaN where there are too few starts, at the last leads too;
+    - ``gap`` in lead units, between the two leads about the horizon that have a score, where leads
+      between them have none; NaN where there is no such gap. The interval reaches over it;
     - ``significant_until``, where the lower end of the score's interval falls to ``above``, with
       ``significant_status``: ``at_start`` where the score is not significantly above it even at the
       first lead, ``no_data`` where it did not fall but the last lead could not be judged.
@@ -129,6 +138,7 @@ class Falls(NamedTuple):
     status: np.ndarray
     significant_until: np.ndarray
     significant_status: np.ndarray
+    gap: np.ndarray
 
 
 def falls_of_curves(
@@ -152,10 +162,36 @@ def falls_of_curves(
     middle, lower, upper = (_fall(lead, curve, level, hold) for curve in (value, low, high))
     # A curve that is unknown at the last lead says nothing of what lies beyond the run.
     known, low_known, high_known = (np.isfinite(curve[-1]) for curve in (value, low, high))
+    before, after = _gap(lead, value, middle.time)
+    significant = _or(_gap(lead, low, lower.time)[0], lower.time)
+    latest = _or(_gap(lead, high, upper.time)[1], upper.time)
+    low_end = _end(lower, significant, low_known)
+    high_end = _end(upper, latest, high_known)
     return Falls(
-        middle.time, _end(lower, low_known), _end(upper, high_known), _status(middle, known),
-        lower.time, _status(lower, low_known),
+        middle.time,
+        np.where(np.isfinite(before), np.minimum(low_end, before), low_end),
+        np.where(np.isfinite(after), np.maximum(high_end, after), high_end),
+        _status(middle, known), significant, _status(lower, low_known), after - before,
     )  # fmt: skip
+
+
+def _gap(lead: np.ndarray, values: np.ndarray, time: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Leads (K,) with a value before and after a fall where one between has none, else NaN."""
+    known = np.isfinite(values)
+    position = np.arange(lead.size)[:, np.newaxis]
+    earlier = known & (lead[:, np.newaxis] < time)
+    later = known & (lead[:, np.newaxis] >= time)
+    before = np.where(earlier, position, -1).max(axis=0)
+    after = np.where(later, position, lead.size).min(axis=0)
+    open_ = (before >= 0) & (after < lead.size) & (after - before > 1)
+    return (
+        np.where(open_, lead[np.maximum(before, 0)], np.nan),
+        np.where(open_, lead[np.minimum(after, lead.size - 1)], np.nan),
+    )
+
+
+def _or(values: np.ndarray, others: np.ndarray) -> np.ndarray:
+    return np.where(np.isfinite(values), values, others)
 
 
 def _fall(lead: np.ndarray, values: np.ndarray, level: float, hold: float) -> Crossing:
@@ -170,8 +206,8 @@ def _status(crossing: Crossing, known: np.ndarray) -> np.ndarray:
     return np.where(crossing.points == 0, Status.no_data, status).astype(np.int8)
 
 
-def _end(crossing: Crossing, known: np.ndarray) -> np.ndarray:
-    time = np.where(crossing.at_start, crossing.first, crossing.time)
+def _end(crossing: Crossing, time: np.ndarray, known: np.ndarray) -> np.ndarray:
+    time = np.where(crossing.at_start, crossing.first, time)
     return np.where(known & np.isnan(time), np.inf, time)
 
 
@@ -193,6 +229,7 @@ def _labelled(
             falls.significant_until,
             f"lead at which the lower end of the interval of the {what}",
         ),
+        "gap": (falls.gap, f"time without a score within which the {what}"),
     }
     data: dict[str, Any] = {
         name: (rest, values.reshape(shape), {"long_name": text, "units": units})

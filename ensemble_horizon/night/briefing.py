@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -33,19 +33,46 @@ def estimate_and_write(
         if the folder cannot be written; nothing half-written is left.
     """
     found = estimate(settings, progress)
-    about = provenance(settings, found)
-    if settings.calibration is not None:
-        about["calibration"] = _CALIBRATED.format(settings.path(settings.calibration.file))
-    paths = write_products(
-        settings.path(settings.products.folder),
+    folder = settings.path(settings.products.folder)
+    return found, write_estimate(folder, settings, found, provenance(settings, found), progress)
+
+
+def write_estimate(
+    folder: Path,
+    settings: Settings,
+    found: Estimate,
+    about: Mapping[str, Any],
+    progress: Progress = silent,
+) -> list[Path]:
+    """Write all products of an estimate to a folder.
+
+    Parameters
+    ----------
+    about : mapping
+        See `products.netcdf.global_attributes`; a calibration in force is added.
+
+    Raises
+    ------
+    ProductError
+        if the folder cannot be written; nothing half-written is left.
+    """
+    note = calibration_note(settings)
+    return write_products(
+        folder,
         found.results,
-        about,
+        {**about, "calibration": note} if note else about,
         figures=settings.products.figures,
         ground=map_ground(settings),
         shares=shares_of_estimate(found.results),
         draw=drawn_by(settings.engine.workers, progress),
     )
-    return found, paths
+
+
+def calibration_note(settings: Settings) -> str:
+    """What a calibration in force means, in words; empty without one."""
+    if settings.calibration is None:
+        return ""
+    return _CALIBRATED.format(settings.path(settings.calibration.file))
 
 
 def drawn_by(workers: int | None, progress: Progress) -> Callable[[Sequence[Drawing]], None]:

@@ -12,6 +12,7 @@ import xarray as xr
 from ensemble_horizon.errors import ArgumentError, InputError, SettingsError
 from ensemble_horizon.horizon.criteria import Chance
 from ensemble_horizon.horizon.curve_limits import Curve
+from ensemble_horizon.night.geometry import Geometry, geometry_of
 from ensemble_horizon.night.mapping import FieldNoise, Fields
 from ensemble_horizon.night.variables import Places, Variable
 from ensemble_horizon.products.calibration_file import Calibration, read_calibration_file
@@ -97,7 +98,8 @@ def calibrated(
     InputError
         if the file is none.
     SettingsError
-        if it lacks a variable or a place, or leads as long as those of the runs.
+        if it lacks a variable or a place, or leads as long as those of the runs, or a place of the
+        same name lies elsewhere.
     """
     if settings.calibration is None:
         return {}
@@ -111,9 +113,81 @@ def calibrated(
             found=f"{', '.join(held) or 'none'} in {path}",
             remedy="write the file by verify --calibration with the same variables",
         )
+    _tell_own_starts([held[item.name] for item in variables], catalogue)
+    geometry = geometry_of(settings, catalogue, places)
+    for item in variables:
+        _require_same_places(held[item.name], item.name, places, geometry, path)
     return {
         item.name: _one(held[item.name], item, catalogue, places, path, maps) for item in variables
     }
+
+
+def _tell_own_starts(held: Sequence[Calibration], catalogue: Catalogue) -> None:
+    """Warn where factors are applied to starts that they were found from."""
+    known = {name for item in held for name in item.starts}
+    labels = [catalogue.start_label(number) for number in range(catalogue.starts.size)]
+    own = [label for label in labels if label in known]
+    if own:
+        log.warning(
+            "calibration: %d of %d starts (%s%s) are among those that the factors were found from: "
+            "their own errors are in the factors, so their calibrated limits prove nothing",
+            len(own), len(labels), own[0], "" if len(own) == 1 else f" to {own[-1]}",
+        )  # fmt: skip
+
+
+def _require_same_places(
+    held: Calibration, variable: str, places: Places, geometry: Geometry, path: str
+) -> None:
+    """Refuse factors of a place that has another's name.
+
+    Raises
+    ------
+    SettingsError
+    """
+    _require_places(held, variable, places, path)
+    if "box" not in held.places.coords:
+        log.warning(
+            "calibration of %s: %s is of an earlier version and does not say where its places lie, "
+            "nor which starts it was found from: only names are compared; write it again by "
+            "verify --calibration",
+            variable, path,
+        )  # fmt: skip
+        return
+    names = [name for name, _ in places.names]
+    chosen = held.places.sel({PLACE: names})
+    there = Geometry(chosen["box"].values, chosen["mean_position"].values)
+    differs = geometry.differs(there)
+    if not differs.any():
+        return
+    first = int(np.argmax(differs))
+    where, other = geometry.words(first), there.words(first)
+    if where == other:
+        other += ", on a grid that covers another part of it"
+    raise SettingsError(
+        "calibration.file",
+        expected=f"factors of {variable} for {names[first]} {where}",
+        found=f"{names[first]} {other} in {path}",
+        remedy="write the file by verify --calibration with the same regions and sites",
+    )
+
+
+def _require_places(held: Calibration, variable: str, places: Places, path: str) -> None:
+    """Refuse a file that lacks a place.
+
+    Raises
+    ------
+    SettingsError
+    """
+    names = [name for name, _ in places.names]
+    there = held.places[PLACE].values.tolist()
+    missing = [name for name in names if name not in there]
+    if missing:
+        raise SettingsError(
+            "calibration.file",
+            expected=f"factors of {variable} for {', '.join(missing)}",
+            found=f"factors for {', '.join(there)} in {path}",
+            remedy="write the file by verify --calibration with the same regions and sites",
+        )
 
 
 def _one(
@@ -125,15 +199,6 @@ def _one(
     maps: bool,
 ) -> Calibrated:
     names = [name for name, _ in places.names]
-    there = held.places[PLACE].values.tolist()
-    missing = [name for name in names if name not in there]
-    if missing:
-        raise SettingsError(
-            "calibration.file",
-            expected=f"factors of {variable.name} for {', '.join(missing)}",
-            found=f"factors for {', '.join(there)} in {path}",
-            remedy="write the file by verify --calibration with the same regions and sites",
-        )
     chosen = held.places.sel({PLACE: names})
     factors = _at_leads(chosen, catalogue, path)
     for name in [n for n, f in zip(names, factors.factor.T, strict=True) if np.isnan(f).all()]:

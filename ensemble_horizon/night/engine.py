@@ -10,17 +10,22 @@ from __future__ import annotations
 import multiprocessing
 import os
 import sys
+import tempfile
 import threading
 import warnings
-from collections.abc import Callable, Iterable, Iterator, Sized
+from collections.abc import Callable, Iterable, Iterator, Sequence, Sized
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
+from multiprocessing.process import BaseProcess
+from pathlib import Path
 from types import TracebackType
 from typing import Any, TypeVar
 
 from threadpoolctl import threadpool_limits
 
 from ensemble_horizon.errors import EnsembleHorizonError
+from ensemble_horizon.night.parcels import Parcel, pack, unpack
+from ensemble_horizon.runs.ahead import Mapper
 
 T = TypeVar("T")
 R = TypeVar("R")
@@ -30,6 +35,7 @@ _PRELOAD = ["ensemble_horizon.night.reading", "ensemble_horizon.horizon.map_limi
 _SMALL = 48 * 2**20  # bytes below which worker processes take longer to start than they save
 
 _shared: Any = None
+_folder: Path | None = None
 
 
 def usable_cores() -> int:
@@ -66,14 +72,18 @@ class Engine:
         self.workers = workers
         self._common = common
         self._pool: ProcessPoolExecutor | None = None
+        self._folder: tempfile.TemporaryDirectory[str] | None = None
 
     def __enter__(self) -> Engine:
         # One linear-algebra thread a process: matrices are small, and workers share the cores.
         self._limits = threadpool_limits(limits=1)
+        self._outer = _shared
         _install(self._common)
         if self.workers > 1:
             try:
-                self._pool = _start_pool(self.workers, self._common)
+                self._folder = _parcels_folder()
+                path = None if self._folder is None else Path(self._folder.name)
+                self._pool = _start_pool(self.workers, self._common, path)
             except BaseException:
                 self.__exit__(None, None, None)
                 raise
@@ -85,11 +95,14 @@ class Engine:
         error: BaseException | None,
         trace: TracebackType | None,
     ) -> None:
-        _install(None)
+        _install(self._outer)
         self._limits.restore_original_limits()
         if self._pool is not None:
             self._pool.shutdown(wait=True, cancel_futures=True)
             self._pool = None
+        if self._folder is not None:
+            self._folder.cleanup()
+            self._folder = None
 
     def run(self, function: Callable[[T], R], tasks: Iterable[T]) -> Iterator[tuple[int, R]]:
         """Yield ``(position of the task, result)`` as results come in.
@@ -115,15 +128,25 @@ class Engine:
                 remedy="lower engine.block_memory_mib or engine.workers and run again",
             ) from error
 
+    def run_in_order(self, function: Callable[[T], R], tasks: Iterable[T]) -> Iterator[R]:
+        """Yield the results in the order of the tasks; otherwise as `run`."""
+        early: dict[int, R] = {}
+        wanted = 0
+        for number, result in self.run(function, tasks):
+            early[number] = result
+            while wanted in early:
+                yield early.pop(wanted)
+                wanted += 1
+
     def _run_in_pool(
         self, pool: ProcessPoolExecutor, function: Callable[[T], R], tasks: Iterable[T]
     ) -> Iterator[tuple[int, R]]:
         waiting = iter(enumerate(tasks))
-        under_way: dict[Future[R], int] = {}
+        under_way: dict[Future[Parcel], int] = {}
 
         def submit_next() -> None:
             for number, task in waiting:
-                under_way[pool.submit(function, task)] = number
+                under_way[pool.submit(_run_packed, function, task)] = number
                 return
 
         for _ in range(2 * self.workers):
@@ -133,7 +156,18 @@ class Engine:
             for future in done:
                 number = under_way.pop(future)
                 submit_next()
-                yield number, future.result()
+                yield number, unpack(future.result())
+
+
+def headers_mapper(wanted: int | None) -> Mapper | None:
+    """What reads headers in worker processes, started when first needed; None with one worker."""
+    workers = usable_cores() if wanted is None else wanted
+
+    def run(function: Callable[[Any], Any], tasks: Sequence[Any]) -> Iterator[Any]:
+        with Engine(min(workers, len(tasks))) as engine:
+            yield from engine.run_in_order(function, tasks)
+
+    return run if workers > 1 else None
 
 
 def _install(common: Any) -> None:
@@ -141,17 +175,40 @@ def _install(common: Any) -> None:
     _shared = common
 
 
-def _start_worker(common: Any) -> None:
+def _start_worker(common: Any, folder: Path | None) -> None:
+    global _folder
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
     threadpool_limits(limits=1)
     _install(common)
+    _folder = folder
 
 
-def _start_pool(workers: int, common: Any) -> ProcessPoolExecutor:
+def _end_with(parent: BaseProcess) -> None:
+    """A worker whose parent was killed would wait for its next task for ever."""
+    parent.join()
+    os._exit(1)
+
+
+def _run_packed(function: Callable[[T], R], task: T) -> Parcel:
+    return pack(function(task), _folder)
+
+
+def _parcels_folder() -> tempfile.TemporaryDirectory[str] | None:
+    """Where results lie on their way; None where nothing can be written: they take the pipe."""
+    try:
+        return tempfile.TemporaryDirectory(prefix="ensemble-horizon-", ignore_cleanup_errors=True)
+    except OSError:
+        return None
+
+
+def _start_pool(workers: int, common: Any, folder: Path | None) -> ProcessPoolExecutor:
     context = multiprocessing.get_context(_start_method())
     if context.get_start_method() == "forkserver":
         context.set_forkserver_preload(_PRELOAD)
     pool = ProcessPoolExecutor(
-        workers, mp_context=context, initializer=_start_worker, initargs=(common,)
+        workers, mp_context=context, initializer=_start_worker, initargs=(common, folder)
     )
     with warnings.catch_warnings():
         # Python cannot tell idle threads of the linear-algebra library from threads that hold

@@ -16,7 +16,7 @@ from ensemble_horizon.horizon.map_limits import MapOptions
 from ensemble_horizon.night.calibrated import Calibrated, calibrated
 from ensemble_horizon.night.curves import curves_of_start, members_of_start, pool_starts
 from ensemble_horizon.night.engine import Engine, workers_for
-from ensemble_horizon.night.health import faults_of, require_enough, stopped_by
+from ensemble_horizon.night.health import faults_of, too_few, unusable
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import (
     Fields,
@@ -43,7 +43,6 @@ from ensemble_horizon.night.variables import (
     resolve_variable,
 )
 from ensemble_horizon.runs import Catalogue, Fault
-from ensemble_horizon.runs.faults import Effect
 from ensemble_horizon.runs.verdict import name_members
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.spread.kurtosis import pooled_kurtosis
@@ -180,11 +179,13 @@ class _Job:
                     engine, self.context, number, start, block_bytes, self._advance,
                     tuple(sorted(without)),
                 )  # fmt: skip
-            faults = faults_of(reading, self.catalogue, variable, start, without)
+            faults = faults_of(
+                reading.summary, reading.damage, self.catalogue, variable, start, without
+            )
             faults = [item for item in faults if item not in known]
             known += faults
             self.faults += faults
-            bad = self._unusable(faults) - without
+            bad = unusable(faults, self.catalogue, self.settings.runs.incomplete) - without
             without |= bad
             self._require_enough(reading.summary, variable, start, without)
             if not bad:
@@ -195,29 +196,15 @@ class _Job:
                 variable.name, self.catalogue.start_label(start), self._names(without),
             )  # fmt: skip
 
-    def _unusable(self, faults: list[Fault]) -> set[int]:
-        policy = self.settings.runs.incomplete
-        serious = [item for item in faults if item.effect is not Effect.note]
-        for item in serious:
-            log.warning(
-                "member %s, %s at %s: %s", item.member, item.variable, item.start, item.message
-            )
-        if serious and policy == "stop":
-            raise stopped_by(serious)
-        drop = [i for i in serious if policy == "drop" or i.effect is Effect.wrong]
-        return {
-            self.catalogue.members.index(item.member) for item in drop if item.member is not None
-        }
-
     def _require_enough(
         self, summary: Summary, variable: Variable, start: int, without: frozenset[int]
     ) -> None:
         label = self.catalogue.start_label(start)
         causes = [i for i in self.faults if (i.variable, i.start) == (variable.name, label)]
-        require_enough(
-            summary, f"{variable.name} at {label}", causes, without,
-            self.settings.runs.minimum_members,
-        )  # fmt: skip
+        least = self.settings.runs.minimum_members
+        refusal = too_few(summary, f"{variable.name} at {label}", causes, without, least)
+        if refusal is not None:
+            raise refusal
 
     def _names(self, positions: frozenset[int]) -> str:
         return name_members([self.catalogue.members[i] for i in sorted(positions)])
@@ -237,6 +224,7 @@ class _Job:
             scale=growth.scale,
             confidence=self.plan.confidence,
             members=members,
+            fields=self.plan.fields,
         )
         if variable.name in self.factors:
             fields = self.factors[variable.name].fields(fields, self.layout)

@@ -2,23 +2,27 @@
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Sequence
 
 import numpy as np
 
 from ensemble_horizon.errors import InputError
-from ensemble_horizon.night.reading import Damage, Reading
+from ensemble_horizon.night.reading import Damage
 from ensemble_horizon.night.variables import Variable
 from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.runs.faults import Effect, Fault
 from ensemble_horizon.runs.report import and_more, name_leads
-from ensemble_horizon.spread.reduction import Summary
+from ensemble_horizon.spread.reduction import MemberFields
 
 Found = tuple[str, int, int | None, str]
 
+log = logging.getLogger(__name__)
+
 
 def faults_of(
-    reading: Reading,
+    summary: MemberFields,
+    damage: Damage,
     catalogue: Catalogue,
     variable: Variable,
     start: int,
@@ -28,21 +32,22 @@ def faults_of(
 
     Parameters
     ----------
-    reading : Reading
+    summary : MemberFields
+    damage : Damage
+        Fields that could not be read.
     variable : Variable
         Its name in the settings, its units and its plausible range go into the messages.
     without : frozenset of int
         Members by position that were left out of the reading.
     """
-    summary = reading.summary
     here = np.isfinite(summary.low)
     held = np.ones_like(here)
     for part in variable.parts:
         held &= catalogue.present(part)[start]
     held[:, list(without)] = False
-    for place in reading.damage:
+    for place in damage:
         held[place] = False
-    found = _unreadable(reading.damage, catalogue.leads)
+    found = _unreadable(damage, catalogue.leads)
     found += _missing_cells(summary, held, here, catalogue.leads)
     found += _implausible(summary, variable, catalogue.leads)
     found += _identical(summary, here, catalogue.members)
@@ -59,7 +64,31 @@ def faults_of(
     ]
 
 
-def stopped_by(serious: Sequence[Fault]) -> InputError:
+def unusable(faults: Sequence[Fault], catalogue: Catalogue, policy: str) -> frozenset[int]:
+    """Members by position that are not to be used, told with their faults.
+
+    Parameters
+    ----------
+    policy : str
+        ``runs.incomplete`` of the settings.
+
+    Raises
+    ------
+    InputError
+        if the policy is to stop at the first fault.
+    """
+    serious = [item for item in faults if item.effect is not Effect.note]
+    for item in serious:
+        log.warning("member %s, %s at %s: %s", item.member, item.variable, item.start, item.message)
+    if serious and policy == "stop":
+        raise _stopped_by(serious)
+    drop = [i for i in serious if policy == "drop" or i.effect is Effect.wrong]
+    return frozenset(
+        catalogue.members.index(item.member) for item in drop if item.member is not None
+    )
+
+
+def _stopped_by(serious: Sequence[Fault]) -> InputError:
     """The refusal of runs that must be without faults."""
     first = serious[0]
     return InputError(
@@ -70,20 +99,24 @@ def stopped_by(serious: Sequence[Fault]) -> InputError:
     )
 
 
-def require_enough(
-    summary: Summary, what: str, faults: Sequence[Fault], without: frozenset[int], least: int
-) -> None:
-    """Refuse a start that is left with fewer than ``least`` members, and say what took them."""
+def too_few(
+    summary: MemberFields,
+    what: str,
+    faults: Sequence[Fault],
+    without: frozenset[int],
+    least: int,
+) -> InputError | None:
+    """The refusal of a start that is left with fewer than ``least`` members, and what took them."""
     usable = np.isfinite(summary.low).any(axis=0)
     usable[list(without)] = False
     left = int(usable.sum())
     if left >= least:
-        return
+        return None
     causes = [i for i in faults if i.effect is not Effect.note]
     because = ""
     if causes:
         because = f"; member {causes[0].member}: {causes[0].message}{and_more(len(causes) - 1)}"
-    raise InputError(
+    return InputError(
         what,
         expected=f"at least {least} usable members (runs.minimum_members)",
         found=f"{left}{because}",
@@ -101,7 +134,7 @@ def _unreadable(damage: Damage, leads: np.ndarray) -> list[Found]:
 
 
 def _missing_cells(
-    summary: Summary, held: np.ndarray, here: np.ndarray, leads: np.ndarray
+    summary: MemberFields, held: np.ndarray, here: np.ndarray, leads: np.ndarray
 ) -> list[Found]:
     """Members with more gaps than the mask that most members share.
 
@@ -131,7 +164,7 @@ def _missing_cells(
     return found
 
 
-def _implausible(summary: Summary, variable: Variable, leads: np.ndarray) -> list[Found]:
+def _implausible(summary: MemberFields, variable: Variable, leads: np.ndarray) -> list[Found]:
     if variable.plausible is None:
         return []
     lowest, highest = variable.plausible
@@ -151,7 +184,9 @@ def _implausible(summary: Summary, variable: Variable, leads: np.ndarray) -> lis
     return found
 
 
-def _identical(summary: Summary, here: np.ndarray, labels: tuple[int | str, ...]) -> list[Found]:
+def _identical(
+    summary: MemberFields, here: np.ndarray, labels: tuple[int | str, ...]
+) -> list[Found]:
     """Members whose sampled values equal those of an earlier member at every common lead."""
     values, low, high = summary.sample_values, summary.low, summary.high
     found: list[Found] = []

@@ -10,6 +10,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from ensemble_horizon.errors import InputError, SettingsError
+from ensemble_horizon.night.engine import headers_mapper
 from ensemble_horizon.night.variables import (
     LATITUDES,
     levels_of,
@@ -17,6 +18,7 @@ from ensemble_horizon.night.variables import (
     source_names,
 )
 from ensemble_horizon.runs import Catalogue, Fault, SurveyReport, read_catalogue, survey_runs
+from ensemble_horizon.runs.files import FoundFile
 from ensemble_horizon.runs.units import converter
 from ensemble_horizon.runs.verdict import fault_lines
 from ensemble_horizon.settings import Settings
@@ -46,15 +48,34 @@ class Input:
         return replace(self, catalogue=self.catalogue.subset(starts=chosen))
 
 
-def open_input(settings: Settings, progress: Callable[[int, int], None] | None = None) -> Input:
+def open_input(
+    settings: Settings,
+    progress: Callable[[int, int], None] | None = None,
+    files: Sequence[FoundFile] | None = None,
+) -> Input:
     """Read headers and leave out what the settings do not want used.
+
+    Parameters
+    ----------
+    files : sequence of FoundFile, optional
+        Those to look at, of all that the settings name.
 
     Raises
     ------
     InputError
         if the survey of the headers says that the runs are not usable.
     """
-    catalogue = choose_starts(settings, find_runs(settings, progress))
+    return usable_input(settings, choose_starts(settings, find_runs(settings, progress, files)))
+
+
+def usable_input(settings: Settings, catalogue: Catalogue) -> Input:
+    """Leave out what the settings do not want used, of headers that have been read.
+
+    Raises
+    ------
+    InputError
+        if the survey of the headers says that the runs are not usable.
+    """
     report = survey(settings, catalogue, content=False)
     if not report.usable:
         raise _not_usable(settings, report)
@@ -102,15 +123,20 @@ def _warn(settings: Settings, report: SurveyReport) -> None:
         )  # fmt: skip
 
 
-def find_runs(settings: Settings, progress: Callable[[int, int], None] | None = None) -> Catalogue:
-    """The catalogue of all files that the settings name."""
+def find_runs(
+    settings: Settings,
+    progress: Callable[[int, int], None] | None = None,
+    files: Sequence[FoundFile] | None = None,
+) -> Catalogue:
+    """The catalogue of all files that the settings name, or of some that were found before."""
     try:
         catalogue = read_catalogue(
-            settings.run_files(),
+            settings.run_files() if files is None else files,
             variables=source_names(settings),
             level=levels_of(settings) or None,
             lagged=settings.runs.lagged,
             progress=progress,
+            mapper=headers_mapper(settings.engine.workers),
         )
     except InputError as error:
         raise _with_keys(settings, error) from error

@@ -43,7 +43,8 @@ class MapPlan:
     confidence : float or None
         Of the intervals at grid points; None without intervals.
     fields : tuple of str
-        Names of the fields that are kept; all of them where none is named.
+        Names of the fields that are kept; all of them where none is named. Laws are fitted only if
+        one of these rests on them.
     """
 
     mode: Literal["each", "pooled", "none"]

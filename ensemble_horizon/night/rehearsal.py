@@ -190,7 +190,7 @@ class _Series:
         }
         if not target.is_file():
             what = "climatology of the truth"
-            write_climatology(target, self._job.frame, deviation, self._span, what)
+            write_climatology(target, self._job.frame, deviation, self._mean, self._span, what)
 
     @property
     def _every(self) -> int:

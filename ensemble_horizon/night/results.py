@@ -200,6 +200,7 @@ def criterion_coords(frame: Frame) -> dict[str, tuple[str, list[str]]]:
     return {
         CRITERION: (CRITERION, list(frame.criteria)),
         "criterion_kind": (CRITERION, [item.kind for item in criteria]),
+        "criterion_rule": (CRITERION, [item.label for item in criteria]),
         "threshold_units": (CRITERION, [item.threshold_units(frame.units) for item in criteria]),
     }
 

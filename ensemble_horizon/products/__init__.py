@@ -29,6 +29,8 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``gains_table``    ``versions.csv`` and the table for the terminal
 ``difference_table`` ``score_differences.csv`` and the table for the terminal
 ``gains_file``     ``versions.nc``
+``difference_file`` differences of scores in it
+``difference_figure`` the same by lead, with intervals
 ``gains_figure``   hours gained with intervals
 ``gain_maps``      maps of hours gained
 ``share_table``    ``time_to_limit.csv``
@@ -40,6 +42,9 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``score_panel``    one panel of scores by lead
 ``score_figures``  scores by lead, and ranks
 ``score_folder``   all products of a verification together
+``sealed``         files of an archive: sealed, and set aside where they are broken
+``score_sums``     sums of the scores of one start, filed
+``score_sentences`` past scores in a sentence or two
 ``calibration_file`` factors from spread to error
 ``run_archive``    run files and analyses of a rehearsal
 ``archive_folder`` what stands where in its archive

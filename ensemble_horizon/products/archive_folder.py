@@ -11,7 +11,7 @@ from typing import Any
 
 from ensemble_horizon.checks import require_choice
 from ensemble_horizon.errors import ProductError
-from ensemble_horizon.products.run_archive import FieldFrame, member_name
+from ensemble_horizon.products.run_archive import FieldFrame, mean_name, member_name
 from ensemble_horizon.products.writing import disk_errors, written_whole
 
 MANIFEST = "rehearsal.json"
@@ -142,8 +142,10 @@ def estimate_settings(
         chosen = _criteria(criteria, name)
         lines += ["", f"[variables.{name}]", source, f"units = {json.dumps(units)}"]
         lines += [f"criteria = [{', '.join(chosen)}]"]
-    if criteria.get("climatology_fraction") and set(variables) != {_POSITION}:
+    means = [f"{name} = {json.dumps(mean_name(name))}" for name in variables if name != _POSITION]
+    if means:
         lines += ["", "[climatology]", f"file = {json.dumps(CLIMATOLOGY)}"]
+        lines += [f"mean_names = {{ {', '.join(means)} }}"]
     lines += ["", "[analyses]", f"files = {json.dumps(ANALYSES)}"]
     lines += ["", "[products]", f"folder = {json.dumps(f'products_{version}')}"]
     lines += ["coastline = false  # the place is invented"]

@@ -22,6 +22,7 @@ from ensemble_horizon.vocabulary import (
     LEAD,
     LONGITUDE,
     PLACE,
+    START,
 )
 
 TITLE = "Factors from ensemble spread to forecast error"
@@ -29,6 +30,10 @@ KIND = "ensemble_horizon_calibration"
 _OTHER = "lead_other"
 _FIELDS = ("factor", "low", "high", "log_variance", "starts")
 _NOISE = "noise_correlation"
+_WHERE = {
+    "box": ("south, north, west and east of a region; a site has its position twice", "degrees"),
+    "mean_position": ("weighted mean of the grid points of a region on the unit sphere", "1"),
+}
 
 
 @dataclass(frozen=True)
@@ -38,11 +43,15 @@ class Calibration:
     Parameters
     ----------
     places : Dataset (lead, place) from `calibration_factor`
+        With coordinates ``box`` (place, edge) and ``mean_position`` (place, axis), where the
+        places lie; a file of an earlier version has none.
     cells : Dataset (lead, cell) of coarse cells of the grid, or None
+    starts : labels of the starts that the factors were found from
     """
 
     places: xr.Dataset
     cells: xr.Dataset | None = None
+    starts: tuple[str, ...] = ()
 
 
 def write_calibration_file(
@@ -81,6 +90,10 @@ def write_calibration_file(
             put(group, "place_name", (PLACE,), names, {"long_name": "region or site"})
             put(group, "against", (PLACE,), found.places["against"].values.astype(str),
                 {"long_name": "what the forecasts were held against"})  # fmt: skip
+            _put_where(group, found.places)
+            group.createDimension(START, len(found.starts))
+            put(group, "start_name", (START,), np.array(found.starts, dtype=str),
+                {"long_name": "starts that the factors were found from"})  # fmt: skip
             if found.cells is not None:
                 _put_part(group, found.cells, CELL, "cell_")
                 for key in (LATITUDE, LONGITUDE):
@@ -132,6 +145,16 @@ def _put_part(group: netCDF4.Group, data: xr.Dataset, dimension: str, prefix: st
     put(group, f"{prefix}{_NOISE}", (LEAD, _OTHER), data[_NOISE].values, _kept(data[_NOISE]))
 
 
+def _put_where(group: netCDF4.Group, places: xr.Dataset) -> None:
+    for name, (text, units) in _WHERE.items():
+        if name not in places.coords:
+            continue
+        dimension = str(places[name].dims[1])
+        group.createDimension(dimension, places.sizes[dimension])
+        put(group, name, (PLACE, dimension), places[name].values.astype(float),
+            {"long_name": text, "units": units})  # fmt: skip
+
+
 def _kept(field: xr.DataArray) -> dict[str, Any]:
     return {"long_name": field.attrs.get("long_name"), "units": field.attrs.get("units", "1")}
 
@@ -143,13 +166,22 @@ def _read_group(group: netCDF4.Group) -> Calibration:
     names = np.asarray(group["place_name"][:], dtype=str)
     against = np.asarray(group["against"][:], dtype=str)
     places = places.assign_coords({PLACE: names, "against": (PLACE, against)})
+    where: dict[str, Any] = {
+        name: (group[name].dimensions, np.ma.filled(group[name][:], np.nan))
+        for name in _WHERE
+        if name in group.variables
+    }
+    places = places.assign_coords(where)
+    starts: tuple[str, ...] = ()
+    if "start_name" in group.variables:
+        starts = tuple(str(name) for name in group["start_name"][:])
     if CELL not in group.dimensions:
-        return Calibration(places)
+        return Calibration(places, None, starts)
     cells = _read_part(group, CELL, "cell_", lead, units)
-    where = {
+    middles = {
         key: (CELL, np.ma.filled(group[f"cell_{key}"][:], np.nan)) for key in (LATITUDE, LONGITUDE)
     }
-    return Calibration(places, cells.assign_coords(where))
+    return Calibration(places, cells.assign_coords(middles), starts)
 
 
 def _read_part(

@@ -23,9 +23,9 @@ from ensemble_horizon.products.netcdf import (
     open_new,
     put,
     split_thresholds,
-    valid_name,
     verify_file,
 )
+from ensemble_horizon.products.origin import POOLED, note, prefix_of, put_criteria
 from ensemble_horizon.products.wording import is_pooled
 from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import COORDINATE_ATTRIBUTES, CRITERION, LEAD, PLACE, START
@@ -74,12 +74,14 @@ def write_horizon_file(
             file.setncatts(global_attributes(TITLE, provenance))
             taken = _put_axes(file, axes, single)
             for part, whole in zip(single, curves, strict=True):
-                prefix = valid_name(str(part.attrs.get("variable", "variable")), taken)
-                _put_criteria(file, part, prefix)
+                fields = split_thresholds(part)
+                prefix = prefix_of(str(part.attrs.get("variable", "variable")), taken, fields)
+                put_criteria(file, part, prefix)
+                _note_positions(file, part, prefix, axes)
                 _put_fields(file, _spread_out(part, axes), prefix)
                 pooled = _only_pooled(whole)
                 if pooled is not None:
-                    _put_fields(file, _spread_out(pooled, axes), f"{prefix}_pooled", pooled=True)
+                    _put_fields(file, _spread_out(pooled, axes), prefix, pooled=True)
             sizes = {str(name): axis.size for name, axis in axes.items()}
         verify_file(neighbour, sizes)
     return target
@@ -157,6 +159,15 @@ def _put_axes(
     put(file, LEAD, (LEAD,), lead.values.astype(float), lead_attributes(lead))
     put(file, "place_name", (PLACE,), axes[PLACE].values, {"long_name": "region or site"})
     taken = {START, PLACE, LEAD, "place_name"}
+    labels = {
+        start: label
+        for part in parts
+        for start, label in zip(part[START].values.tolist(), start_labels(part), strict=True)
+    }
+    if any(labels.values()):
+        texts = np.array([labels[start] for start in axes[START].values.tolist()])
+        put(file, "start_label", (START,), texts, {"long_name": "start as text"})
+        taken.add("start_label")
     known: dict[str, dict[Any, Any]] = {}
     for part in parts:
         for name in ("place_kind", "latitude", "longitude"):
@@ -173,26 +184,28 @@ def _put_axes(
     return taken
 
 
-def _put_criteria(file: netCDF4.Dataset, part: xr.Dataset, prefix: str) -> None:
-    dimension = f"{prefix}_criterion"
-    file.createDimension(dimension, part.sizes[CRITERION])
-    about = f"criterion for {part.attrs.get('long_name', prefix)}"
-    put(file, f"{dimension}_name", (dimension,), part[CRITERION].values, {"long_name": about})
-    for name in ("criterion_kind", "threshold_units"):
-        if name in part:
-            text = "kind of criterion" if name == "criterion_kind" else "units of its threshold"
-            put(file, f"{prefix}_{name}", (dimension,), part[name].values, {"long_name": text})
+def _note_positions(
+    file: netCDF4.Dataset, part: xr.Dataset, prefix: str, axes: Mapping[str, xr.DataArray]
+) -> None:
+    """Note where along the shared axes a variable stands that has not all of them."""
+    for name, axis in axes.items():
+        places = axis.values.tolist()
+        positions = [places.index(value) for value in part[name].values.tolist()]
+        if positions != list(range(axis.size)):
+            note(file, prefix, f"{name}_positions", positions)
 
 
 def _put_fields(
     file: netCDF4.Dataset, part: xr.Dataset, prefix: str, *, pooled: bool = False
 ) -> None:
-    own = valid_name(prefix.removesuffix("_pooled")) if pooled else prefix
+    own, prefix = prefix, f"{prefix}_{POOLED}" if pooled else prefix
     about = str(part.attrs.get("long_name", own)) + (" (all starts pooled)" if pooled else "")
     lead_units = str(part[LEAD].attrs.get("units", file[LEAD].units))
     labels = [name for name in ("place_name", "place_kind") if name in file.variables]
     locations = [name for name in ("latitude", "longitude") if name in file.variables]
-    for name, field in split_thresholds(part).items():
+    fields = split_thresholds(part)
+    note(file, own, "pooled_fields" if pooled else "fields", " ".join(fields))
+    for name, field in fields.items():
         dimensions = tuple(f"{own}_{d}" if d == CRITERION else str(d) for d in field.dims)
         attributes = field_attributes(
             name, field.attrs, about, str(part.attrs.get("units", "1")), lead_units

@@ -22,7 +22,8 @@ DIFFERENCE_COLUMNS = {
     "variable": "name of the variable in the settings of a",
     "place": "region or site",
     "against": "analysis or observation",
-    "score": "crps (fair CRPS) or squared_error (of the ensemble mean); both are better when small",
+    "score": "crps (fair CRPS) or squared_error (of the mean of as many members in both); both are "
+    "better when small",
     "lead": "lead time",
     "lead_units": "units of lead",
     "starts": "common starts at which both have a value",
@@ -32,6 +33,8 @@ DIFFERENCE_COLUMNS = {
     "low": "lower end of its interval, successive starts not taken as independent",
     "high": "upper end",
     "p_value": "against no difference, each lead by itself",
+    "adjusted_p_value": "the same for the number of rows (false discovery rate)",
+    "survives": "yes where adjusted_p_value is at most 0.1",
     "units": "units of a, b, difference, low and high",
     "reason": "given, or why there is no interval",
 }
@@ -104,7 +107,8 @@ def _cells(one: xr.Dataset, part: xr.Dataset) -> list[str]:
         str(one[SCORE].values), cell(float(one[LEAD])), str(part.attrs["lead_units"]),
         str(int(one["starts"])),
         *(cell(float(one[name])) for name in ("mean_a", "mean_b", "difference")),
-        *(cell(float(one[name])) for name in (*_ENDS, "p_value")),
+        *(cell(float(one[name])) for name in (*_ENDS, "p_value", "adjusted_p_value")),
+        ("yes" if one["survives"] else "no") if np.isfinite(one["adjusted_p_value"]) else "",
         str(one["score_units"].values), _REASONS[int(one["reason"])],
     ]  # fmt: skip
 

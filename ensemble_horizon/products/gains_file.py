@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -11,6 +11,7 @@ import netCDF4
 import numpy as np
 import xarray as xr
 
+from ensemble_horizon.products.difference_file import put_differences, put_score_leads
 from ensemble_horizon.products.gains import VersionsResult
 from ensemble_horizon.products.map_grid import FileGrids
 from ensemble_horizon.products.netcdf import (
@@ -22,7 +23,7 @@ from ensemble_horizon.products.netcdf import (
     verify_file,
 )
 from ensemble_horizon.products.writing import written_whole
-from ensemble_horizon.vocabulary import CRITERION, LATITUDE, LONGITUDE, PLACE
+from ensemble_horizon.vocabulary import CRITERION, LATITUDE, LEAD, LONGITUDE, PLACE
 
 TITLE = "Lead time gained by one version of a model over another"
 
@@ -32,13 +33,16 @@ def write_gains_file(
     results: Iterable[VersionsResult],
     provenance: Mapping[str, Any],
     notes: Mapping[str, Iterable[str]],
+    scores: Sequence[xr.Dataset] = (),
 ) -> Path:
     """Write ``versions.nc``.
 
     Every field carries the name of its variable, such as ``wind_speed_gained(place,
     wind_speed_criterion)``; those of maps begin with ``wind_speed_map_``, as in
     ``wind_speed_map_gained(wind_speed_criterion, latitude, longitude)``. Places are shared by all
-    variables. ``survives`` is a flag: which gains survive the control of false discoveries.
+    variables. ``survives`` is a flag: which gains survive the control of false discoveries. Where
+    there are differences of scores, they are ``wind_speed_crps_difference(wind_speed_scored_place,
+    lead)`` and so on, with interval and p-value.
 
     Parameters
     ----------
@@ -50,6 +54,8 @@ def write_gains_file(
         See `netcdf.global_attributes`.
     notes : mapping of heading to lines
         Become attributes.
+    scores : sequence of Dataset (score, lead, place)
+        Differences of scores, one per variable that has any.
 
     Raises
     ------
@@ -73,20 +79,27 @@ def write_gains_file(
             put(file, "place_name", (PLACE,), places, {"long_name": "region or site"})
             kinds = parts[0].places["place_kind"].values
             put(file, "place_kind", (PLACE,), kinds, {"long_name": "kind of place"})
-            taken = {PLACE, "place_name", "place_kind"}
+            taken = {PLACE, "place_name", "place_kind", LEAD}
             grids = FileGrids(file, taken)
-            for part in parts:
-                _put_variable(file, part, taken, grids)
+            prefixes = {
+                str(part.places.attrs["variable"]): _put_variable(file, part, taken, grids)
+                for part in parts
+            }
+            if scores:
+                put_score_leads(file, scores[0][LEAD])
+            for one in scores:
+                put_differences(file, one, prefixes[str(one.attrs["variable"])], taken)
         verify_file(neighbour, {PLACE: places.size})
     return target
 
 
 def _put_variable(
     file: netCDF4.Dataset, part: VersionsResult, taken: set[str], grids: FileGrids
-) -> None:
+) -> str:
+    """Write the gains of one variable, and return how its name reads in the file."""
     places = part.places
     prefix = valid_name(str(places.attrs["variable"]), taken)
-    taken.add(f"{prefix}_map")
+    on_maps = valid_name(f"{prefix}_map", taken)
     dimension = f"{prefix}_{CRITERION}"
     file.createDimension(dimension, places.sizes[CRITERION])
     about = f"criterion for {places.attrs['long_name']}"
@@ -102,7 +115,8 @@ def _put_variable(
         beside = [of_grid[key] for key in (LATITUDE, LONGITUDE) if key in of_grid]
         beside = [name for name in beside if name not in [of_grid[key] for key in space]]
         near = " ".join([*beside, f"{dimension}_name"])
-        _put_fields(file, maps, f"{prefix}_map", {**of_grid, CRITERION: dimension}, near)
+        _put_fields(file, maps, on_maps, {**of_grid, CRITERION: dimension}, near)
+    return prefix
 
 
 def _put_fields(

@@ -25,9 +25,9 @@ from ensemble_horizon.products.netcdf import (
     open_new,
     put,
     split_thresholds,
-    valid_name,
     verify_file,
 )
+from ensemble_horizon.products.origin import POOLED, note, prefix_of, put_criteria
 from ensemble_horizon.products.wording import is_pooled
 from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import (
@@ -156,8 +156,12 @@ class MapFile:
 
     def complete(self) -> None:
         """Fill the starts that some variable lacks, so that every cell has a status."""
+        slots = list(self._slots.values())
         for layout in self._layouts.values():
-            for slot in [] if layout.pooled else self._slots.values():
+            own = [slot for slot in slots if (layout.prefix, slot) in self._written]
+            if not layout.pooled and own != slots:
+                note(self._file, layout.prefix, "start_positions", own)
+            for slot in [] if layout.pooled else slots:
                 if (layout.prefix, slot) in self._written:
                     continue
                 for field, missing in layout.missing.items():
@@ -191,7 +195,7 @@ class MapFile:
         names = self._grids.names(maps, space)
         near = [names[key] for key in (LATITUDE, LONGITUDE) if key in names and key not in space]
         layout = _Layout(
-            prefix=f"{prefix}_pooled" if pooled else prefix,
+            prefix=f"{prefix}_{POOLED}" if pooled else prefix,
             pooled=pooled,
             dimensions={CRITERION: f"{prefix}_{CRITERION}", **{key: names[key] for key in space}},
             space=space,
@@ -199,19 +203,19 @@ class MapFile:
             missing={},
         )
         fields = split_thresholds(one if pooled else maps)
+        which = "pooled_" if pooled else ""
+        note(self._file, prefix, f"{which}fields", " ".join(fields))
+        pairs = [f"{key} {known}" for key, known in names.items()]
+        note(self._file, prefix, f"{which}grid", " ".join(pairs))
+        note(self._file, prefix, f"{which}space", " ".join(space))
         for key, field in fields.items():
             self._define_field(layout, key, field, maps, one)
         return layout
 
     def _criteria(self, name: str, maps: xr.Dataset) -> str:
         """Write the names of the criteria of a variable; return the variable's prefix."""
-        prefix = valid_name(name, self._taken)
-        self._taken.add(f"{prefix}_pooled")
-        criterion = f"{prefix}_{CRITERION}"
-        self._file.createDimension(criterion, maps.sizes[CRITERION])
-        labels = np.array([str(label) for label in maps[CRITERION].values])
-        about = f"criterion for {maps.attrs.get('long_name', name)}"
-        put(self._file, f"{criterion}_name", (criterion,), labels, {"long_name": about})
+        prefix = prefix_of(name, self._taken, split_thresholds(maps))
+        put_criteria(self._file, maps, prefix)
         return prefix
 
     def _define_field(

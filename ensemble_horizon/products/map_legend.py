@@ -103,8 +103,10 @@ def legend_rows(
     return rows
 
 
-def draw_legend(sheet: Sheet, rows: list[list[tuple[float, Status, str]]], top: float) -> None:
-    """Draw the rows of the legend, the first of them at ``top`` pixels."""
+def draw_legend(
+    sheet: Sheet, rows: list[list[tuple[float, Status, str]]], top: float, left: float = 20
+) -> None:
+    """Draw the rows of the legend, the first of them at ``left``, ``top`` pixels."""
     for number_of_row, row in enumerate(rows):
         for x, status, words in row:
             upper = top + 24 * number_of_row
@@ -113,8 +115,8 @@ def draw_legend(sheet: Sheet, rows: list[list[tuple[float, Status, str]]], top: 
                 picture = ramp(28)[columns]
             else:
                 picture = status_colours(status, rows_of_swatch, columns)
-            sheet.swatch(20 + x, upper, picture)
-            sheet.text(20 + x + 34, upper + 1, words, size=8.5)
+            sheet.swatch(left + x, upper, picture)
+            sheet.text(left + x + 34, upper + 1, words, size=8.5)
 
 
 def map_notes(content: MapField, width: float) -> list[str]:

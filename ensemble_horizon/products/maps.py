@@ -85,7 +85,7 @@ def draw_horizon_map(
         require_dimension(maps, dimension, "maps")
     one = maps.isel({START: start, CRITERION: criterion}).compute()
     view = view or map_view(one["horizon"])
-    content = _field(one, members, last_lead)
+    content = map_content(one, members, last_lead)
     width, height = view.pixel_size(_WIDEST, _HIGHEST)
     body = max(width, _NARROWEST)
     total = body + _LEFT + _RIGHT
@@ -102,23 +102,39 @@ def draw_horizon_map(
     lower = 16 + len(title) * line_height(13.5) + 2
     sheet.text(20, lower, "\n".join(subtitle), size=9.5, colour=SOFT_INK)
     left = _LEFT + (body - width) // 2
-    axes = sheet.axes(left, top, width, height)
-    values = np.where(content.status == Status.reached, content.horizon, np.nan)
-    scale = hour_scale(values, content.units)
-    _paint(axes, view, values, content.status, scale, (width, height))
-    named = draw_ground(axes, view, ground, width)
-    _contours(axes, view, values, scale, (width, height), content.units, named)
-    draw_graticule(axes, view, (width, height))
-    if np.isfinite(values).any():
-        draw_colour_bar(sheet, scale, left + width + 22, top, height, content.units)
+    draw_field(sheet, view, content, (left, top, width, height), ground)
     draw_legend(sheet, rows, legend)
     caution_top = legend + len(rows) * 24 + 8
     sheet.text(20, caution_top, "\n".join(notes), size=7.5, colour=SOFT_INK)
     return sheet.save(Path(path), software=SOFTWARE)
 
 
-def _field(one: xr.Dataset, members: int | None, last_lead: float | None) -> MapField:
-    """Gather the fields and write the title and the line below it."""
+def draw_field(
+    sheet: Sheet,
+    view: MapView,
+    content: MapField,
+    box: tuple[float, float, int, int],
+    ground: Ground,
+) -> Axes:
+    """Draw one map with its colour bar at ``box``: left, top, width and height in pixels."""
+    left, top, width, height = box
+    axes = sheet.axes(left, top, width, height)
+    values = np.where(content.status == Status.reached, content.horizon, np.nan)
+    scale = hour_scale(values, content.units)
+    paint_map(axes, view, values, content.status, scale, (width, height))
+    named = draw_ground(axes, view, ground, width)
+    lines = draw_contours(axes, view, values, scale, (width, height))
+    _label_contours(axes, view, lines, content.units, named)
+    draw_graticule(axes, view, (width, height))
+    if np.isfinite(values).any():
+        draw_colour_bar(sheet, scale, left + width + 22, top, height, content.units)
+    return axes
+
+
+def map_content(
+    one: xr.Dataset, members: int | None = None, last_lead: float | None = None
+) -> MapField:
+    """Gather the fields of one start and criterion, and write the title and the line below it."""
     units, end = lead_axis(one)
     last_lead = end if last_lead is None else last_lead
     members = one.attrs.get("members") if members is None else members
@@ -154,7 +170,7 @@ def _field(one: xr.Dataset, members: int | None, last_lead: float | None) -> Map
     )
 
 
-def _paint(
+def paint_map(
     axes: Axes,
     view: MapView,
     values: np.ndarray,
@@ -182,17 +198,15 @@ def _paint(
     )
 
 
-def _contours(
+def draw_contours(
     axes: Axes,
     view: MapView,
     values: np.ndarray,
     scale: HourScale,
     size: tuple[int, int],
-    units: str,
-    taken: list[tuple[float, float]],
-) -> None:
-    points = view.grid_points(*size)
-    painted = np.append(values, np.nan)[points]
+) -> dict[float, list[np.ndarray]]:
+    """Draw the lines of equal lead time and return them by level, as `contour_lines` does."""
+    painted = np.append(values, np.nan)[view.grid_points(*size)]
     lines = contour_lines(view, values.reshape(view.shape), painted, scale.contours)
     for found in lines.values():
         if found:
@@ -204,6 +218,16 @@ def _contours(
                 ),
                 autolim=False,
             )
+    return lines
+
+
+def _label_contours(
+    axes: Axes,
+    view: MapView,
+    lines: dict[float, list[np.ndarray]],
+    units: str,
+    taken: list[tuple[float, float]],
+) -> None:
     for level, x, y in label_places(lines, view, clear_of=taken):
         axes.text(
             x,

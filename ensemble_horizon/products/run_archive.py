@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import contextlib
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from pathlib import Path
 from typing import Any
@@ -172,24 +172,36 @@ def write_climatology(
     target: Path,
     frame: ArchiveFrame,
     deviation: Fields,
+    mean: Fields,
     hours: tuple[float, float],
     what: str,
 ) -> None:
-    """Write the standard deviation of every field from one time to another, whole or not at all.
+    """Write standard deviation and mean of every field from one time to another, whole or not.
 
-    ``hours`` are the two times, after the epoch.
+    The mean of a field is called by `mean_name`. ``hours`` are the two times, after the epoch.
     """
     with written_whole(target) as neighbour:
         with open_new(neighbour) as file:
             _describe(file, frame, what)
             told = {**_since(frame), "comment": f"middle of the hours {hours[0]:g} to {hours[1]:g}"}
             _coordinate(file, TIME, (), np.float64(sum(hours) / 2), VALID, told)
-            _create_fields(file, frame, (), (), [TIME, *_auxiliary(frame)])
+            means = [replace(field, name=mean_name(field.name)) for field in frame.fields]
+            for fields in (frame.fields, means):
+                one = replace(frame, fields=fields)
+                _create_fields(file, one, (), (), [TIME, *_auxiliary(frame)])
             for field in frame.fields:
-                variable = file[field.name]
-                variable.cell_methods = "time: standard_deviation"
-                variable[...] = deviation[field.name]
+                for name, method, values in (
+                    (field.name, "standard_deviation", deviation),
+                    (mean_name(field.name), "mean", mean),
+                ):
+                    file[name].cell_methods = f"time: {method}"
+                    file[name][...] = values[field.name]
         verify_file(neighbour, frame.sizes)
+
+
+def mean_name(field: str) -> str:
+    """Return what the climatological mean of a field is called."""
+    return f"{field}_mean"
 
 
 def _run(

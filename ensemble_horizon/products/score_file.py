@@ -35,11 +35,20 @@ from ensemble_horizon.vocabulary import (
 )
 
 TITLE = "Scores of ensemble forecasts against analyses and observations"
+_ENDS = {
+    "value": ("", ""),
+    "low": ("_low", "lower end of the interval of the "),
+    "high": ("_high", "upper end of the interval of the "),
+    "block_low": ("_block_low", "lower end of the interval, by resampled blocks, of the "),
+    "block_high": ("_block_high", "upper end of the interval, by resampled blocks, of the "),
+    "block_length": ("_block_length", "mean length in starts of the resampled blocks for the "),
+}
 _LIMIT_TEXTS = {
     "horizon": "lead at which the score falls to its level",
     "horizon_low": "lower end of the interval of the horizon",
     "horizon_high": "upper end of the interval of the horizon, infinite beyond the run",
     "significant_until": "lead up to which the score is significantly above its level",
+    "gap": "time without a score within which the horizon lies",
 }
 
 
@@ -118,12 +127,12 @@ def _put_places(file: netCDF4.Dataset, data: xr.Dataset, prefix: str) -> None:
         one = data.isel({SCORE: row})
         units = str(one["score_units"].values)
         text = f"{one['score_text'].values}: {about}"
-        own = {"value": "", "low": "_low", "high": "_high"}
-        for key, ending in own.items():
-            end = {"value": "", "low": "lower end of the interval of the ",
-                   "high": "upper end of the interval of the "}[key]  # fmt: skip
+        for key, (ending, end) in _ENDS.items():
+            if key not in one:
+                continue
             values = one[key].transpose(PLACE, LEAD).values
-            attributes = _with_units({"long_name": f"{end}{text}", **near}, units)
+            own = "1" if key == "block_length" else units
+            attributes = _with_units({"long_name": f"{end}{text}", **near}, own)
             put(file, f"{prefix}_{score}{ending}", (names[PLACE], LEAD), values, attributes)
         count = {"long_name": f"starts that have data for the {text}", "units": "1", **near}
         values = one["starts"].transpose(PLACE, LEAD).values.astype(np.int32)

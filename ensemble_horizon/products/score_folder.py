@@ -18,7 +18,7 @@ from ensemble_horizon.products.places import BARE, Ground
 from ensemble_horizon.products.score_file import write_score_file, write_score_maps
 from ensemble_horizon.products.score_table import (
     LIMIT_COLUMNS,
-    SCORE_COLUMNS,
+    score_columns,
     write_limit_table,
     write_score_table,
 )
@@ -77,7 +77,7 @@ def write_scores(
     left_out = {str(number): note for number, note in enumerate(notes, start=1)}
     sections = {
         "Scores": {str(name): str(text) for name, text in texts},
-        "Columns of scores.csv": SCORE_COLUMNS,
+        "Columns of scores.csv": score_columns(results),
         "Columns of skill_limits.csv": LIMIT_COLUMNS,
         **({"Not verified": left_out} if left_out else {}),
     }

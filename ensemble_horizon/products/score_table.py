@@ -12,7 +12,12 @@ from rich.table import Table
 from rich.text import Text
 
 from ensemble_horizon.products.rows import cell, write_rows
-from ensemble_horizon.products.scores import ScoredVariable, score_records, skill_limits
+from ensemble_horizon.products.scores import (
+    BLOCK_COLUMNS,
+    ScoredVariable,
+    score_records,
+    skill_limits,
+)
 from ensemble_horizon.products.wording import number
 from ensemble_horizon.vocabulary import CAUTION, LEAD, PLACE, SCORE
 
@@ -39,16 +44,24 @@ LIMIT_COLUMNS = {
     "low": "lower end of the interval of the horizon",
     "high": "upper end; empty where there is none, or where it lies beyond the run "
     "(then low is given and high is not)",
-    "horizon_units": "units of horizon, low, high and significant_until",
+    "horizon_units": "units of horizon, low, high, significant_until and gap",
     "status": "reached, beyond_run, at_start (at or below the level at the first lead) or no_data",
     "significant_until": "lead up to which the score is significantly above the level",
     "significant_status": "status of significant_until",
     "starts": "starts that it rests on",
+    "gap": "time about the horizon for which there is no score, within which it may lie anywhere; "
+    "empty where there is none",
 }
 _SHOWN = ("rmse", "spread", "spread_error_ratio", "crps")
 
 
-def write_score_table(path: str | os.PathLike[str], results: Iterable[ScoredVariable]) -> Path:
+def score_columns(results: Sequence[ScoredVariable]) -> dict[str, str]:
+    """Columns of ``scores.csv``, with those of resampled blocks where there are any."""
+    drawn = any(next(iter(BLOCK_COLUMNS)) in result.places for result in results)
+    return SCORE_COLUMNS | (BLOCK_COLUMNS if drawn else {})
+
+
+def write_score_table(path: str | os.PathLike[str], results: Sequence[ScoredVariable]) -> Path:
     """Write ``scores.csv``: one row per variable, place, score and lead.
 
     Raises
@@ -56,14 +69,17 @@ def write_score_table(path: str | os.PathLike[str], results: Iterable[ScoredVari
     ProductError
         If the file cannot be written; nothing half-written stays behind.
     """
+    columns = score_columns(results)
+    more = [name for name in BLOCK_COLUMNS if name in columns]
     rows = (
         [
             item.variable, item.place, item.against, cell(item.lead), item.lead_units, item.score,
             cell(item.value), cell(item.low), cell(item.high), item.units, str(item.starts),
+            *(cell(getattr(item, name)) for name in more),
         ]
         for item in score_records(results)
     )  # fmt: skip
-    return write_rows(path, SCORE_COLUMNS, rows)
+    return write_rows(path, columns, rows)
 
 
 def write_limit_table(path: str | os.PathLike[str], results: Iterable[ScoredVariable]) -> Path:
@@ -73,6 +89,7 @@ def write_limit_table(path: str | os.PathLike[str], results: Iterable[ScoredVari
             item.variable, item.place, item.against, item.score, cell(item.level),
             cell(item.horizon), cell(item.low), cell(item.high), item.units, item.status.name,
             cell(item.significant_until), item.significant_status.name, str(item.starts),
+            cell(item.gap),
         ]
         for item in skill_limits(results)
     )  # fmt: skip

@@ -12,6 +12,12 @@ import xarray as xr
 from ensemble_horizon.products.wording import duration, interval
 from ensemble_horizon.vocabulary import LEAD, LIMIT, PLACE, SCORE, Status
 
+BLOCK_COLUMNS = {
+    "block_low": "lower end of the interval by resampled blocks of starts, a second opinion",
+    "block_high": "upper end of that interval",
+    "block_length": "mean length of the blocks, in starts",
+}
+
 
 class ScoredVariable(Protocol):
     """What is known of one variable: scores of places, and its maps if there are any."""
@@ -40,6 +46,9 @@ class ScoreRecord:
     high: float
     units: str
     starts: int
+    block_low: float = float("nan")
+    block_high: float = float("nan")
+    block_length: float = float("nan")
 
 
 @dataclass(frozen=True)
@@ -61,13 +70,16 @@ class SkillLimit:
     units: str
     last_lead: float
     starts: int
+    gap: float
 
     @property
     def words(self) -> str:
         """The horizon in plain words, with its interval."""
         if self.status == Status.reached:
             ends = interval(self.low, self.high, self.units)
-            return f"{duration(self.horizon, self.units)} {ends}".strip()
+            text = f"{duration(self.horizon, self.units)} {ends}".strip()
+            gap = duration(self.gap, self.units) if np.isfinite(self.gap) else ""
+            return f"{text}, within {gap} without a score" if gap else text
         return self._without_number(self.status)
 
     @property
@@ -92,6 +104,7 @@ def score_records(results: Iterable[ScoredVariable]) -> Iterator[ScoreRecord]:
         lead = data[LEAD].values
         units = str(data.attrs["lead_units"])
         cells = {name: data[name].values for name in ("value", "low", "high", "starts")}
+        blocks = {name: data[name].values for name in BLOCK_COLUMNS if name in data}
         for row, place in enumerate(data[PLACE].values):
             for column, score in enumerate(data[SCORE].values):
                 if not np.isfinite(cells["value"][row, column]).any():
@@ -110,6 +123,7 @@ def score_records(results: Iterable[ScoredVariable]) -> Iterator[ScoreRecord]:
                         high=float(cells["high"][where]),
                         units=str(data["score_units"].values[column]),
                         starts=int(cells["starts"][where]),
+                        **{name: float(values[where]) for name, values in blocks.items()},
                     )
 
 
@@ -129,4 +143,5 @@ def _limits_of(data: xr.Dataset) -> Iterator[SkillLimit]:
                 Status(int(one["status"])), float(one["significant_until"]),
                 Status(int(one["significant_status"])), str(data.attrs["lead_units"]),
                 float(data.attrs["last_lead"]), int(one["starts"].sel({SCORE: name}).max()),
+                float(one["gap"]),
             )  # fmt: skip

@@ -122,7 +122,7 @@ def limits_table(results: Iterable[VariableResult], *, most: int | None = None) 
     -------
     rich.table.Table
     """
-    rows = sorted(limits(results), key=_shortest_first)
+    rows = sorted(limits(results), key=shortest_first)
     shown = rows if most is None else rows[:most]
     several = len({row.start for row in rows}) > 1
     starts = "" if several or not rows else f", start {rows[0].start_text}"
@@ -162,7 +162,8 @@ def criterion_text(limit: Limit) -> str:
     return criterion_words(limit.criterion, limit.threshold, limit.threshold_units)
 
 
-def _shortest_first(limit: Limit) -> tuple[int, float, str, str]:
+def shortest_first(limit: Limit) -> tuple[int, float, str, str]:
+    """Return what limits are sorted by where the shortest comes first."""
     length = limit.projected if limit.status == Status.beyond_run else limit.horizon
     return (
         _ORDER[limit.status],

@@ -26,7 +26,7 @@ from ensemble_horizon.vocabulary import CRITERION
 _NOTES = {
     "versions.csv": "hours gained: one row per variable, place and criterion",
     "score_differences.csv": "differences of scores by lead, where both versions were verified",
-    "versions.nc": "the same, and hours gained at every grid point (CF-1.11)",
+    "versions.nc": "all of these, and hours gained at every grid point (CF-1.11)",
 }
 
 
@@ -44,8 +44,9 @@ def write_versions(
     """Write all products of a comparison into ``folder``, all together or not at all.
 
     ``versions.csv``, ``versions.nc``, ``README.txt``, and with ``figures`` in ``figures/`` the
-    hours gained with their intervals, the time to the limit under both versions per variable, and
-    where there are maps one per variable and criterion.
+    hours gained with their intervals, the time to the limit under both versions per variable,
+    where there are maps one per variable and criterion, and where there are scores their
+    differences by lead.
 
     Parameters
     ----------
@@ -57,6 +58,7 @@ def write_versions(
         See `netcdf.global_attributes`.
     scores : sequence of Dataset
         Differences of scores (score, lead, place) per variable: ``score_differences.csv``.
+        Variables without any are not among them.
     notes : mapping of heading to lines
         What is not compared, and cautions.
     figures, ground, draw
@@ -92,9 +94,9 @@ def write_versions(
         write_gains_table(aside / "versions.csv", [item.places for item in results])
         if scores:
             write_difference_table(aside / "score_differences.csv", scores)
-        write_gains_file(aside / "versions.nc", results, provenance, notes)
+        write_gains_file(aside / "versions.nc", results, provenance, notes, scores)
         if figures:
-            draw(list(_drawings(results, aside / FIGURES, ground)))
+            draw(list(_drawings(results, scores, aside / FIGURES, ground)))
 
     return write_folder(folder, leaflet, write)
 
@@ -131,8 +133,25 @@ class GainMapDrawing:
             draw_gain_map(self.maps, path, criterion=number, ground=self.ground, view=view)
 
 
-def _drawings(results: Sequence[VersionsResult], folder: Path, ground: Ground) -> Iterator[Drawing]:
+@dataclass(frozen=True)
+class DifferencesDrawing:
+    """Differences of scores of one variable."""
+
+    part: xr.Dataset
+    path: Path
+
+    def draw(self) -> None:
+        """Draw and write the figure."""
+        from ensemble_horizon.products.difference_figure import draw_differences  # noqa: PLC0415
+
+        draw_differences(self.part, self.path)
+
+
+def _drawings(
+    results: Sequence[VersionsResult], scores: Sequence[xr.Dataset], folder: Path, ground: Ground
+) -> Iterator[Drawing]:
     """Yield all figures, the maps first, as they take longest."""
+    scored = {str(part.attrs["variable"]): part for part in scores}
     others: list[Drawing] = [
         GainsDrawing([item.places for item in results], folder / "hours_gained.png")
     ]
@@ -140,6 +159,9 @@ def _drawings(results: Sequence[VersionsResult], folder: Path, ground: Ground) -
     for result in results:
         about = result.places.attrs
         variable = valid_name(str(about["variable"]), taken)
+        if about["variable"] in scored:
+            part = scored[about["variable"]]
+            others.append(DifferencesDrawing(part, folder / f"{variable}_score_differences.png"))
         labels = (about["version_a"], about["version_b"])
         path = folder / f"{variable}_time_to_limit.png"
         others.append(SharesDrawing(result.shares, labels, starts_words(result.places), path))

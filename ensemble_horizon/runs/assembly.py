@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Hashable, Mapping, Sequence
+from contextlib import closing
 from dataclasses import replace
 from datetime import datetime
 from typing import TypeAlias
@@ -18,6 +19,7 @@ from ensemble_horizon.runs.agreement import (
     layout_fault,
     number_members,
 )
+from ensemble_horizon.runs.ahead import Mapper, read_ahead
 from ensemble_horizon.runs.catalogue import Catalogue, Table
 from ensemble_horizon.runs.faults import Effect, Fault
 from ensemble_horizon.runs.files import Files, FoundFile, find_files
@@ -41,6 +43,7 @@ def read_catalogue(
     strict: bool = False,
     analysis: bool = False,
     progress: Callable[[int, int], None] | None = None,
+    mapper: Mapper | None = None,
 ) -> Catalogue:
     """Read the headers of all files and say where every field lies.
 
@@ -64,6 +67,9 @@ def read_catalogue(
         The files hold analyses: every valid time is a start with the lead 0 h.
     progress : callable, optional
         Called with the number of headers read and the number of files.
+    mapper : callable, optional
+        Runs a function over a sequence of tasks in other processes and gives back the results in
+        order, as ``map`` does; used where there are many files. Results and errors are the same.
 
     Raises
     ------
@@ -87,7 +93,7 @@ that matches; found no match, and no folder 'no/such/folder'. Next: correct the 
         analysis=analysis,
     )
     found = find_files(files)
-    headers, faults = _read_all(found, wanted, strict, progress)
+    headers, faults = _read_all(found, wanted, strict, progress, mapper)
     _refuse_absent_variables(headers, wanted)
     attrs = headers[0].attrs
     layouts = [layout for header in headers for layout in header.layouts]
@@ -131,28 +137,30 @@ def _read_all(
     wanted: Wanted,
     strict: bool,
     progress: Callable[[int, int], None] | None,
+    mapper: Mapper | None,
 ) -> tuple[list[FileHeader], list[Fault]]:
     headers: list[FileHeader] = []
     faults: list[Fault] = []
     errors: list[InputError] = []
     grids: list[Grid] = []
     skipped: dict[str, Fault] = {}
-    for count, file in enumerate(found, start=1):
-        try:
-            header = read_header(file, wanted, grids)
-            headers.append(header)
-            grids += [layout.grid for layout in header.layouts if layout.grid not in grids]
-            for name, reason in header.skipped.items():
-                message = f"{name!r} is left out: {reason}"
-                skipped.setdefault(name, Fault("variable-skipped", file=file.path,
-                                               variable=name, message=message))  # fmt: skip
-        except InputError as error:
-            if strict:
-                raise
-            errors.append(error)
-            faults.append(_fault_of(file, error))
-        if progress is not None:
-            progress(count, len(found))
+    with closing(read_ahead(found, wanted, grids, mapper)) as ahead:
+        for count, (file, early) in enumerate(zip(found, ahead, strict=True), start=1):
+            try:
+                header = early or read_header(file, wanted, grids)
+                headers.append(header)
+                grids += [layout.grid for layout in header.layouts if layout.grid not in grids]
+                for name, reason in header.skipped.items():
+                    message = f"{name!r} is left out: {reason}"
+                    skipped.setdefault(name, Fault("variable-skipped", file=file.path,
+                                                   variable=name, message=message))  # fmt: skip
+            except InputError as error:
+                if strict:
+                    raise
+                errors.append(error)
+                faults.append(_fault_of(file, error))
+            if progress is not None:
+                progress(count, len(found))
     if not headers:
         raise errors[0]
     return headers, [*faults, *skipped.values()]

@@ -12,8 +12,6 @@ from typing import TypeAlias
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.runs.templates import NameParts, is_template, parse_template
 
-Files: TypeAlias = str | os.PathLike[str] | Iterable[str | os.PathLike[str]]
-
 
 @dataclass(frozen=True)
 class FoundFile:
@@ -23,6 +21,9 @@ class FoundFile:
     parts: NameParts = field(default_factory=NameParts)
 
 
+Files: TypeAlias = str | os.PathLike[str] | Iterable[str | os.PathLike[str] | FoundFile]
+
+
 def find_files(files: Files) -> tuple[FoundFile, ...]:
     """Find the files that ``files`` names, in the order of their names.
 
@@ -30,7 +31,7 @@ def find_files(files: Files) -> tuple[FoundFile, ...]:
     ----------
     files : str, path, or iterable of them
         Each a path, a glob (``*``, ``?``, ``[]``, ``**``) or a template (see
-        `ensemble_horizon.runs.templates.parse_template`).
+        `ensemble_horizon.runs.templates.parse_template`); or a file that was found before.
 
     Raises
     ------
@@ -43,7 +44,7 @@ def find_files(files: Files) -> tuple[FoundFile, ...]:
     entries = [files] if isinstance(files, str | os.PathLike) else list(files)
     found: dict[str, FoundFile] = {}
     for entry in entries:
-        for item in _expand(os.fspath(entry)):
+        for item in [entry] if isinstance(entry, FoundFile) else _expand(os.fspath(entry)):
             found.setdefault(item.path, item)
     if not found:
         raise InputError(

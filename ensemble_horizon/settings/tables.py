@@ -147,11 +147,15 @@ class ObservationsTable(Table):
 
 
 class VerificationTable(Table):
-    """``[verification]``: what skill must stay above, and how certain a calibration must be."""
+    """``[verification]``: what skill must stay above, and how certain a calibration must be.
+
+    ``resamples``: how often starts are drawn anew for a second opinion on intervals; 0 for none.
+    """
 
     skill: Annotated[float, Field(lt=1, allow_inf_nan=False)] = 0.0
     correlation: Annotated[float, Field(gt=-1, lt=1)] = 0.6
     factor_uncertainty: Fraction = 0.15
+    resamples: Annotated[int, Field(ge=0, le=100_000)] = 0
 
 
 class CalibrationTable(Table):
@@ -181,7 +185,7 @@ class NightTable(Table):
     """``[night]``: the nightly chain, its archive, and what "usual" is measured by."""
 
     archive: str
-    usual_nights: Annotated[int, Field(ge=5)] = 30
+    usual_nights: Annotated[int, Field(ge=10)] = 30
     season_days: Annotated[int, Field(ge=1, le=182)] = 45
     verify_starts: Annotated[int, Field(ge=1)] = 30
     wait_minutes: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 0.0

@@ -190,6 +190,26 @@ def ranks(found: Sides, members: int, generator: np.random.Generator) -> np.ndar
     return rank
 
 
+def spread_over(counts: np.ndarray, members: int) -> np.ndarray:
+    """Counts (..., m + 1) by the rank among m members, over the M + 1 ranks of more: numpy kernel.
+
+    Each rank is spread evenly over those that it covers, which keeps uniform ranks uniform; in
+    `ranks` a single one is put there at random.
+
+    Examples
+    --------
+    >>> spread_over(np.array([2.0, 4.0]), 3).tolist()
+    [1.0, 1.0, 2.0, 2.0]
+    """
+    own = counts.shape[-1]
+    if own == members + 1:
+        return counts
+    ends = [np.linspace(0.0, 1.0, number + 1) for number in (own, members + 1)]
+    low = np.maximum(ends[0][:-1, np.newaxis], ends[1][:-1])
+    high = np.minimum(ends[0][1:, np.newaxis], ends[1][1:])
+    return counts @ (own * np.maximum(high - low, 0.0))
+
+
 def outside(found: Sides) -> np.ndarray:
     """Chance (P,) that the analysis takes the lowest or highest rank: 0 or 1 but for ties.
 

@@ -9,6 +9,7 @@ everything after it has a component axis: one component of a scalar, two of a di
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Protocol
 
 import numpy as np
 
@@ -59,6 +60,18 @@ class Reduction:
     def components(self) -> int:
         """Components of a value: one of a scalar, two of a displacement."""
         return 1 if self.geometry is None else 2
+
+
+class MemberFields(Protocol):
+    """What tells sound members of a start from others; see `Summary`.
+
+    sample_values : any few numbers of each field, by which two that are alike are found
+    """
+
+    sample_values: np.ndarray
+    gaps: np.ndarray
+    low: np.ndarray
+    high: np.ndarray
 
 
 @dataclass
@@ -137,7 +150,7 @@ def reduce_block(
         for kept, source, target in single:
             for component, field_values in enumerate(fields):
                 kept[lead, :, target, component] = field_values[:, source].T
-        present = _note_health(summary, lead, health)
+        present = note_health(summary, lead, health)
         if present.sum() < 2:
             continue
         if not present.all():
@@ -241,7 +254,8 @@ def empty_summary(reduction: Reduction, members: int, leads: int, size: int) -> 
     )
 
 
-def _note_health(summary: Summary, lead: int, values: np.ndarray) -> np.ndarray:
+def note_health(summary: MemberFields, lead: int, values: np.ndarray) -> np.ndarray:
+    """Note gaps and extremes of members (M, P) at a lead; tell (M,) which have any value."""
     low, high = values.min(axis=1), values.max(axis=1)  # NaN where a member has any gap
     broken = ~np.isfinite(low + high)
     if broken.any():

@@ -6,12 +6,19 @@ from typing import Any
 
 import numpy as np
 import xarray as xr
+from scipy import special
 
-from ensemble_horizon.serial import REASON_ATTRIBUTES, serial_mean
+from ensemble_horizon.serial import REASON_ATTRIBUTES, SerialMean, mean_noise, serial_mean
 
 
 def mean_difference(
-    a: xr.DataArray, b: xr.DataArray, dim: str, confidence: float, name: str, text: str
+    a: xr.DataArray,
+    b: xr.DataArray,
+    dim: str,
+    confidence: float,
+    name: str,
+    text: str,
+    shared: tuple[np.ndarray, float] | None = None,
 ) -> xr.Dataset:
     """Mean of b - a over the starts at which both have a value, with interval and p-value.
 
@@ -19,6 +26,8 @@ def mean_difference(
     ----------
     a, b : DataArray on the same starts and points
     name, text : str, what the difference is called, short and long
+    shared : (variance (K,) or scalar, degrees of freedom), optional
+        Noise of the mean that all starts have in common, which their scatter does not tell.
 
     Returns
     -------
@@ -29,7 +38,10 @@ def mean_difference(
     rest = [str(item) for item in a.dims if item != dim]
     values = (b - a).transpose(dim, *rest)
     shape = values.shape[1:]
-    found = serial_mean(values.values.reshape(values.sizes[dim], -1), confidence)
+    series = values.values.reshape(values.sizes[dim], -1)
+    found = serial_mean(series, confidence)
+    if shared is not None:
+        found = _with_shared(found, series, shared, confidence)
     units = {"units": str(a.attrs.get("units", "1"))}
 
     def labelled(column: np.ndarray, attributes: dict[str, Any]) -> tuple[Any, ...]:
@@ -53,3 +65,19 @@ def mean_difference(
         mean = data.where(both).mean(dim).transpose(*rest)
         result[key] = labelled(mean.values, {"long_name": f"mean of version {key[-1]}", **units})
     return result
+
+
+def _with_shared(
+    found: SerialMean, series: np.ndarray, shared: tuple[np.ndarray, float], confidence: float
+) -> SerialMean:
+    """The same mean with noise that all starts share; freedom by the rule of Satterthwaite 1946."""
+    own, (variance, dof) = mean_noise(series), shared
+    total = own.variance + variance
+    with np.errstate(invalid="ignore", divide="ignore"):
+        free = total**2 / (own.variance**2 / own.dof + variance**2 / dof)
+        error = np.sqrt(total)
+        reach = special.stdtrit(free, 1 - (1 - confidence) / 2) * error
+        p_value = 2 * special.stdtr(free, -np.abs(found.mean) / error)
+    return found._replace(
+        low=found.mean - reach, high=found.mean + reach, p_value=p_value, dof=free
+    )

@@ -24,6 +24,8 @@ def compare_horizons(
     first_lead: float | None = None,
     dim: str = START,
     confidence: float = 0.9,
+    shared_variance: xr.DataArray | float | None = None,
+    shared_dof: float = np.inf,
 ) -> xr.Dataset:
     """Lead time that version b gains over version a, on the starts that both have.
 
@@ -38,6 +40,12 @@ def compare_horizons(
         Likewise; zero where it is not known.
     confidence : float
         Of the interval.
+    shared_variance : DataArray or float, in squares of lead units
+        Variance of the mean gain from what is the same at all starts, such as the factors of a
+        calibration, on the points of the horizons: their scatter over starts does not tell of it.
+        Interval and p-value take it in.
+    shared_dof : float
+        Degrees of freedom that it is known to.
 
     Returns
     -------
@@ -50,7 +58,8 @@ def compare_horizons(
       distribution of the limits, which takes all starts as independent and unpaired;
     - ``mean_a``, ``mean_b``: mean horizon up to ``restricted_to``; ``beyond_a``, ``beyond_b``:
       starts whose limit lies beyond it;
-    - ``starts`` compared; ``reason``: why there is no interval, where there is none.
+    - ``starts`` compared; ``reason``: why there is no interval, where there is none;
+    - with ``shared_variance`` its root, ``shared_error``.
 
     The attributes ``starts_only_in_a`` and ``starts_only_in_b`` name what was left out.
 
@@ -87,8 +96,15 @@ def compare_horizons(
     limits = [data["limit"].where(both).assign_attrs(units=units) for data in (paired.a, paired.b)]
     reached = [data["reached"] & both for data in (paired.a, paired.b)]
     text = "lead time gained by version b over version a"
-    found = mean_difference(limits[0], limits[1], dim, confidence, "gained", text)
+    shared = None
+    if shared_variance is not None:
+        noise = _on_points(shared_variance, limits[0].isel({dim: 0}, drop=True))
+        shared = (noise.values.ravel(), shared_dof)
+    found = mean_difference(limits[0], limits[1], dim, confidence, "gained", text, shared)
     rest = [str(name) for name in found["gained"].dims]
+    if shared_variance is not None:
+        about = {"long_name": "standard error of gained from what all starts share", "units": units}
+        found["shared_error"] = (rest, np.sqrt(noise.values), about)
     found["log_rank_p"] = (
         rest,
         _log_rank(limits, reached, [dim, *rest]),
@@ -101,6 +117,19 @@ def compare_horizons(
     found["restricted_to"] = ((), end, {"long_name": "end of the shorter runs", "units": units})
     criterion = {key: value for key, value in a.attrs.items() if str(key).startswith("criterion")}
     return found.assign_attrs(criterion | paired.attributes())
+
+
+def _on_points(variance: xr.DataArray | float, points: xr.DataArray) -> xr.DataArray:
+    """A variance on the points of the horizons, in their order."""
+    given = xr.DataArray(variance)
+    if bool((given < 0).any()) or not set(given.dims) <= set(points.dims):
+        raise ArgumentError(
+            "shared_variance",
+            expected=f"variances, on dimensions among {tuple(points.dims)}",
+            found=f"dimensions {tuple(given.dims)}, values from {float(given.min()):g}",
+            remedy="give the variance of the mean gain, a number or one a point",
+        )
+    return given.broadcast_like(points).transpose(*points.dims)
 
 
 def _observed(times: WaitingTimes, end: float) -> xr.Dataset:

@@ -9,6 +9,7 @@ from ensemble_horizon.skill.crps import crps
 from ensemble_horizon.skill.departures import departure
 from ensemble_horizon.spread.places import Region
 from ensemble_horizon.versions.scores import compare_scores
+from ensemble_horizon.vocabulary import MEMBER
 
 _SUFFIXES = {
     "difference": "difference",
@@ -43,7 +44,14 @@ def compare_verified(
     -------
     Dataset (lead, ...) with what `compare_scores` gives, each name with ``crps_`` or
     ``squared_error_`` before it; ``crps_a``, ``crps_b`` and so on for the means of both versions.
-    The squared error of a mean of few members is larger for that alone; the fair CRPS is not.
+    The squared error of a mean of few members is larger for that alone, by their variance over
+    their number in expectation; so that of the larger ensemble is given as for the mean of as many
+    members as the smaller one has, ``e^2 - s^2/M + s^2/m``. The fair CRPS needs no such step.
+
+    Notes
+    -----
+    Ferro 2014, Leutbecher 2019 (both Quarterly Journal of the Royal Meteorological Society), for
+    members that are alike and independent given the start.
 
     Examples
     --------
@@ -57,9 +65,10 @@ def compare_verified(
     >>> bool((found.crps_difference_high < 0).all())
     True
     """
+    members = min(item.sizes[MEMBER] for item in (a, b))
     parts = {
         "crps": [crps(item, analysis) for item in (a, b)],
-        "squared_error": [_squared_error(item, analysis) for item in (a, b)],
+        "squared_error": [_squared_error(item, analysis, members) for item in (a, b)],
     }
     found = []
     for name, scores in parts.items():
@@ -74,11 +83,16 @@ def compare_verified(
     return xr.merge(found, combine_attrs="override")
 
 
-def _squared_error(ensemble: xr.DataArray, analysis: xr.DataArray) -> xr.DataArray:
+def _squared_error(ensemble: xr.DataArray, analysis: xr.DataArray, members: int) -> xr.DataArray:
+    """Squared error of the mean, as it would be with so many members."""
     units = str(ensemble.attrs.get("units", "1"))
     square = departure(ensemble, analysis) ** 2
+    count = ensemble.notnull().sum(MEMBER)
+    variance = ensemble.where(count > 1).var(MEMBER, ddof=1)
+    more = variance * (1 / members - 1 / count.where(count > 1))
+    square = square + more.where(count != members, 0.0)
     square.attrs = {
-        "long_name": "squared error of the ensemble mean",
+        "long_name": f"squared error of the mean of {members} members",
         "units": "1" if units == "1" else f"({units})2",
     }
     return square

@@ -5,6 +5,7 @@ import pytest
 import xarray as xr
 
 import ensemble_horizon as eh
+from ensemble_horizon.horizon.skill_limits import falls_of_curves
 
 LEAD = 12.0 * np.arange(1, 21)
 
@@ -139,8 +140,6 @@ def test_intervals_cover_and_claims_of_significance_are_kept(starts, correlation
 
 def test_what_was_not_judged_at_the_last_lead_is_not_beyond_the_run():
     # Long leads with too few starts have a score but no interval, or neither.
-    from ensemble_horizon.horizon.skill_limits import falls_of_curves
-
     value = np.array([[0.9, 0.9], [0.8, 0.8], [0.7, np.nan]])
     low, high = value - 0.2, value + 0.05
     low[2], high[2] = np.nan, np.nan
@@ -150,3 +149,64 @@ def test_what_was_not_judged_at_the_last_lead_is_not_beyond_the_run():
     assert np.isnan(found.low).all()
     assert np.isnan(found.high).all()
     assert np.isnan(found.significant_until).all()
+
+
+def falling(*unknown):
+    """Falls to zero at lead 5 of 0, 1, ..., 9; the ends of its interval at 3.5 and 6.5."""
+    value = np.linspace(5.0, -4.0, 10)[:, np.newaxis]
+    low, high = value - 1.5, value + 1.5
+    for curve in (value, low, high):
+        curve[list(unknown)] = np.nan
+    return falls_of_curves(np.arange(10.0), value, low, high, level=0.25)
+
+
+def test_a_limit_within_a_gap_has_an_interval_that_reaches_over_it():
+    whole = falling()
+    assert (whole.low, whole.horizon, whole.high) == pytest.approx((3.25, 4.75, 6.25))
+    assert np.isnan(whole.gap)
+    found = falling(2, 3, 4, 5, 6)
+    assert found.status == eh.Status.reached
+    # Known at 1 and at 7, and nothing between.
+    assert (found.low, found.high, found.gap) == (1.0, 7.0, 6.0)
+    assert 1.0 < found.horizon < 7.0
+    # What was not judged is not claimed.
+    assert found.significant_until == 1.0
+    assert found.significant_status == eh.Status.reached
+
+
+def test_the_interval_is_the_longer_one_of_noise_and_gap():
+    found = falling(5)
+    assert (found.low, found.high, found.gap) == pytest.approx((3.25, 6.25, 2.0))
+    assert found.significant_until == pytest.approx(3.25)
+    # The lower end falls within the gap, the score itself after it.
+    found = falling(3, 4)
+    assert (found.low, found.horizon, found.high) == pytest.approx((2.0, 4.75, 6.25))
+    assert (found.significant_until, found.gap) == (2.0, 3.0)
+
+
+def test_gaps_elsewhere_change_nothing():
+    for unknown in ((1,), (0, 1), (8,)):
+        found, whole = falling(*unknown), falling()
+        for name in ("horizon", "low", "high", "significant_until", "status", "gap"):
+            np.testing.assert_array_equal(getattr(found, name), getattr(whole, name))
+
+
+def test_beyond_the_last_score_nothing_is_stated():
+    found = falling(5, 6, 7, 8, 9)
+    assert found.status == eh.Status.no_data
+    assert np.isnan([found.horizon, found.high, found.gap]).all()
+    assert found.significant_status == eh.Status.reached  # its lower end fell before
+
+
+def test_a_gap_is_told_by_the_labelled_front():
+    score, reference = scores(np.random.default_rng(6), 30, np.linspace(0.2, 1.3, 20), 0.05)
+    whole = eh.skill_limits(score, reference)
+    at = float(whole.horizon[0])
+    score = score.where(np.abs(score.lead - at) > 30)
+    found = eh.skill_limits(score, reference)
+    before = LEAD[at - 30 > LEAD].max()
+    after = LEAD[at + 30 < LEAD].min()
+    assert (float(found.low[0]), float(found.high[0])) == (before, after)
+    assert float(found.gap[0]) == after - before
+    assert found.gap.attrs["units"] == "hours"
+    assert np.isnan(whole.gap[0])

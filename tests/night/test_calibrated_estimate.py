@@ -2,6 +2,7 @@
 
 import csv
 
+import netCDF4
 import numpy as np
 import pytest
 import xarray as xr
@@ -157,3 +158,102 @@ def test_files_that_do_not_fit_are_refused(calibrated, refusal, more, words):
     status = 2 if "East" in more else 3
     config = calibrated.settings(more, runs='starts = "latest"')
     refusal(calibrated.run("estimate", config, status=status), status, *words)
+
+
+def settled(calibrated, more, status=0):
+    config = calibrated.settings(more, runs='starts = "latest"')
+    return calibrated.run("estimate", config, status=status)
+
+
+@pytest.mark.parametrize(
+    ("place", "words"),
+    [
+        ("[regions.North]\nsouth = 0\nnorth = 60\n",
+         ["North in 0 to 60 N, -180 to 180 E", "North in 0 to 90 N, -180 to 180 E"]),
+        ("[regions.North]\nsouth = 0\nwest = 5\n",
+         ["in 0 to 90 N, 5 to 180 E", "in 0 to 90 N, -180 to 180 E"]),
+    ],
+)  # fmt: skip
+def test_a_region_of_the_same_name_elsewhere_is_refused(calibrated, refusal, place, words):
+    more = place + '[calibration]\nfile = "factors.nc"\n'
+    refusal(settled(calibrated, more, 2), 2, "calibration.file", *words, "verify --calibration")
+
+
+def test_a_site_of_the_same_name_elsewhere_is_refused(tmp_path, refusal):
+    archive = Archive(tmp_path, starts=20)
+    archive.write()
+    site = "[sites.Quay]\nlatitude = 20\nlongitude = {}\n[verification]\nfactor_uncertainty = 0.5\n"
+    archive.verify(site.format(20), "--calibration", tmp_path / "factors.nc")
+    applied = site + '[calibration]\nfile = "factors.nc"\n'
+    settled(archive, applied.format(20))
+    settled(archive, applied.format(380 - 360))
+    settled(archive, applied.format(-340))  # the same meridian
+    result = settled(archive, applied.format(10), 2)
+    refusal(result, 2, "for Quay at 20 N, 10 E", "Quay at 20 N, 20 E")
+
+
+def test_the_domain_of_another_grid_is_refused(tmp_path, refusal, monkeypatch):
+    """The whole domain is called so on every grid."""
+    archive = Archive(tmp_path, starts=20)
+    archive.write()
+    archive.verify("", "--calibration", tmp_path / "factors.nc")
+    applied = f'[calibration]\nfile = "{tmp_path}/factors.nc"\n'
+    settled(archive, applied)
+    monkeypatch.setattr("verification_archive.LONGITUDES", np.arange(120.0, 170.0, 10.0))
+    (tmp_path / "east").mkdir()
+    other = Archive(tmp_path / "east", starts=2)
+    other.write()
+    result = settled(other, applied, 2)
+    refusal(result, 2, "for domain in -90 to 90 N", "on a grid that covers another part of it")
+
+
+def without(path, names):
+    """A calibration file as earlier versions wrote it."""
+    with netCDF4.Dataset(path) as old, netCDF4.Dataset(path.with_name("old.nc"), "w") as new:
+        new.setncatts(old.__dict__)
+        for name, group in old.groups.items():
+            copy = new.createGroup(name)
+            copy.setncatts(group.__dict__)
+            for key, dimension in group.dimensions.items():
+                copy.createDimension(key, dimension.size)
+            for key, variable in group.variables.items():
+                if key not in names:
+                    made = copy.createVariable(key, variable.dtype, variable.dimensions)
+                    made.setncatts({k: v for k, v in variable.__dict__.items() if k[0] != "_"})
+                    made[:] = variable[:]
+
+
+def test_a_file_of_an_earlier_version_is_used_with_a_warning(calibrated):
+    without(calibrated.folder / "factors.nc", ["box", "mean_position", "start_name"])
+    result = settled(calibrated, APPLIED.replace("factors.nc", "old.nc"))
+    assert "old.nc is of an earlier version and does not say where its places lie" in result.stderr
+    assert "are among those" not in result.stderr
+    plain = read_calibration_file(calibrated.folder / "factors.nc")["t2"]
+    old = read_calibration_file(calibrated.folder / "old.nc")["t2"]
+    assert old.starts == ()
+    np.testing.assert_array_equal(old.places.factor, plain.places.factor)
+
+
+def test_factors_found_from_the_starts_they_are_applied_to_are_told(calibrated, tmp_path):
+    result = settled(calibrated, APPLIED)
+    last = "2032-01-26T00:00"  # start 39, 390 days on
+    assert f"1 of 1 starts ({last}) are among those" in result.stderr
+    factors = read_calibration_file(calibrated.folder / "factors.nc")["t2"]
+    assert len(factors.starts) == 40
+    assert factors.starts[0] == "2031-01-01T00:00"
+    assert factors.starts[-1] == last
+    # Found from the starts before, they may be applied to the last one.
+    earlier = ", ".join(f'"{name}"' for name in factors.starts[:-1])
+    archive = Archive(tmp_path, starts=40, scale=0.5)
+    archive.write()
+    archive.verify(REGION, "--calibration", tmp_path / "factors.nc", runs=f"starts = [{earlier}]")
+    assert "are among those" not in settled(archive, APPLIED).stderr
+
+
+def test_a_start_without_analyses_is_not_among_those_of_the_factors(tmp_path):
+    archive = Archive(tmp_path, starts=20)
+    archive.write(skip={(7, lead) for lead in range(HOURS.size)})
+    archive.verify(REGION, "--calibration", tmp_path / "factors.nc")
+    starts = read_calibration_file(tmp_path / "factors.nc")["t2"].starts
+    assert len(starts) == 19
+    assert "2031-03-12T00:00" not in starts  # start 7, 70 days on

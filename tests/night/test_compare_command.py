@@ -197,6 +197,31 @@ def test_maps_set_apart_what_survives(pair):
     assert figures == ["hours_gained.png", "t2_gained_tolerance_2.png", "t2_time_to_limit.png"]
 
 
+@pytest.mark.parametrize(("criterion", "fits"), [("tolerance = 2.0", 0),
+                                                 ("saturation_fraction = 0.5", 24)])  # fmt: skip
+def test_maps_fit_laws_only_where_a_criterion_rests_on_one(pair, monkeypatch, criterion, fits):
+    from ensemble_horizon.horizon import map_limits
+
+    counted = []
+    real = map_limits.select_where_enough
+
+    def counting(*arguments):
+        counted.append(1)
+        return real(*arguments)
+
+    monkeypatch.setattr(map_limits, "select_where_enough", counting)
+    write_version(pair.folder / "old", LIMITS)
+    write_version(pair.folder / "new", LIMITS + GAINS)
+    for name in ("old", "new"):
+        pair.settings(name, f"[variables.t2]\ncriteria = [{{{criterion}}}]",
+                      products='maps = "each"\nfigures = false')  # fmt: skip
+    pair.compared()
+    assert len(counted) == fits  # a batch for each of twelve starts of both
+    if not fits:
+        with xr.open_dataset(pair.products / "versions.nc") as data:
+            np.testing.assert_allclose(data.t2_map_gained, GAINS.mean(), atol=1e-3)
+
+
 def test_only_common_starts_count_and_the_others_are_listed(pair):
     day = np.timedelta64(24, "h")
     write_version(pair.folder / "old", LIMITS)
@@ -376,6 +401,58 @@ def test_files_of_the_same_name_are_told_apart_by_their_folders(tmp_path):
     result = CliRunner().invoke(group, command, catch_exceptions=False)
     assert result.exit_code == 0, result.stderr
     assert "Lead time gained by june/runs over january/runs" in result.stdout
+
+
+def test_another_confidence_is_told(both):
+    both.settings("new", more=f"{PLACES}\n[growth]\nconfidence = 0.8")
+    narrow = both.compared()[0]
+    words = "intervals are given at 90 %, as the settings of old ask; those of new ask for 80 %"
+    assert words in " ".join(both.printed.split())
+    assert words in (both.products / "README.txt").read_text(encoding="utf-8").replace("\n", " ")
+    both.settings("new")
+    assert both.compared()[0]["low"] == narrow["low"]
+    assert "intervals are given at" not in both.printed
+
+
+def spoil(path: Path, member: int) -> None:
+    """Give one member of a file a field without a value at one lead."""
+    with netCDF4.Dataset(path, "a") as file:
+        file["t2"][member, 3] = np.nan
+
+
+def test_members_that_count_in_one_version_only_are_told(both):
+    for member, day in ((2, 14), (4, 16), (1, 17)):
+        spoil(both.folder / "old" / f"203102{day}00.nc", member)
+    spoil(both.folder / "new" / "2031021800.nc", 0)
+    for name in ("old", "new"):  # left out alike: nothing to tell of it
+        spoil(both.folder / name / "2031022000.nc", 5)
+    both.compared()
+    printed = " ".join(both.printed.split())
+    assert (
+        "t2: at 4 of 12 starts not the same members count in both (2031-02-14T00:00: member 2 only "
+        "in new; 2031-02-16T00:00: member 4 only in new; 2031-02-17T00:00: member 1 only in new; "
+        "2031-02-18T00:00: member 0 only in old)" in printed
+    )
+    assert "4 faults in old: t2, member 2, start 2031-02-14T00:00: no value at all at" in printed
+    assert "; and 1 more" in printed
+    assert "2 faults in new: " in printed
+
+
+def test_alike_versions_have_nothing_to_tell_of_members(both):
+    both.compared()
+    for words in ("members count in both", "fault", "has 6 members"):
+        assert words not in both.printed
+
+
+def test_ensembles_of_other_sizes_are_told(pair):
+    write_version(pair.folder / "old", LIMITS)
+    write_version(pair.folder / "new", LIMITS + GAINS, members=5)
+    pair.settings("old")
+    pair.settings("new")
+    pair.compared()
+    printed = " ".join(pair.printed.split())
+    assert "old has 6 members and new 5: the spread of fewer members is noisier" in printed
+    assert "members count in both" not in printed
 
 
 def test_the_netcdf_product_complies_with_cf(both):

@@ -137,6 +137,8 @@ def test_climatology_is_that_of_the_truth(desk):
     with xr.open_dataset(desk.archive / "climatology.nc") as climate:
         assert climate.x.values == pytest.approx(truth.std("valid", ddof=1).values, rel=1e-12)
         assert climate.x.attrs["cell_methods"] == "time: standard_deviation"
+        assert climate.x_mean.values == pytest.approx(truth.mean("valid").values, rel=1e-12)
+        assert climate.x_mean.attrs["cell_methods"] == "time: mean"
 
 
 def test_estimate_takes_the_settings_as_they_are(desk):
@@ -150,6 +152,40 @@ def test_estimate_takes_the_settings_as_they_are(desk):
         "saturation fraction 0.5",
     }
     assert {row["members"] for row in rows} == {"5"}
+
+
+def test_a_perfect_ensemble_has_skill_over_climatology_until_it_is_one(desk):
+    """`verify` takes the settings as they are, climatological mean and all."""
+    desk.write(
+        ("climate = 20.0", "climate = 200.0"), ("starts = 3", "starts = 24"),
+        ("start_spacing = 0.4", "start_spacing = 1.0"), ("leads = 11", "leads = 14"),
+        ("lead_spacing = 0.1", "lead_spacing = 0.5"), ("members = 5", "members = 10"),
+        ("[versions.B]\nparameters = { forcing = 9.0 }\n", ""),
+    )  # fmt: skip
+    desk.made()
+    result = desk.run("verify", desk.archive / "A.toml", "--quiet")
+    assert result.exit_code == 0, result.stderr
+    scores = {}
+    with (desk.archive / "products_A" / "scores.csv").open(newline="") as file:
+        for row in csv.DictReader(file):
+            ends = [float(row[key] or "nan") for key in ("value", "low", "high")]
+            scores.setdefault(row["score"], []).append(ends)
+    value, low, high = np.array(scores["skill_climatology"]).T
+    # At the start the analysis lies in the middle of members that scatter by 0.2 about it. Normal
+    # errors s: E|x| - E|x - x'|/2 = (sqrt(2) - 1) s / sqrt(pi); climatology has sigma / sqrt(pi).
+    with xr.open_dataset(desk.archive / "climatology.nc") as climate:
+        sigma = float(climate.x.mean())
+    assert value[0] == pytest.approx(1 - (np.sqrt(2) - 1) * 0.2 / sigma, abs=0.003)
+    assert (np.diff(value[:6]) < 0).all()
+    assert low[3] > 0.2  # 180 hours
+    # Errors double in two days (Lorenz 1996): after a month nothing is left, in nine of ten
+    # intervals a lead; of four that depend on each other two at least.
+    assert np.abs(value[-4:]).max() < 0.12
+    assert ((low < 0) & (high > 0))[-4:].sum() >= 2
+    assert ((low < value) & (value < high)).all()
+    correlation = np.array(scores["anomaly_correlation"]).T[0]
+    assert correlation[0] > 0.999
+    assert np.abs(correlation[-4:]).max() < 0.3
 
 
 def test_a_rerun_completes_what_is_missing_and_leaves_the_rest(desk):

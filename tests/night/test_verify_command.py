@@ -376,6 +376,34 @@ def test_nothing_is_left_behind(archive, monkeypatch):
     assert list(scratch.iterdir()) == []
 
 
+def test_resamples_give_a_second_opinion_beside_the_intervals(archive):
+    archive.write()
+    archive.verify(REGION)
+    assert "block_low" not in rows(archive)[0]
+    plain = scores(archive, "North", "low")
+    archive.verify(
+        REGION + "[verification]\nresamples = 200\n",
+        variable='units = "degF"\ncriteria = [{tolerance = 1.5}]',
+    )
+    value, low, high, by_noise, length = (
+        scores(archive, "North", column)
+        for column in ("value", "block_low", "block_high", "low", "block_length")
+    )
+    for name in ("rmse", "crps", "spread_error_ratio", "skill_climatology"):
+        assert ((low[name] < value[name]) & (value[name] < high[name])).all()
+        size = 1.8 if name in ("rmse", "crps") else 1.0
+        assert by_noise[name] == pytest.approx(size * plain[name], rel=1e-4)
+        # Two ways to the same end: of 30 starts their widths agree within a half.
+        assert high[name] - low[name] == pytest.approx(2 * (value[name] - by_noise[name]), rel=0.5)
+        assert (length[name] >= 1).all()
+    with xr.open_dataset(archive.folder / "out" / "scores.nc") as data:
+        assert data.t2_rmse_block_low.values[0] == pytest.approx(low["rmse"], rel=1e-5)
+        assert data.t2_rmse_block_low.attrs["units"] == "degF"
+        assert data.t2_rmse_block_length.attrs["units"] == "1"
+    text = (archive.folder / "out" / "README_scores.txt").read_text()
+    assert "second opinion" in text
+
+
 def test_products_of_estimate_and_verify_share_a_folder(archive):
     archive.write()
     config = archive.settings(REGION, products='maps = "none"\nfigures = true')

@@ -13,7 +13,7 @@ from synthetic_products import GRIDS, make_maps, regular
 from ensemble_horizon.products.hour_scale import hour_scale, ramp, status_colours
 from ensemble_horizon.products.isolines import contour_lines, label_places
 from ensemble_horizon.products.map_legend import legend_entries, status_shares
-from ensemble_horizon.products.maps import _field, draw_horizon_map
+from ensemble_horizon.products.maps import draw_horizon_map, map_content
 from ensemble_horizon.products.places import Ground, PlaceMark
 from ensemble_horizon.products.view import map_view
 from ensemble_horizon.vocabulary import Status
@@ -90,7 +90,7 @@ def test_shares_are_shares_of_area():
     north = maps.latitude > 30
     maps["status"] = maps.status.where(~north, int(Status.beyond_run)).astype(np.int8)
     view = map_view(maps["horizon"])
-    content = _field(maps, None, None)
+    content = map_content(maps, None, None)
     shares = status_shares(view, content, 720, 360)
     # The cap north of 30 degrees is a quarter of the sphere: (1 - sin 30) / 2.
     assert shares[Status.beyond_run] == pytest.approx(0.25, abs=0.003)
@@ -168,13 +168,13 @@ def test_the_line_below_the_title_names_criterion_start_and_members():
     maps = make_maps(GRIDS["tiny"](), criteria=("tolerance 2.5", "gale"))
     one = maps.isel(start=0, criterion=0)
     expected = "Criterion: tolerance 2.5 m s-1   ·   start 2031-01-05 00:00 UTC   ·   20 members"
-    assert _field(one, None, None).subtitle == expected
+    assert map_content(one, None, None).subtitle == expected
     bare = one.drop_vars(["threshold", "lead"]).assign_coords(criterion_kind="tolerance")
     bare = bare.assign_attrs(lead_units="hours", last_lead=120.0)
-    assert _field(bare, None, None).subtitle == expected
-    assert _field(bare, None, None).last_lead == 120.0
+    assert map_content(bare, None, None).subtitle == expected
+    assert map_content(bare, None, None).last_lead == 120.0
     pooled = one.assign_coords(start=np.datetime64("NaT", "ns"), start_label="all")
-    assert "·   all starts pooled   ·" in _field(pooled, None, None).subtitle
+    assert "·   all starts pooled   ·" in map_content(pooled, None, None).subtitle
 
 
 def test_outlines_are_repeated_on_the_turn_of_the_window():

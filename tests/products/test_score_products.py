@@ -52,6 +52,7 @@ class Scored:
             "horizon_low": (("limit", "place"), times - 8),
             "horizon_high": (("limit", "place"), times + 9),
             "significant_until": (("limit", "place"), times - 8),
+            "gap": (("limit", "place"), np.full_like(times, np.nan)),
             "status": (("limit", "place"), flags),
             "significant_status": (("limit", "place"), flags),
         }

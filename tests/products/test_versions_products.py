@@ -14,9 +14,10 @@ from synthetic_products import GRIDS
 from ensemble_horizon.errors import ProductError
 from ensemble_horizon.horizon import time_to_limit
 from ensemble_horizon.products import gains, summary_words, write_products, write_versions
+from ensemble_horizon.products.difference_figure import draw_differences, outcome_words
 from ensemble_horizon.products.gain_maps import draw_gain_map, faint, gain_scale
 from ensemble_horizon.products.gains import telling_first
-from ensemble_horizon.products.gains_figure import MOST_ROWS, draw_gains
+from ensemble_horizon.products.gains_figure import FURTHER_A, FURTHER_B, MOST_ROWS, draw_gains
 from ensemble_horizon.products.gains_table import COLUMNS
 from ensemble_horizon.serial import REASON_ATTRIBUTES
 
@@ -68,6 +69,43 @@ def make_places(rows=ROWS, **about):
             "place": names, "place_kind": ("place", ["site"] * len(rows)),
             "criterion": ["tolerance 5"], "criterion_kind": ("criterion", ["tolerance"]),
             "threshold_units": ("criterion", ["m s-1"]),
+        },
+        attrs=ABOUT | about,
+    )  # fmt: skip
+
+
+# difference and half its interval by lead; told apart where the interval is free of zero
+DIFFERENCES = [(-0.1, 0.3), (-0.5, 0.2), (-0.6, 0.2), (0.1, 0.4), (0.7, 0.3)]
+
+
+def make_differences(places=2, rows=DIFFERENCES, given=True, **about):
+    value, half = (np.array(column) for column in zip(*rows, strict=True))
+    half = half if given else np.full(half.shape, NAN)
+    survives = np.abs(value) > half
+
+    def everywhere(values):
+        table = np.broadcast_to(values[:, np.newaxis], (2, values.size, places))
+        return (("score", "lead", "place"), table.copy())
+
+    return xr.Dataset(
+        {
+            "difference": everywhere(value), "difference_low": everywhere(value - half),
+            "difference_high": everywhere(value + half), "mean_a": everywhere(2 + 0 * value),
+            "mean_b": everywhere(2 + value), "starts": everywhere(np.full(value.shape, 24)),
+            "p_value": everywhere(np.where(np.isnan(half), NAN, np.where(survives, 0.01, 0.4))),
+            "adjusted_p_value": everywhere(
+                np.where(np.isnan(half), NAN, np.where(survives, 0.02, 0.5))
+            ),
+            "survives": everywhere(survives & given),
+            "reason": everywhere(np.full(value.shape, 0 if given else 1)),
+        },
+        coords={
+            "score": ["crps", "squared_error"],
+            "score_text": ("score", ["fair CRPS", "squared error of the ensemble mean"]),
+            "score_units": ("score", ["m s-1", "(m s-1)2"]),
+            "lead": ("lead", 24.0 * np.arange(value.size), {"units": "hours"}),
+            "place": [f"place {number} $x$" for number in range(places)],
+            "against": ("place", ["analysis"] * places),
         },
         attrs=ABOUT | about,
     )  # fmt: skip
@@ -207,3 +245,83 @@ def test_many_rows_go_to_a_second_page(tmp_path):
     paths = draw_gains([places], tmp_path / "gains.png")
     assert [path.name for path in paths] == ["gains.png", "gains_2.png"]
     assert all(path.is_file() for path in paths)
+
+
+def test_differences_are_told_in_words():
+    one = make_differences().isel(place=0, score=0)
+    assert outcome_words(one) == "new errs less at 24–48\u00a0h, old $x$ at 96\u00a0h"
+    signs = [1, 0, 1, 0, 1, 0, -1, 0, -1]
+    many = make_differences(rows=[(sign, 0.5) for sign in signs]).isel(place=0, score=0)
+    assert outcome_words(many) == (
+        "old $x$ errs less at 0\u00a0h and at 48\u00a0h and at 96\u00a0h, and 2 more stretches"
+    )
+    few = make_differences(given=False).isel(place=0, score=0)
+    assert outcome_words(few) == "not judged, few starts"
+    assert outcome_words(few.assign(difference=0 * few.difference)) == "no difference"
+    assert outcome_words(few.assign(difference=NAN * few.difference)) == "nothing to compare"
+    close = make_differences(rows=[(0.1, 0.3), (-0.1, 0.3)]).isel(place=0, score=0)
+    assert outcome_words(close) == "not told apart"
+
+
+def test_a_figure_of_differences_has_the_colours_of_who_errs_less(tmp_path):
+    def seen(part):
+        path = draw_differences(part, tmp_path / "differences.png")[0]
+        picture = np.asarray(Image.open(path).convert("RGB")).reshape(-1, 3)
+        found, counts = np.unique(picture, axis=0, return_counts=True)
+        count = dict(zip(map(tuple, found.tolist()), counts.tolist(), strict=True))
+        return [count.get(tuple(int(c, 16) for c in (k[1:3], k[3:5], k[5:])), 0)
+                for k in (FURTHER_A, FURTHER_B)]  # fmt: skip
+
+    words = seen(make_differences(given=False))  # of the sides only
+    both = seen(make_differences())
+    assert both[0] > words[0] + 30 and both[1] > words[1] + 60
+    better = seen(make_differences(rows=[(-1.0, 0.2)] * 5))
+    assert better[1] > words[1] + 60 and better[0] <= words[0]
+
+
+def _size(path):
+    with Image.open(path) as picture:
+        return picture.size
+
+
+def test_many_places_go_to_a_second_page_of_differences(tmp_path):
+    paths = draw_differences(make_differences(places=7), tmp_path / "d.png")
+    assert [path.name for path in paths] == ["d.png", "d_2.png"]
+    first, second = (_size(path) for path in paths)
+    assert first[0] > second[0] and first[1] > second[1]
+
+
+@pytest.mark.parametrize("leads", [1, 2, 90])
+def test_differences_of_any_number_of_leads_are_drawn(tmp_path, leads):
+    part = make_differences(places=1, rows=(DIFFERENCES * 18)[:leads])
+    assert draw_differences(part, tmp_path / "d.png")[0].is_file()
+
+
+def test_scores_stand_in_every_product(tmp_path, provenance):
+    """Also where another variable has the name that a score would have in the file."""
+    maps = make_gain_maps(GRIDS["tiny"]())
+    results, scores = [], []
+    for name in ("t_crps", "t_map", "t"):
+        about = ABOUT | {"variable": name}
+        one = make_result(maps.assign_attrs(about))
+        results.append(Result(one.places.assign_attrs(about), one.maps, one.shares))
+        scores.append(make_differences(variable=name))
+    paths = write_versions(tmp_path, results, provenance, scores=scores, notes={})
+    figures = {path.name for path in paths if path.suffix == ".png"}
+    assert {f"{name}_score_differences.png" for name in ("t_crps", "t_map", "t")} <= figures
+    with xr.open_dataset(tmp_path / "versions.nc") as data:
+        for name in ("t_crps_p_value", "t_map_p_value", "t_map_2_gained", "t_crps_2_p_value"):
+            assert name in data
+        difference = data["t_crps_2_difference"]
+        assert difference.dims == ("t_scored_place", "lead")
+        np.testing.assert_allclose(difference[1], [row[0] for row in DIFFERENCES])
+        assert difference.attrs["long_name"] == (
+            "new less old $x$, start by start: fair CRPS: 10 m wind speed [B]"
+        )
+        assert data["t_squared_error_difference"].attrs["units"] == "(m s-1)2"
+        assert data["t_squared_error_survives"].values[0].tolist() == [0, 1, 1, 0, 1]
+    with (tmp_path / "score_differences.csv").open(newline="", encoding="utf-8") as file:
+        rows = [row for row in csv.DictReader(file) if row["variable"] == "t"]
+    assert len(rows) == 2 * 2 * 5
+    assert [row["survives"] for row in rows[:5]] == ["no", "yes", "yes", "no", "yes"]
+    assert {row["adjusted_p_value"] for row in rows} == {"0.02", "0.5"}

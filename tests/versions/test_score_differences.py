@@ -7,6 +7,7 @@ import xarray as xr
 import ensemble_horizon as eh
 from ensemble_horizon import ArgumentError
 from ensemble_horizon.serial import serial_mean
+from ensemble_horizon.versions.verified import compare_verified
 
 LEAD = np.arange(0.0, 126.0, 6.0)
 
@@ -143,10 +144,10 @@ def test_an_analysis_tells_which_version_scores_better():
         found.crps_difference_high >= -0.2 * size
     )
     assert inside.mean() >= 0.8
-    # Mean of M members about the analysis: size^2 / M.
+    # Mean of M members about the analysis: size^2 / M; that of 25 is told as if it were of 10.
     square = (0.1 * np.exp(0.04 * LEAD)) ** 2
-    inside = (found.squared_error_difference_low <= square * (0.64 / 25 - 1 / 10)) & (
-        found.squared_error_difference_high >= square * (0.64 / 25 - 1 / 10)
+    inside = (found.squared_error_difference_low <= square * (0.64 / 10 - 1 / 10)) & (
+        found.squared_error_difference_high >= square * (0.64 / 10 - 1 / 10)
     )
     assert inside.mean() >= 0.8
     assert found.squared_error_a.attrs["units"] == "(K)2"
@@ -157,6 +158,30 @@ def test_an_analysis_tells_which_version_scores_better():
     xr.testing.assert_equal(
         found[list(without.data_vars)].drop_vars("lead", errors="ignore"), without
     )
+
+
+def test_more_members_alone_do_not_make_a_smaller_squared_error():
+    """Members and analysis from one distribution: sigma^2 (1 + 1/M), told as with 4 in both.
+
+    In each case the mean of 4 errs by sigma^2 (1 + 1/4), in closed form; the variance is the
+    members' own, so the correction is right on average, not to the digit.
+    """
+    rng = np.random.default_rng(11)
+    coords = {"start": np.arange(4000), "lead": [24.0]}
+    few, many = (
+        xr.DataArray(
+            rng.standard_normal((4000, 1, members)), dims=("start", "lead", "member"), coords=coords
+        )
+        for members in (4, 40)
+    )
+    analysis = xr.DataArray(rng.standard_normal((4000, 1)), dims=("start", "lead"), coords=coords)
+    found = compare_verified(few, many, analysis, confidence=0.99)
+    assert float(found.squared_error_a[0]) == pytest.approx(1.25, abs=0.1)
+    assert float(found.squared_error_b[0]) == pytest.approx(1.25, abs=0.1)
+    low, high = found.squared_error_difference_low, found.squared_error_difference_high
+    assert float(low[0]) < 0 < float(high[0])
+    # Uncorrected it would be 1/40 - 1/4, far outside.
+    assert float(low[0]) > 1 / 40 - 1 / 4
 
 
 def test_what_versions_cannot_be_is_refused():

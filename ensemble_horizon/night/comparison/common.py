@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ensemble_horizon.errors import InputError
+from ensemble_horizon.night.comparison.members import note_sizes
 from ensemble_horizon.night.comparison.named import (
     Notes,
     named_in_both,
@@ -17,7 +18,7 @@ from ensemble_horizon.night.estimate import Progress
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import MapPlan, map_plan
 from ensemble_horizon.night.variables import Variable, resolve_variable
-from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.runs.units import same_units
 from ensemble_horizon.serial.mean import LEAST_STARTS
 from ensemble_horizon.settings import Settings
@@ -38,6 +39,7 @@ class CommonGround:
     first_lead : float, the later first lead of the two
     plan : MapPlan, of both
     notes : Notes
+    faults : of both, those of the headers first
     """
 
     labels: tuple[str, str]
@@ -47,6 +49,7 @@ class CommonGround:
     first_lead: float
     plan: MapPlan
     notes: Notes
+    faults: tuple[list[Fault], list[Fault]]
 
     @property
     def starts(self) -> list[str]:
@@ -87,14 +90,15 @@ def common_ground(
     first_lead = _leads(catalogues, labels, notes)
     criteria = _criteria(settings, catalogues, labels, notes)
     plan = _map_plan(settings, catalogues, labels, notes)
-    _members(catalogues, labels, notes)
+    note_sizes((first, second), labels, notes)
+    _caution_of_confidence(settings, labels, notes)
     kept = tuple(
         item.model_copy(update={"variables": {name: item.variables[name] for name in criteria}})
         for item in settings
     )
     return CommonGround(
         labels, (kept[0], kept[1]), (first.at(starts), second.at(starts)), criteria,
-        first_lead, plan, notes,
+        first_lead, plan, notes, (list(first.faults), list(second.faults)),
     )  # fmt: skip
 
 
@@ -246,6 +250,17 @@ def _caution_of_thresholds(
         )
 
 
+def _caution_of_confidence(
+    settings: tuple[Settings, Settings], labels: tuple[str, str], notes: Notes
+) -> None:
+    a, b = (item.growth.confidence for item in settings)
+    if a != b:
+        notes.cautions.append(
+            f"intervals are given at {100 * a:g} %, as the settings of {labels[0]} ask; those of "
+            f"{labels[1]} ask for {100 * b:g} %"
+        )
+
+
 def _map_plan(
     settings: tuple[Settings, Settings],
     catalogues: tuple[Catalogue, Catalogue],
@@ -267,14 +282,3 @@ def _map_plan(
             "name a region that both cover"
         )
     return none
-
-
-def _members(
-    catalogues: tuple[Catalogue, Catalogue], labels: tuple[str, str], notes: Notes
-) -> None:
-    a, b = (len(item.members) for item in catalogues)
-    if a != b:
-        notes.cautions.append(
-            f"{labels[0]} has {a} members and {labels[1]} {b}: the spread of fewer members is "
-            "noisier and passes a threshold a little earlier for that alone"
-        )

@@ -13,6 +13,14 @@ import xarray as xr
 from ensemble_horizon.errors import ProductError
 from ensemble_horizon.night.briefing import drawn_by, map_ground
 from ensemble_horizon.night.comparison.common import CommonGround, common_ground
+from ensemble_horizon.night.comparison.factors import (
+    SharedNoise,
+    calibrated_version,
+    factor_noise,
+)
+from ensemble_horizon.night.comparison.gaps import note_faults
+from ensemble_horizon.night.comparison.judging import judge_together
+from ensemble_horizon.night.comparison.members import members_used, note_members
 from ensemble_horizon.night.comparison.named import Notes
 from ensemble_horizon.night.comparison.scores import score_differences
 from ensemble_horizon.night.estimate import Progress, estimate_input, silent
@@ -91,8 +99,11 @@ def compare(
     """
     ground = common_ground(settings, labels, progress)
     results = [_variable(ground, name, progress) for name in ground.criteria]
-    _judge_together([result.places for result in results])
+    judge_together([result.places for result in results])
     scores = score_differences(ground, float(results[0].places.attrs["confidence"]), progress)
+    judge_together(scores)
+    for label, faults in zip(labels, ground.faults, strict=True):
+        note_faults(label, faults, ground.starts, ground.notes)
     ground.notes.cautions.append(_caution_of_spread(ground))
     inputs = [path for found in ground.found for path in found.catalogue.paths]
     return Comparison(
@@ -146,18 +157,31 @@ def compare_and_write(
 
 def _variable(ground: CommonGround, name: str, progress: Progress) -> VersionsResult:
     """Both versions of one variable, one after the other; only limits are kept of each."""
-    found = []
-    for label, settings, input_ in zip(ground.labels, ground.of(name), ground.found, strict=True):
+    found: list[VariableResult] = []
+    used = []
+    for number, settings in enumerate(ground.of(name)):
+        label, input_ = ground.labels[number], ground.found[number]
 
         def told(stage: str, done: float, total: float, label: str = label) -> None:
             progress(f"{stage} {name} of {label}", done, total)
 
-        found.append(estimate_input(settings, input_, ground.plan, told).results[0])
+        estimate = estimate_input(settings, input_, ground.plan, told)
+        found.append(estimate.results[0])
+        faults = estimate.faults[len(input_.faults) :]
+        ground.faults[number].extend(faults)
+        sources = settings.variables[name].sources(name)
+        used.append(members_used(settings, input_, sources, faults))
+    note_members(name, (used[0], used[1]), ground.labels, ground.notes)
     a, b = (_limits(result, ground.criteria[name], ground.first_lead) for result in found)
     confidence = float(a.attrs["confidence"])
     ends = (float(a.attrs["last_lead"]), float(b.attrs["last_lead"]))
     first = ground.first_lead
-    places = compare_horizons(a, b, last_lead=ends, first_lead=first, confidence=confidence)
+    noise = _noise_of_factors(ground, name, found, (first, min(ends)))
+    places = compare_horizons(
+        a, b, last_lead=ends, first_lead=first, confidence=confidence,
+        shared_variance=None if noise is None else noise.variance,
+        shared_dof=np.inf if noise is None else noise.dof,
+    )  # fmt: skip
     about = {
         **{key: a.attrs[key] for key in ("variable", "long_name", "units", "confidence")},
         "lead_units": a.attrs["lead_units"],
@@ -175,13 +199,33 @@ def _variable(ground: CommonGround, name: str, progress: Progress) -> VersionsRe
     return VersionsResult(places.assign_attrs(about), maps, (shares[0], shares[1]))
 
 
+def _noise_of_factors(
+    ground: CommonGround,
+    name: str,
+    found: Sequence[VariableResult],
+    span: tuple[float, float],
+) -> SharedNoise | None:
+    """What the factors of the calibrations add to the noise of the gains of one variable."""
+    versions = [
+        calibrated_version(
+            settings,
+            input_.catalogue,
+            name,
+            without_pooled(result.curves).sel({CRITERION: ground.criteria[name]}),
+        )
+        for settings, input_, result in zip(ground.settings, ground.found, found, strict=True)
+    ]
+    return factor_noise(versions, span)
+
+
 def _caution_of_spread(ground: CommonGround) -> str:
     """What the limits of both versions rest on."""
     files = [item.calibration and item.path(item.calibration.file) for item in ground.settings]
     if all(files):
         return (
             "limits rest on spread calibrated by past errors of each version; the uncertainty of "
-            "the factors is not in the intervals of the gains"
+            "the factors is in the intervals of the gains at regions and sites, not on maps, and "
+            "rather too wide where both were found from the same past starts"
         )
     if any(files):
         one = ground.labels[0 if files[0] else 1]
@@ -260,19 +304,3 @@ def _points(maps: xr.Dataset, row: int, part: slice) -> xr.Dataset:
         },
         coords={START: maps[START].values},
     )
-
-
-def _judge_together(parts: Sequence[xr.Dataset]) -> None:
-    """Judge the rows of all variables together, and add what was found to each."""
-    rows = xr.DataArray(
-        np.concatenate([part["p_value"].values.ravel() for part in parts]), dims="row"
-    )
-    judged = false_discovery(rows)
-    begin = 0
-    for part in parts:
-        dims, shape = part["p_value"].dims, part["p_value"].shape
-        here = slice(begin, begin + part["p_value"].size)
-        for name, key in (("adjusted_p_value", "adjusted"), ("survives", "significant")):
-            values = judged[key].values[here].reshape(shape)
-            part[name] = (dims, values, judged[key].attrs)
-        begin = here.stop

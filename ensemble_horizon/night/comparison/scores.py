@@ -1,18 +1,30 @@
-"""Scores of two versions, start by start against what came."""
+"""Scores of two versions, start by start against what came.
+
+The mean of M members errs by more than that of very many: its squared error has an expected surplus
+of s^2/M, s^2 being the variance between the members (Ferro 2014; Leutbecher 2019, both Quarterly
+Journal of the Royal Meteorological Society, from memory). So that neither version gains by its
+number of members, squared errors of both are those of the mean of as many members as the smaller
+ensemble has: e^2 - s^2/M + s^2/m. The fair CRPS needs no such step. Both hold for members that are
+alike and independent given the start; the mean of members perturbed in pairs of opposite sign errs
+less than this supposes.
+"""
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import NamedTuple
 
 import numpy as np
 import xarray as xr
 
 from ensemble_horizon.night.comparison.common import CommonGround
+from ensemble_horizon.night.comparison.gaps import note_gaps
 from ensemble_horizon.night.estimate import Progress
 from ensemble_horizon.night.verification.results import VerifiedResult
 from ensemble_horizon.night.verification.scores import series_of
 from ensemble_horizon.night.verification.verifying import verify_input
 from ensemble_horizon.settings import Settings
+from ensemble_horizon.skill.reduction import ScoreSums
 from ensemble_horizon.versions import compare_scores
 from ensemble_horizon.vocabulary import LEAD, PLACE, SCORE, START
 
@@ -59,15 +71,39 @@ def score_differences(
             "scores: the two versions are held against other analyses or observations, and part "
             "of the difference may come from there"
         )
+    _note_sizes(ground)
     found = []
     chosen = [_only(settings, names) for settings in ground.settings]
-    for label, settings, input_ in zip(ground.labels, chosen, ground.found, strict=True):
+    for version, (label, input_) in enumerate(zip(ground.labels, ground.found, strict=True)):
 
         def told(stage: str, done: float, total: float, label: str = label) -> None:
             progress(f"{stage} {label}", done, total)
 
-        found.append(verify_input(settings, input_, told).results)
-    return [_differences(ground, a, b, confidence) for a, b in zip(found[0], found[1], strict=True)]
+        found.append(verify_input(chosen[version], input_, told))
+        ground.faults[version].extend(found[-1].faults)
+        ground.notes.left_out += [f"scores of {label}: {text}" for text in found[-1].left_out]
+    a, b = found
+    note_gaps((a.gaps, b.gaps), ground.labels, ground.notes)
+    return [
+        _differences(ground, first, second, confidence)
+        for first, second in zip(a.results, b.results, strict=True)
+    ]
+
+
+def _sizes(ground: CommonGround) -> tuple[int, int]:
+    """Members of both versions."""
+    a, b = (len(item.catalogue.members) for item in ground.found)
+    return a, b
+
+
+def _note_sizes(ground: CommonGround) -> None:
+    few, many = sorted(_sizes(ground))
+    if few != many:
+        ground.notes.cautions.append(
+            f"scores: squared errors of both are those of the mean of {few} members: by how much "
+            f"the mean of {few} errs more than that of {many} is told by the spread, and added "
+            "(Ferro 2014, Leutbecher 2019); the fair CRPS does not depend on the number of members"
+        )
 
 
 def _scored(settings: Settings, name: str) -> bool:
@@ -104,9 +140,9 @@ def _differences(
     parts = []
     for quantity, (text, power) in COMPARED.items():
         first, second = (
-            _series(version, input_.catalogue.starts, quantity, power, names).assign_attrs(
-                long_name=text, units=_units(a, power)
-            )
+            _series(
+                version, input_.catalogue.starts, quantity, power, names, min(_sizes(ground))
+            ).assign_attrs(long_name=text, units=_units(a, power))
             for version, input_ in zip((a, b), ground.found, strict=True)
         )
         parts.append(compare_scores(first, second, confidence=confidence))
@@ -122,9 +158,13 @@ def _differences(
         }
     ).assign_attrs(
         variable=a.frame.variable,
+        long_name=a.frame.long_name,
         lead_units=a.frame.lead_units,
         version_a=ground.labels[0],
         version_b=ground.labels[1],
+        start_count=len(ground.starts),
+        first_start=ground.starts[0],
+        last_start=ground.starts[-1],
         confidence=confidence,
     )
 
@@ -140,10 +180,11 @@ def _series(
     quantity: str,
     power: int,
     names: list[tuple[str, str]],
+    members: int,
 ) -> xr.DataArray:
     """What each start brings of a quantity: (start, lead, place), in the units of the results."""
     columns = [
-        series_of(sums, quantity)[..., : len(result.kinds[what])]
+        _brought(sums, quantity, members)[..., : len(result.kinds[what])]
         for what, sums in result.series.items()
     ]
     values = np.concatenate(columns, axis=-1) * result.factor**power
@@ -151,8 +192,18 @@ def _series(
     return xr.DataArray(
         values[..., [own.index(name) for name in names]],
         dims=(START, LEAD, PLACE),
-        coords={START: starts, LEAD: result.frame.lead},
+        coords={START: starts, LEAD: result.frame.lead_axis},
     )
+
+
+def _brought(sums: Sequence[ScoreSums], quantity: str, members: int) -> np.ndarray:
+    """What each start brings (S, L, R); squared errors as of the mean of so many members."""
+    values = series_of(sums, quantity)
+    if quantity != "squared_error":
+        return values
+    variance = series_of(sums, "variance")
+    surplus = series_of(sums, "expected_squared_error") - variance  # over the members that count
+    return np.asarray(values - surplus + variance / members)
 
 
 def _units(result: VerifiedResult, power: int) -> str:

@@ -1,6 +1,8 @@
 """Many starts held against analyses and observations.
 
-In reading order: `sources` (what they are held against), `climate`, `scratch`, `reading` (one
-block), `faults`, `scores` (places), `maps`, `results`, `cells`, `verifying` (the stage),
-`calibrating`, `writing` (products).
+In reading order: `gaps`, `sources` (what they are held against), `climate`, `scratch`, `faults`,
+`reading` (one block), `scores` (places), `maps`, `results`, `cells`, `starts` (all of a variable),
+`verifying` (the stage), `calibrating`, `writing` (products). Night by night: `definition` (what
+sums depend on), `past` (starts by the names of files), `shelf` (the archive of sums), `newly` (one
+start verified), `pooling` (the sums of several), `rolling` (all of it strung together).
 """

@@ -9,13 +9,14 @@ import numpy as np
 import xarray as xr
 
 from ensemble_horizon.errors import ArgumentError, InputError
+from ensemble_horizon.night.geometry import geometry_of
+from ensemble_horizon.night.variables import resolve_places
 from ensemble_horizon.night.verification.cells import cell_middles
 from ensemble_horizon.night.verification.results import VerifiedResult
 from ensemble_horizon.night.verification.scores import series_of
 from ensemble_horizon.night.verification.verifying import Verification
 from ensemble_horizon.products.calibration_file import Calibration
 from ensemble_horizon.runs import Catalogue
-from ensemble_horizon.serial.starts import start_names
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.skill import calibration_factor
 from ensemble_horizon.skill.consistency import EXPECTED, SQUARED
@@ -67,7 +68,29 @@ def _calibration(settings: Settings, result: VerifiedResult, runs: Catalogue) ->
                 "%g; about %d are needed",
                 name, place, int(one["starts"].max()), wanted, int(one["starts_needed"]),
             )  # fmt: skip
-    return Calibration(places, _cells(result, runs, name, wanted, confidence))
+    return Calibration(
+        _located(places, settings, runs),
+        _cells(result, runs, name, wanted, confidence),
+        _starts(pair),
+    )
+
+
+def _located(factors: xr.Dataset, settings: Settings, runs: Catalogue) -> xr.Dataset:
+    """The factors, and where their places lie."""
+    places = resolve_places(settings, runs)
+    names = [name for name, _ in places.names]
+    rows = [names.index(name) for name in factors[PLACE].values]
+    box, mean = geometry_of(settings, runs, places)
+    return factors.assign_coords(
+        box=((PLACE, "edge"), box[rows]), mean_position=((PLACE, "axis"), mean[rows])
+    )
+
+
+def _starts(pair: xr.Dataset) -> tuple[str, ...]:
+    """Names of the starts that bring anything."""
+    both = pair[EXPECTED].notnull() & pair[SQUARED].notnull()
+    there = both.any([LEAD, PLACE]).values
+    return tuple(str(name) for name in pair[START].values[there])
 
 
 def _pair_of_places(result: VerifiedResult, runs: Catalogue) -> xr.Dataset:
@@ -106,7 +129,7 @@ def _pair(
     values: list[np.ndarray], result: VerifiedResult, runs: Catalogue, dimension: str
 ) -> xr.Dataset:
     dims = (START, LEAD, dimension)
-    labels = start_names(runs.starts)
+    labels = [runs.start_label(number) for number in range(runs.starts.size)]
     coords = {START: labels, LEAD: result.frame.lead_axis}
     return xr.Dataset(dict(zip((EXPECTED, SQUARED), ((dims, v) for v in values), strict=True)),
                       coords=coords)  # fmt: skip

@@ -57,6 +57,16 @@ class MapSums:
             self.total[name][leads, where] += values if whole else np.where(known, values, 0)
             self.count[name][leads, where] += np.uint16(1) if whole else known
 
+    def take_back(
+        self, fields: dict[str, np.ndarray], leads: slice, points: np.ndarray | None
+    ) -> None:
+        """Undo `add` of a block that gave these fields."""
+        where = slice(None) if points is None else points
+        for name, values in fields.items():
+            known = np.isfinite(values)
+            self.total[name][leads, where] -= np.where(known, values, 0)
+            self.count[name][leads, where] -= known
+
     def scores(self, factor: float) -> dict[str, np.ndarray]:
         """Values (L, P) float32 of the mapped scores."""
         found = {}

@@ -7,12 +7,13 @@ size of the ensemble leaves the process that read it.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from ensemble_horizon.night.engine import shared
 from ensemble_horizon.night.reading import Block, Damage, read_part, window_points
+from ensemble_horizon.night.verification.faults import Members, members_of
 from ensemble_horizon.night.verification.scratch import Scratch
 from ensemble_horizon.night.verification.sources import Analyses, Observed
 from ensemble_horizon.runs import Catalogue
@@ -66,59 +67,76 @@ class VerifyingContext:
 
 @dataclass
 class Verified:
-    """What a block gives: sums against analyses and against observations, and what was wrong.
+    """What a block gives: sums against analyses and against observations, and of its members.
 
-    damage : fields that could not be read; implausible : members left out, with their extremes
+    before : fields that the block gave with all members, where it was read again
     """
 
     sums: ScoreSums | None
     at_sites: ScoreSums | None
-    damage: Damage = field(default_factory=dict)
-    implausible: dict[int, tuple[float, float]] = field(default_factory=dict)
+    members: Members
+    before: dict[str, np.ndarray] = field(default_factory=dict)
 
 
 def verify_block(block: Block) -> Verified:
     """Read one block of all members and its analyses, and reduce them: runs in a worker."""
     context: VerifyingContext = shared()
-    catalogue, variable = context.catalogue, context.variables[block.variable]
-    damage: Damage = {}
-    values = magnitude([read_part(catalogue, name, block, damage) for name in variable.parts])
-    values = values.reshape(*values.shape[:2], -1)
-    found = Verified(None, None, damage, _without_implausible(values, variable))
-    points = window_points(catalogue.grid.shape, block.window)
-    if variable.analyses is not None:
-        truth = _analyses(variable.analyses, block, values)
-        still = _persistence(variable.analyses, block, values.dtype)
-        found.sums = reduce_scores(values, truth, variable.reduction, points, still, _moment(block))
-        _put_aside(found.sums, context.scratch, variable, block, points)
-    if variable.observed is not None:
-        found.at_sites = _at_sites(values, variable, variable.observed, block, points)
+    values, members = _read(context, block)
+    found = Verified(None, None, members)
+    _reduce(found, values, context, block)
     return found
 
 
-def _moment(block: Block) -> tuple[int, int]:
-    return block.start, block.leads[0]
+def verify_again(block: Block) -> Verified:
+    """Read one block once more and reduce it without some members: runs in a worker."""
+    context: VerifyingContext = shared()
+    values, members = _read(context, block)
+    found = Verified(None, None, members)
+    if context.variables[block.variable].reduction.fields:
+        _reduce(found, values, context, block)
+        assert found.sums is not None
+        found.before = found.sums.fields
+    values[list(block.without)] = np.nan
+    _reduce(found, values, context, block)
+    return found
+
+
+def _read(context: VerifyingContext, block: Block) -> tuple[np.ndarray, Members]:
+    """Values (M, T, P) of a block, NaN of members that are implausible in it, and their health."""
+    variable = context.variables[block.variable]
+    damage: Damage = {}
+    whole = replace(block, without=())
+    values = magnitude(
+        [read_part(context.catalogue, name, whole, damage) for name in variable.parts]
+    )
+    values = values.reshape(*values.shape[:2], -1)
+    members = members_of(values, damage)
+    # At once: running sums of fields could not be freed again of what is out of all proportion.
+    values[members.outside(variable.plausible)] = np.nan
+    return values, members
+
+
+def _reduce(found: Verified, values: np.ndarray, context: VerifyingContext, block: Block) -> None:
+    variable = context.variables[block.variable]
+    points = window_points(context.catalogue.grid.shape, block.window)
+    moment = _moment(context.catalogue, block)
+    if variable.analyses is not None:
+        truth = _analyses(variable.analyses, block, values)
+        still = _persistence(variable.analyses, block, values.dtype)
+        found.sums = reduce_scores(values, truth, variable.reduction, points, still, moment)
+        _put_aside(found.sums, context.scratch, variable, block, points)
+    if variable.observed is not None:
+        found.at_sites = _at_sites(values, variable, variable.observed, block, points, moment)
+
+
+def _moment(catalogue: Catalogue, block: Block) -> tuple[int, int]:
+    """What tells a block from others in time, whichever starts are verified along with it."""
+    return int(catalogue.start_ticks[block.start]) % 2**63, block.leads[0]
 
 
 def magnitude(parts: list[np.ndarray]) -> np.ndarray:
     """The only part, or the length of a vector."""
     return parts[0] if len(parts) == 1 else np.hypot(parts[0], parts[1], out=parts[0])
-
-
-def _without_implausible(
-    values: np.ndarray, variable: VerifiedVariable
-) -> dict[int, tuple[float, float]]:
-    """Take members with values outside the plausible range out of the block."""
-    if variable.plausible is None:
-        return {}
-    lowest, highest = variable.plausible
-    found = {}
-    for member, rows in enumerate(values):
-        low, high = float(np.fmin.reduce(rows, axis=None)), float(np.fmax.reduce(rows, axis=None))
-        if low < lowest or high > highest:
-            found[member] = (low, high)
-            rows[...] = np.nan
-    return found
 
 
 def _analyses(analyses: Analyses, block: Block, values: np.ndarray) -> np.ndarray:
@@ -151,6 +169,7 @@ def _at_sites(
     observed: Observed,
     block: Block,
     points: np.ndarray | None,
+    moment: tuple[int, int],
 ) -> ScoreSums | None:
     """Scores against observations at the sites that lie in the window."""
     where, which = located(observed.index, points)
@@ -167,7 +186,7 @@ def _at_sites(
             variable.at_sites,
             np.array([site]),
             still if np.isfinite(still).all() else None,
-            _moment(block),
+            moment,
         )
         found.add(part, slice(None), None)
     return found

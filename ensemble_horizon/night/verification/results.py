@@ -10,7 +10,7 @@ import numpy as np
 import xarray as xr
 
 from ensemble_horizon.horizon.skill_limits import Falls
-from ensemble_horizon.night.verification.scores import SCORES, PlaceScores
+from ensemble_horizon.night.verification.scores import SCORES, PlaceScores, place_scores
 from ensemble_horizon.runs import Grid
 from ensemble_horizon.serial import REASON_ATTRIBUTES
 from ensemble_horizon.skill.reduction import ScoreSums
@@ -35,6 +35,7 @@ _TIMES = {
     "horizon_low": "low",
     "horizon_high": "high",
     "significant_until": "significant_until",
+    "gap": "gap",
 }
 _FLAGS = {name: name for name in ("status", "significant_status")}
 
@@ -51,6 +52,7 @@ class Frame:
     confidence : float
     starts, members : int
     levels : what each score with a limit falls to
+    resamples : of blocks of starts, for a second opinion on intervals; 0 for none
     """
 
     variable: str
@@ -62,6 +64,7 @@ class Frame:
     starts: int
     members: int
     levels: Mapping[str, float]
+    resamples: int = 0
 
     @property
     def attributes(self) -> dict[str, Any]:
@@ -123,6 +126,29 @@ class VerifiedResult:
     factor: float
 
 
+def result_of_places(
+    frame: Frame,
+    kinds: Mapping[str, Sequence[tuple[str, str]]],
+    series: Mapping[str, Sequence[ScoreSums]],
+    factor: float,
+) -> VerifiedResult:
+    """Score all places from the sums of all starts, in order of time; without maps."""
+    scored = {
+        what: place_scores(
+            frame.lead,
+            sums,
+            factor,
+            dict(frame.levels),
+            frame.confidence,
+            len(kinds[what]),
+            frame.resamples,
+        )
+        for what, sums in series.items()
+    }
+    data = places_dataset(frame, kinds, scored)
+    return VerifiedResult(data, None, frame, kinds, series, factor)
+
+
 def places_dataset(
     frame: Frame,
     kinds: Mapping[str, Sequence[tuple[str, str]]],
@@ -152,6 +178,10 @@ def _one_truth(
         data[name] = ((SCORE, PLACE, LEAD), values.transpose(0, 2, 1))
     data["starts"] = (data["starts"][0], data["starts"][1].astype(np.int32))
     data["reason"] = (data["reason"][0], data["reason"][1].astype(np.int8), REASON_ATTRIBUTES)
+    if found.blocks:
+        for name in ("low", "high", "length"):
+            values = np.stack([getattr(found.blocks[score], name) for score in names])
+            data[f"block_{name}"] = ((SCORE, PLACE, LEAD), values.transpose(0, 2, 1))
     data["rank_share"] = ((PLACE, LEAD, RANK), found.ranks.transpose(1, 0, 2))
     data["rank_p_value"] = ((PLACE, LEAD), found.flat.p_value.T)
     data |= _limits(found.limits, (LIMIT, PLACE), (len(kinds),))

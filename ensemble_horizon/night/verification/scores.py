@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ensemble_horizon.horizon.skill_limits import Falls, falls_of_curves
+from ensemble_horizon.skill.blocks import BlockInterval, block_interval
 from ensemble_horizon.skill.flatness import Flatness, flatness
 from ensemble_horizon.skill.interval import STATISTICS, Interval, statistic_interval
 from ensemble_horizon.skill.quantities import QUANTITIES
@@ -84,12 +85,14 @@ class PlaceScores:
     Parameters
     ----------
     scores : by name, each member of the interval (L, R)
+    blocks : by name, each member of the interval by resampled blocks (L, R); empty unless asked for
     limits : by name of the score, each member of the falls (R,)
     ranks : (L, R, M + 1) shares, averaged over starts
     flat : each member (L, R)
     """
 
     scores: dict[str, Interval]
+    blocks: dict[str, BlockInterval]
     limits: dict[str, Falls]
     ranks: np.ndarray
     flat: Flatness
@@ -107,6 +110,7 @@ def place_scores(
     levels: dict[str, float],
     confidence: float,
     count: int,
+    resamples: int = 0,
 ) -> PlaceScores:
     """All scores that the sums of all starts give.
 
@@ -118,10 +122,12 @@ def place_scores(
     levels : what the scores that have a limit fall to
     confidence : of the intervals
     count : how many places are scored, of those in the sums
+    resamples : of blocks of starts, for a second opinion on the intervals
     """
     series = {name: series_of(sums, name)[..., :count] for name in QUANTITIES}
     starts, leads, places = series["error"].shape
     scores: dict[str, Interval] = {}
+    blocks: dict[str, BlockInterval] = {}
     for score in SCORES:
         inputs = np.stack([series[name] for name in score.inputs])
         if not np.isfinite(inputs).all(axis=0).any():
@@ -133,13 +139,17 @@ def place_scores(
         scaled = {name: _finite(getattr(found, name) * size) for name in ("value", "low", "high")}
         found = found._replace(**scaled)
         scores[score.name] = Interval(*(item.reshape(leads, places) for item in found))
+        if resamples:
+            drawn = block_interval(STATISTICS[score.statistic], flat, confidence, resamples)
+            drawn = drawn._replace(low=_finite(drawn.low * size), high=_finite(drawn.high * size))
+            blocks[score.name] = BlockInterval(*(item.reshape(leads, places) for item in drawn))
     limits = {
         name: falls_of_curves(lead, *scores[name][:3], level=level)
         for name, level in levels.items()
         if name in scores
     }
     counts = np.stack([item.ranks[:, :count] for item in sums])
-    return PlaceScores(scores, limits, *_ranks(counts))
+    return PlaceScores(scores, blocks, limits, *_ranks(counts))
 
 
 def limit_levels(skill: float, correlation: float) -> dict[str, float]:

@@ -9,13 +9,13 @@ import numpy as np
 
 from ensemble_horizon.errors import InputError, SettingsError
 from ensemble_horizon.night.variables import Places, Variable
+from ensemble_horizon.night.verification.gaps import Gap, tell_gaps
 from ensemble_horizon.runs import Catalogue, read_catalogue
+from ensemble_horizon.runs.files import Files
 from ensemble_horizon.runs.observations import Observations, read_observations
-from ensemble_horizon.runs.times import MICROSECONDS_PER_HOUR, STANDARD, iso_text
+from ensemble_horizon.runs.times import STANDARD
 from ensemble_horizon.runs.units import converter
 from ensemble_horizon.settings import Settings
-
-_NEAR = MICROSECONDS_PER_HOUR // 2
 
 log = logging.getLogger(__name__)
 
@@ -61,20 +61,6 @@ class Observed:
     at_start: np.ndarray
 
 
-@dataclass(frozen=True)
-class Gap:
-    """Valid times that nothing could be held against, in words."""
-
-    variable: str
-    what: str
-    missing: int
-    wanted: int
-    names: str
-
-    def __str__(self) -> str:
-        return f"{self.variable}: no {self.what} at {self.missing} of {self.wanted}: {self.names}"
-
-
 def require_truth(settings: Settings) -> None:
     """Refuse settings that name nothing to verify against.
 
@@ -99,10 +85,59 @@ def require_truth(settings: Settings) -> None:
             )
 
 
+def analysis_catalogue(settings: Settings, name: str, files: Files | None = None) -> Catalogue:
+    """The headers of the analyses of a variable: of some files, or of all that are named.
+
+    Raises
+    ------
+    SettingsError
+        if none are named, or a vector and a scalar are confused.
+    InputError
+        if they cannot be used.
+    """
+    parts = _analysis_parts(settings, name)
+    level = settings.variables[name].level
+    assert settings.analyses is not None
+    catalogue = read_catalogue(
+        settings.files(settings.analyses.files) if files is None else files,
+        variables=parts,
+        level=None if level is None else dict.fromkeys(parts, level),
+        analysis=True,
+    )
+    for fault in catalogue.faults:
+        log.warning("analyses: %s: %s", fault.file, fault.message)
+    return catalogue
+
+
+def _analysis_parts(settings: Settings, name: str) -> tuple[str, ...]:
+    """Source names of a variable in the analyses."""
+    own = settings.variables[name].sources(name)
+    named = own if settings.analyses is None else settings.analyses.names.get(name, own)
+    parts = (named,) if isinstance(named, str) else tuple(named)
+    if len(parts) != len(own):
+        raise SettingsError(
+            f"analyses.names.{name}",
+            expected=f"{len(own)} names, as the variable has in the runs",
+            found=f"{len(parts)}",
+            remedy="name the same components in the analyses",
+        )
+    return parts
+
+
 def open_analyses_of(
-    settings: Settings, runs: Catalogue, variable: Variable, gaps: list[Gap]
+    settings: Settings,
+    runs: Catalogue,
+    variable: Variable,
+    gaps: list[Gap],
+    held: Catalogue | None = None,
 ) -> Analyses | None:
     """Analyses of a variable at the valid times of the runs; None where none are named.
+
+    Parameters
+    ----------
+    held : Catalogue, optional
+        Analyses whose headers have been read. With them, a lack at all valid times is a gap like
+        any other.
 
     Raises
     ------
@@ -112,24 +147,8 @@ def open_analyses_of(
     table = settings.analyses
     if table is None:
         return None
-    named = table.names.get(variable.name, variable.parts)
-    parts = (named,) if isinstance(named, str) else tuple(named)
-    if len(parts) != len(variable.parts):
-        raise SettingsError(
-            f"analyses.names.{variable.name}",
-            expected=f"{len(variable.parts)} names, as the variable has in the runs",
-            found=f"{len(parts)}",
-            remedy="name the same components in the analyses",
-        )
-    level = settings.variables[variable.name].level
-    catalogue = read_catalogue(
-        settings.files(table.files),
-        variables=parts,
-        level=None if level is None else dict.fromkeys(parts, level),
-        analysis=True,
-    )
-    for fault in catalogue.faults:
-        log.warning("analyses: %s: %s", fault.file, fault.message)
+    parts = _analysis_parts(settings, variable.name)
+    catalogue = analysis_catalogue(settings, variable.name) if held is None else held
     where = f"analyses {table.files!r}"
     difference = runs.grid.difference(catalogue.grid)
     if difference is not None:
@@ -144,17 +163,28 @@ def open_analyses_of(
         for own, part in zip(variable.parts, parts, strict=True)
     )
     _same_calendar(runs, catalogue.calendar, where)
-    held = catalogue.start_ticks
+    times = catalogue.start_ticks
     wanted = _valid_ticks(runs)
-    position = _find(held, wanted)
-    _tell_gaps(gaps, variable.name, "analysis", where, runs, wanted, held, position >= 0)
-    return Analyses(catalogue, parts, scales, position, _find(held, runs.start_ticks))
+    position = _find(times, wanted)
+    there = position >= 0
+    tell_gaps(gaps, variable.name, "analysis", where, runs, wanted, times, there, held is None)
+    return Analyses(catalogue, parts, scales, position, _find(times, runs.start_ticks))
 
 
 def read_observed(
-    settings: Settings, runs: Catalogue, variable: Variable, places: Places, gaps: list[Gap]
+    settings: Settings,
+    runs: Catalogue,
+    variable: Variable,
+    places: Places,
+    gaps: list[Gap],
+    needed: bool = True,
 ) -> Observed | None:
     """Observations of a variable at the sites of the settings; None where none are named.
+
+    Parameters
+    ----------
+    needed : bool
+        Whether a site without any at all valid times is refused, and not a gap like any other.
 
     Raises
     ------
@@ -167,11 +197,11 @@ def read_observed(
     path = str(settings.path(table.file))
     found = read_observations(path, time=table.time, site=table.site, value=table.value)
     _same_calendar(runs, "standard", path)
-    zone = "converted to UTC" if found.with_offset else "without an offset: taken as UTC"
-    log.warning("observations of %s: times %s", variable.name, zone)
-    if found.empty:
-        log.warning("observations of %s: %d rows without a value", variable.name, found.empty)
+    if needed:
+        _tell_rows(found, variable.name)
     chosen = _observed_sites(found, places, variable.name, path)
+    if needed:
+        _tell_sites(found, places, variable.name)
     scale, offset = 1.0, 0.0
     if table.units is not None:
         key = f"observations.{variable.name}.units"
@@ -193,13 +223,13 @@ def read_observed(
             target[where >= 0] = level[where[where >= 0]]
         what = f"observation at {places.sites[number]}"
         there = np.isfinite(values[..., column])
-        _tell_gaps(gaps, variable.name, what, path, runs, wanted, held, there)
+        tell_gaps(gaps, variable.name, what, path, runs, wanted, held, there, needed)
     names = tuple(places.sites[number] for number in chosen)
     return Observed(names, places.site_index[chosen], values, at_start)
 
 
 def _observed_sites(found: Observations, places: Places, variable: str, path: str) -> list[int]:
-    """Sites of the settings that are observed, by position; the others are told."""
+    """Sites of the settings that are observed, by position."""
     chosen = [n for n, site in enumerate(places.sites) if site in found.values]
     if not chosen:
         raise InputError(
@@ -209,6 +239,17 @@ def _observed_sites(found: Observations, places: Places, variable: str, path: st
             found=f"observations at {', '.join(list(found.values)[:6])}",
             remedy="spell the sites as under [sites] in the settings, or add them there",
         )
+    return chosen
+
+
+def _tell_rows(found: Observations, variable: str) -> None:
+    zone = "converted to UTC" if found.with_offset else "without an offset: taken as UTC"
+    log.warning("observations of %s: times %s", variable, zone)
+    if found.empty:
+        log.warning("observations of %s: %d rows without a value", variable, found.empty)
+
+
+def _tell_sites(found: Observations, places: Places, variable: str) -> None:
     silent = [site for site in places.sites if site not in found.values]
     strange = [site for site in found.values if site not in places.sites]
     if silent:
@@ -217,7 +258,6 @@ def _observed_sites(found: Observations, places: Places, variable: str, path: st
         log.warning(
             "observations of %s: %s not in the settings, left out", variable, ", ".join(strange)
         )
-    return chosen
 
 
 def run_scale(runs: Catalogue, own: str, units: str | None, what: str) -> tuple[float, float]:
@@ -267,49 +307,3 @@ def _find(held: np.ndarray, wanted: np.ndarray) -> np.ndarray:
     """Position of each wanted time among the rising ones held, -1 where it is not there."""
     place = np.minimum(np.searchsorted(held, wanted), max(held.size - 1, 0))
     return np.where(held[place] == wanted, place, -1)
-
-
-def _tell_gaps(
-    gaps: list[Gap],
-    variable: str,
-    what: str,
-    where: str,
-    runs: Catalogue,
-    wanted: np.ndarray,
-    held: np.ndarray,
-    there: np.ndarray,
-) -> None:
-    """Note the valid times that have no match; refuse where there is none at all."""
-    every = np.unique(wanted)
-    lacking = np.setdiff1d(every, wanted[there])
-    if not lacking.size:
-        return
-    names = [iso_text(int(tick), runs.calendar) for tick in lacking]
-    near = _near_misses(held, lacking)
-    if not there.any():
-        first, last = (
-            [iso_text(int(t), runs.calendar) for t in (ticks.min(), ticks.max())]
-            for ticks in (held, every)
-        )
-        raise InputError(
-            where,
-            expected=f"an {what} of {variable} at one valid time of the runs at least "
-            f"({last[0]} to {last[1]})",
-            found=f"none; they run from {first[0]} to {first[1]}{near}",
-            remedy="correct the times: none is shifted" if near else "name those of these starts",
-        )
-    listed = ", ".join(names[:8]) + (f" and {len(names) - 8} more" if len(names) > 8 else "")
-    gap = Gap(variable, what, lacking.size, every.size, listed + near)
-    gaps.append(gap)
-    log.warning("%s: skipped", gap)
-
-
-def _near_misses(held: np.ndarray, lacking: np.ndarray) -> str:
-    """How many of the times miss one that is held by minutes only."""
-    place = np.searchsorted(held, lacking)
-    around = [held[np.clip(place + step, 0, held.size - 1)] for step in (-1, 0)]
-    away = np.min([np.abs(lacking - item) for item in around], axis=0)
-    close = away[away <= _NEAR]
-    if not close.size:
-        return ""
-    return f"; {close.size} of them miss one by {close.min() / 6e7:g} to {close.max() / 6e7:g} min"

@@ -3,18 +3,18 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Iterator
+from collections.abc import Mapping
 from contextlib import ExitStack
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
+import xarray as xr
 
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.engine import Engine, workers_for
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import map_plan
-from ensemble_horizon.night.reading import Block, plan_blocks, window_points
 from ensemble_horizon.night.variables import (
     Places,
     Variable,
@@ -27,9 +27,8 @@ from ensemble_horizon.night.verification.climate import (
     only_where,
     usable_deviation,
 )
-from ensemble_horizon.night.verification.faults import block_faults, refuse_if_stopped
+from ensemble_horizon.night.verification.gaps import Gap
 from ensemble_horizon.night.verification.maps import (
-    MapSums,
     kept_quantities,
     map_falls,
     mapped_quantities,
@@ -38,27 +37,26 @@ from ensemble_horizon.night.verification.maps import (
 from ensemble_horizon.night.verification.reading import (
     VerifiedVariable,
     VerifyingContext,
-    verify_block,
 )
 from ensemble_horizon.night.verification.results import (
     Frame,
     VerifiedResult,
     maps_dataset,
-    places_dataset,
+    result_of_places,
 )
-from ensemble_horizon.night.verification.scores import SKILLS, limit_levels, place_scores
+from ensemble_horizon.night.verification.scores import SKILLS, limit_levels
 from ensemble_horizon.night.verification.scratch import Scratch, scratch_file
 from ensemble_horizon.night.verification.sources import (
-    Gap,
     Observed,
     open_analyses_of,
     read_observed,
     require_truth,
 )
+from ensemble_horizon.night.verification.starts import Starts
 from ensemble_horizon.runs import Catalogue, Fault
 from ensemble_horizon.serial.mean import LEAST_STARTS
 from ensemble_horizon.settings import Settings
-from ensemble_horizon.skill.reduction import ScoreReduction, ScoreSums, empty_scores
+from ensemble_horizon.skill.reduction import ScoreReduction
 from ensemble_horizon.spread.reduction import RegionWeights
 
 _CLIMATOLOGY = {"climatology_crps", "product", "forecast_squared", "anomaly_squared"}
@@ -77,6 +75,7 @@ class Verification:
     analyses : paths of the analyses
     gaps : valid times that nothing could be held against
     faults : what was wrong with the runs
+    left_out : starts with too few usable members, in words
     """
 
     results: list[VerifiedResult]
@@ -84,6 +83,7 @@ class Verification:
     analyses: tuple[str, ...]
     gaps: list[Gap] = field(default_factory=list)
     faults: list[Fault] = field(default_factory=list)
+    left_out: list[str] = field(default_factory=list)
 
 
 def verify(settings: Settings, progress: Progress = silent, *, cells: bool = False) -> Verification:
@@ -111,9 +111,21 @@ def verify(settings: Settings, progress: Progress = silent, *, cells: bool = Fal
 
 
 def verify_input(
-    settings: Settings, found: Input, progress: Progress = silent, *, cells: bool = False
+    settings: Settings,
+    found: Input,
+    progress: Progress = silent,
+    *,
+    cells: bool = False,
+    held: Mapping[str, Catalogue] | None = None,
 ) -> Verification:
-    """Verify runs whose headers have been read; otherwise as `verify`."""
+    """Verify runs whose headers have been read; otherwise as `verify`.
+
+    Parameters
+    ----------
+    held : mapping of variable to Catalogue, optional
+        Headers of analyses read beforehand, for a part of the starts: a truth that is lacking
+        altogether is then a gap like any other, and the results hold sums, but no scores.
+    """
     catalogue = found.catalogue
     places = resolve_places(settings, catalogue)
     gaps: list[Gap] = []
@@ -122,11 +134,12 @@ def verify_input(
     with_maps = map_plan(settings, catalogue).mode != "none" and settings.analyses is not None
     blocks = grid_cells(catalogue) if cells and with_maps else ()
     sources = tuple(
-        _source(settings, catalogue, item, places, gaps, blocks if with_maps else None)
+        _source(settings, catalogue, item, places, gaps, blocks if with_maps else None, held)
         for item in variables
     )
-    _tell_few_starts(catalogue)
-    job = _Job(settings, catalogue, progress)
+    if held is None:
+        _tell_few_starts(catalogue)
+    job = _Job(settings, catalogue, progress, scored=held is None)
     size = int(np.prod(catalogue.grid.shape, dtype=int))
     kept = max(len(item.kept) for item in sources)
     bytes_read = 4 * size * len(catalogue.members) * catalogue.leads.size
@@ -145,7 +158,8 @@ def verify_input(
         ]
     opened = [item.analyses.catalogue for item in sources if item.analyses is not None]
     paths = tuple(dict.fromkeys(path for item in opened for path in item.paths))
-    return Verification(results, catalogue, paths, gaps, [*found.faults, *job.faults])
+    faults = [*found.faults, *job.faults]
+    return Verification(results, catalogue, paths, gaps, faults, job.left_out)
 
 
 def _source(
@@ -155,10 +169,12 @@ def _source(
     places: Places,
     gaps: list[Gap],
     cells: tuple[RegionWeights, ...] | None,
+    held: Mapping[str, Catalogue] | None,
 ) -> VerifiedVariable:
     """A variable with all that it is held against; without cells, not even none, no maps."""
-    analyses = open_analyses_of(settings, catalogue, variable, gaps)
-    observed = read_observed(settings, catalogue, variable, places, gaps)
+    own = None if held is None else held.get(variable.name)
+    analyses = open_analyses_of(settings, catalogue, variable, gaps, own)
+    observed = read_observed(settings, catalogue, variable, places, gaps, held is None)
     if analyses is None and observed is None:
         raise InputError(
             f"variable {variable.name}",
@@ -214,11 +230,15 @@ def _tell_few_starts(catalogue: Catalogue) -> None:
 class _Job:
     """One verification under way: what every step needs."""
 
-    def __init__(self, settings: Settings, catalogue: Catalogue, progress: Progress) -> None:
+    def __init__(
+        self, settings: Settings, catalogue: Catalogue, progress: Progress, scored: bool
+    ) -> None:
         self.settings = settings
         self.catalogue = catalogue
         self.progress = progress
+        self.scored = scored
         self.faults: list[Fault] = []
+        self.left_out: list[str] = []
         self._done = 0
         self._total = len(settings.variables) * catalogue.starts.size * catalogue.leads.size
 
@@ -230,25 +250,28 @@ class _Job:
         source: VerifiedVariable,
         places: Places,
     ) -> VerifiedResult:
-        """All starts of one variable, scored."""
-        maps, against = self._read(engine, number, variable, source)
+        """All starts of one variable, scored if that is wanted."""
         settings = self.settings
+        read = Starts(settings, self.catalogue, number, variable, source)
+        read.read(engine, self._advance)
+        maps, against = read.maps, read.sums
+        self.faults += read.faults
+        self.left_out += read.left_out
         levels = limit_levels(settings.verification.skill, settings.verification.correlation)
         confidence, lead = settings.growth.confidence, self.catalogue.leads
         frame = Frame(
             variable.name, variable.long_name, variable.units, lead, self.catalogue.lead_units,
-            confidence, self.catalogue.starts.size, len(self.catalogue.members), levels,
+            confidence, self.catalogue.starts.size - len(read.left_out),
+            len(self.catalogue.members), levels, settings.verification.resamples,
         )  # fmt: skip
         kinds = {"analysis": places.names}
         if source.observed is not None:
             kinds["observation"] = [(name, "site") for name in source.observed.sites]
-        scored = {
-            what: place_scores(lead, sums, variable.factor, levels, confidence, len(kinds[what]))
-            for what, sums in against.items()
-        }
-        data = places_dataset(frame, kinds, scored)
+        if not self.scored:
+            return VerifiedResult(xr.Dataset(), None, frame, kinds, against, variable.factor)
+        alone = result_of_places(frame, kinds, against, variable.factor)
         if not maps.total:
-            return VerifiedResult(data, None, frame, kinds, against, variable.factor)
+            return alone
         scores = maps.scores(variable.factor)
         interval: dict[str, tuple[np.ndarray, np.ndarray]] = {}
         if source.kept:
@@ -257,48 +280,10 @@ class _Job:
             scores[name], *ends = skill_interval(engine, lead.size, maps.size, confidence)
             interval[name] = (ends[0], ends[1])
         falls = map_falls(lead, scores, levels, interval)
-        return VerifiedResult(
-            data, maps_dataset(frame, self.catalogue.grid, scores, falls, interval), frame, kinds,
-            against, variable.factor,
-        )  # fmt: skip
+        data = maps_dataset(frame, self.catalogue.grid, scores, falls, interval)
+        return replace(alone, maps=data)
 
-    def _read(
-        self, engine: Engine, number: int, variable: Variable, source: VerifiedVariable
-    ) -> tuple[MapSums, dict[str, list[ScoreSums]]]:
-        catalogue = self.catalogue
-        members, leads, starts = (
-            len(catalogue.members), catalogue.leads.size, catalogue.starts.size,
-        )  # fmt: skip
-        maps = MapSums(leads, source.reduction.size)
-        plain = ScoreReduction(source.reduction.size, source.reduction.places)
-        found = {}
-        for what, there, reduction in (
-            ("analysis", source.analyses, plain),
-            ("observation", source.observed, source.at_sites),
-        ):
-            if there is not None:
-                found[what] = [
-                    empty_scores(reduction, members, leads, reduction.size) for _ in range(starts)
-                ]
-        blocks = list(self._blocks(number, source))
-        for position, part in engine.run(verify_block, blocks):
-            block = blocks[position]
-            span = slice(*block.leads)
-            points = window_points(catalogue.grid.shape, block.window)
-            if part.sums is not None:
-                maps.add(part.sums, span, points)
-                part.sums.fields.clear()
-                found["analysis"][block.start].add(part.sums, span, points)
-            if part.at_sites is not None:
-                found["observation"][block.start].add(part.at_sites, span, None)
-            faults = block_faults(part, block, catalogue, variable)
-            refuse_if_stopped(faults, self.settings)
-            self.faults += faults
-            self._done += block.leads[1] - block.leads[0]
-            self.progress("verifying", self._done, self._total)
-        return maps, found
-
-    def _blocks(self, number: int, source: VerifiedVariable) -> Iterator[Block]:
-        budget = self.settings.engine.block_memory_mib * 2**20 // 3
-        for start in range(self.catalogue.starts.size):
-            yield from plan_blocks(self.catalogue, source.parts, number, start, budget)
+    def _advance(self, done: int, more: int) -> None:
+        self._done += done
+        self._total += more
+        self.progress("verifying", self._done, self._total)

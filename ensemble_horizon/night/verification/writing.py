@@ -40,7 +40,7 @@ def verify_and_write(
     catalogue = found.catalogue
     last = catalogue.starts.size - 1
     about["starts"] = f"{catalogue.start_label(0)} to {catalogue.start_label(last)}"
-    notes = [str(gap) for gap in found.gaps]
+    notes = [*map(str, found.gaps), *found.left_out]
     if notes:
         about["not_verified"] = "; ".join(notes)
     paths = write_scores(
