@@ -46,6 +46,15 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``score_sums``     sums of the scores of one start, filed
 ``score_sentences`` past scores in a sentence or two
 ``calibration_file`` factors from spread to error
+``origin``         names and attributes as they were, in the NetCDF products
+``stored``         ``horizons.nc`` and ``horizon_maps.nc`` read back
+``nights``         limits of one night, as they are compared with other nights
+``night_file``     one night in the archive
+``fitted_text``    words cut and broken to their room
+``paper``          a sheet of A4 as PDF
+``sheet_table``    limits as rows on paper
+``sheet_pdf``      a briefing on one sheet
+``page``           the briefing page
 ``run_archive``    run files and analyses of a rehearsal
 ``archive_folder`` what stands where in its archive
 =================  =============================================================

@@ -28,6 +28,7 @@ from ensemble_horizon.runs.headers import FileHeader, Layout, VariableHeader, re
 from ensemble_horizon.runs.lagged import align_lagged, settle_differing_starts
 from ensemble_horizon.runs.levels import Level
 from ensemble_horizon.runs.moments import Wanted
+from ensemble_horizon.runs.sources import Storage
 from ensemble_horizon.runs.times import OUTSIDE, date_ticks, iso_text, to_hours
 
 Start: TypeAlias = str | datetime | np.datetime64 | cftime.datetime
@@ -224,10 +225,14 @@ def _assemble(
             table.position.ravel()[first[free]] = inside[index[free]]
             headers.setdefault(variable.name, variable)
     distinct, table_of = _shared(tables)
+    known: dict[Hashable, Mapping[str, Storage]] = {}  # files alike share what they say of it
+    sources = tuple(
+        replace(item, storage=known.setdefault(tuple(item.storage.items()), item.storage))
+        for item in (layout.source for layout in layouts)
+    )
     order = tuple(sorted(faults, key=lambda fault: (str(fault.file), fault.kind)))
     return Catalogue(headers, starts, leads, members, grid, order, calendar,
-                     tuple(layout.source for layout in layouts), distinct, table_of,
-                     attrs, layouts[0].lead_units)  # fmt: skip
+                     sources, distinct, table_of, attrs, layouts[0].lead_units)  # fmt: skip
 
 
 def sorted_members(labels: set[int | str]) -> tuple[int | str, ...]:

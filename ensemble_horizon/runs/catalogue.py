@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import contextlib
 import hashlib
-from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
@@ -19,10 +18,12 @@ import numpy.typing as npt
 
 from ensemble_horizon.checks import require_choice
 from ensemble_horizon.errors import ArgumentError
+from ensemble_horizon.runs.chunks import Blocks, cut, grid_steps, lead_spans
 from ensemble_horizon.runs.faults import Fault
 from ensemble_horizon.runs.grids import Grid
-from ensemble_horizon.runs.headers import Source, VariableHeader
+from ensemble_horizon.runs.headers import VariableHeader
 from ensemble_horizon.runs.reading import read_source, value_type
+from ensemble_horizon.runs.sources import Source
 from ensemble_horizon.runs.times import Ticks, iso_text, to_dates, to_hours
 
 Index = slice | int | Sequence[int] | npt.NDArray[np.int64]
@@ -193,39 +194,63 @@ class Catalogue:
                 read_source(self.sources[number], variable, where, position, bounds, out)
         return out
 
-    def natural_block(
-        self, variable: str, budget: int = BLOCK_BYTES
-    ) -> tuple[int, tuple[int, ...]]:
-        """Leads per block and window shape such that no chunk of a file is read twice.
+    def blocks(
+        self, variables: Sequence[str], start: int | None = None, budget: int = BLOCK_BYTES
+    ) -> Blocks:
+        """Cut one start, or any of them, into blocks such that no chunk of a file is read twice.
 
-        Blocks are whole multiples of the file's chunks, and as large as ``budget`` bytes of
-        values (all members) allow. Where even one column of chunks exceeds the budget, that
+        Blocks are made of whole chunks, and as large as ``budget`` bytes of values (all members
+        of all the variables) allow. Where even one column of chunks exceeds the budget, that
         column is the block: reading less would decompress its chunks again.
 
-        Returns
-        -------
-        leads : int
-            Number of leads per block, counted from the first lead.
-        window : tuple of int
-            Number of points per block along each spatial dimension.
+        Parameters
+        ----------
+        variables : sequence of str
+            Those that are read together.
+        start : int, optional
+            Position of the start; blocks that suit all starts without.
         """
-        header = self.variables[require_choice(variable, self.variables, "variable")]
-        total = self.lead_ticks.size
-        chunks = header.chunks or (1, *self._rows())
+        chosen = slice(None) if start is None else slice(start, start + 1)
+        chunks, leads, point = [], [], 0
+        grid_chunks: set[tuple[int, ...]] = set()
+        for name in variables:
+            table = self._table(name)
+            present = table.source[chosen] >= 0
+            source = table.source[chosen][present]
+            chunk, found = self._chunk_numbers(name, source, table.position[chosen][present])
+            chunks.append(chunk + (0 if not chunks else 1 + chunks[-1].max(initial=0)))
+            leads.append(np.nonzero(present)[1])
+            grid_chunks |= found
+            point += len(self.members) * self.dtype(name).itemsize
+        spans = lead_spans(np.concatenate(chunks), np.concatenate(leads), self.lead_ticks.size)
         shape = self.grid.shape
-        unit = self._lead_unit(variable, min(chunks[0], total))
-        point = len(self.members) * self.dtype(variable).itemsize
-        whole = point * int(np.prod(shape, dtype=np.int64))
-        if unit * whole <= budget:
-            return min(total, unit * max(1, budget // max(1, unit * whole))), shape
-        window = list(shape)
-        for axis, chunk in enumerate(chunks[1:]):
-            others = unit * point * int(np.prod(window, dtype=np.int64)) // max(1, window[axis])
-            fit = max(1, budget // max(1, others * chunk))
-            window[axis] = min(shape[axis], fit * chunk)
-            if fit > 1 or unit * point * int(np.prod(window, dtype=np.int64)) <= budget:
-                break
-        return unit, tuple(window)
+        return cut(spans, grid_steps(grid_chunks, shape), shape, point, budget)
+
+    def _chunk_numbers(
+        self, variable: str, source: npt.NDArray[np.int32], position: npt.NDArray[np.int32]
+    ) -> tuple[npt.NDArray[np.int64], set[tuple[int, ...]]]:
+        """A number (N,) for the chunk along the run dimensions of each field, and grid chunks."""
+        chunk = np.empty(source.size, dtype=np.int64)
+        grid_chunks: set[tuple[int, ...]] = set()
+        numbers, which = np.unique(source, return_inverse=True)
+        alike: dict[tuple[tuple[int, ...], tuple[int, ...]], list[int]] = {}
+        for place, number in enumerate(numbers):
+            held = self.sources[number]
+            grid_chunks.add(held.grid_chunks(variable))
+            alike.setdefault((held.run_shape, held.run_chunks(variable)), []).append(place)
+        first = 0
+        for (shape, sizes), places in alike.items():
+            here = np.isin(which, places) if len(alike) > 1 else slice(None)
+            counts = tuple(-(-length // size) for length, size in zip(shape, sizes, strict=True))
+            inside = np.zeros(position[here].size, dtype=np.int64)
+            if shape:
+                axes = np.unravel_index(position[here], shape)
+                within = tuple(axis // size for axis, size in zip(axes, sizes, strict=True))
+                inside = np.ravel_multi_index(within, counts)
+            per_source = int(np.prod(counts, dtype=np.int64))
+            chunk[here] = first + which[here] * per_source + inside
+            first += numbers.size * per_source
+        return chunk, grid_chunks
 
     def subset(self, starts: Index = slice(None), members: Index = slice(None)) -> Catalogue:
         """The catalogue of some starts and members, given by position."""
@@ -264,22 +289,6 @@ class Catalogue:
     def _table(self, variable: str) -> Table:
         require_choice(variable, self.variables, "variable")
         return self.tables[self.table_of[variable]]
-
-    def _rows(self) -> tuple[int, ...]:
-        """Chunks to pretend for a contiguous file: single rows along the first dimension."""
-        return (1, *self.grid.shape[1:]) if self.grid.shape else ()
-
-    def _lead_unit(self, variable: str, chunk: int) -> int:
-        """The lead chunk, or all leads of a file where chunks would straddle two files."""
-        source = self._table(variable).source
-        per_file = Counter(
-            int((column >= 0).sum()) // max(1, np.unique(column[column >= 0]).size)
-            for column in source.reshape(source.shape[0], source.shape[1], -1)[0].T
-        )
-        leads = per_file.most_common(1)[0][0] if per_file else chunk
-        if 0 < leads < source.shape[1]:
-            return leads if leads % chunk else chunk
-        return chunk
 
     def _window(self, window: tuple[slice, ...]) -> tuple[tuple[int, int], ...]:
         shape = self.grid.shape

@@ -61,13 +61,13 @@ def read_content(
     size = int(np.prod(catalogue.grid.shape, dtype=np.int64))
     content = _empty(variable, start, size, (source.shape[1], source.shape[0]))
     numbers: dict[bytes, int] = {}
-    step = catalogue.natural_block(variable)[0]
+    spans = catalogue.blocks((variable,), start).leads
     bounds = tuple((0, length) for length in catalogue.grid.shape)
     for number in np.unique(source[source >= 0]):
         held = source == number
-        for first in range(0, held.shape[1], step):
+        for first, stop in spans:
             where = np.zeros_like(held)
-            where[:, first : first + step] = held[:, first : first + step]
+            where[:, first:stop] = held[:, first:stop]
             if not where.any():
                 continue
             _read_part(catalogue, content, int(number), where, position, bounds, plausible, numbers)

@@ -17,6 +17,7 @@ from ensemble_horizon.runs.handles import LOCK, border, open_raw
 from ensemble_horizon.runs.levels import refuse_other_level, select_level
 from ensemble_horizon.runs.moments import Moments, Wanted, read_moments
 from ensemble_horizon.runs.recognition import LEVEL, X, Y, recognise, recognise_name
+from ensemble_horizon.runs.sources import Source, storage_of
 from ensemble_horizon.runs.times import Ticks
 from ensemble_horizon.vocabulary import (
     LATITUDE,
@@ -39,32 +40,12 @@ _REFERENCES = (
 
 @dataclass(frozen=True)
 class VariableHeader:
-    """A data variable as its file describes it.
-
-    ``chunks`` is (lead, *space) in the file's own chunk sizes, None where it is contiguous.
-    """
+    """A data variable as its file describes it."""
 
     name: str
     units: str
     dtype: np.dtype
     attrs: Mapping[str, object]
-    chunks: tuple[int, ...] | None
-
-
-@dataclass(frozen=True)
-class Source:
-    """Where the values of some variables lie in one file.
-
-    ``run_axes`` are the raw axes of start, lead and member (in file order, of sizes
-    ``run_shape``); ``space_axes`` those of the grid's dimensions; ``fixed`` pairs of raw axis and
-    index for everything else, such as the chosen level.
-    """
-
-    path: str
-    run_axes: tuple[int, ...]
-    run_shape: tuple[int, ...]
-    space_axes: tuple[int, ...]
-    fixed: tuple[tuple[int, int], ...]
 
 
 @dataclass(frozen=True)
@@ -261,10 +242,13 @@ class HeaderReading:
         run_dims = tuple(dims[axis] for axis in run_axes)
         lengths = tuple(self.sizes[dim] for dim in run_dims)
         space_axes = tuple(dims.index(dim) for dim in space_dims)
-        source = Source(self.file.path, tuple(run_axes), lengths, space_axes, tuple(fixed))
+        storage = {name: storage_of(self.variables[name], space_axes) for name in names}
+        source = Source(
+            self.file.path, tuple(run_axes), lengths, space_axes, tuple(fixed), storage
+        )
         moments = self._moments(run_dims, names[0])
         grid = read_grid(space_dims, space, self.sizes, places, self.known)
-        headers = tuple(self._variable(name, source, moments) for name in names)
+        headers = tuple(self._variable(name) for name in names)
         return Layout(source, headers, moments.start, moments.lead, moments.member, grid,
                       moments.calendar, moments.mismatch, moments.lead_units)  # fmt: skip
 
@@ -294,17 +278,9 @@ class HeaderReading:
             for role, names in found.items()
         }
 
-    def _variable(self, name: str, source: Source, moments: Moments) -> VariableHeader:
+    def _variable(self, name: str) -> VariableHeader:
         variable, attributes = self.variables[name], self.attributes[name]
-        chunking = variable.chunking()
-        chunks = None
-        if chunking is not None and chunking != "contiguous":
-            lead_axis = moments.lead_axis
-            lead = 1 if lead_axis is None else int(chunking[source.run_axes[lead_axis]])
-            chunks = (lead, *(int(chunking[axis]) for axis in source.space_axes))
-        return VariableHeader(
-            name, str(attributes.get("units", "")), variable.dtype, attributes, chunks
-        )
+        return VariableHeader(name, str(attributes.get("units", "")), variable.dtype, attributes)
 
     def _no_variable(self, names: list[str]) -> InputError:
         offered = ", ".join(names) or "none"

@@ -10,6 +10,7 @@ import xarray as xr
 
 from ensemble_horizon.runs.assembly import Start, read_catalogue
 from ensemble_horizon.runs.catalogue import BLOCK_BYTES, Catalogue
+from ensemble_horizon.runs.chunks import Span
 from ensemble_horizon.runs.decoding import PACKING
 from ensemble_horizon.runs.files import Files
 from ensemble_horizon.runs.levels import Level
@@ -107,13 +108,13 @@ def to_dataset(catalogue: Catalogue, budget: int = BLOCK_BYTES) -> xr.Dataset:
 
 
 def _lazy(catalogue: Catalogue, name: str, budget: int) -> Any:
-    block, window = catalogue.natural_block(name, budget)
+    blocks = catalogue.blocks((name,), budget=budget)
     dtype = catalogue.dtype(name)
-    shape = (len(catalogue.starts), catalogue.leads.size, len(catalogue.members))
-    steps = (1, block, max(1, shape[2]), *window)
-    chunks = tuple(
-        _split(length, step)
-        for length, step in zip((*shape, *catalogue.grid.shape), steps, strict=True)
+    chunks = (
+        (1,) * len(catalogue.starts),
+        _sizes(blocks.leads),
+        (len(catalogue.members),),
+        *(_sizes(spans) for spans in blocks.axes),
     )
     # Half a second to load, and the main job reads through the catalogue instead.
     import dask.array as da  # noqa: PLC0415
@@ -152,9 +153,8 @@ class _Loader:
         return values.swapaxes(0, 1)[np.newaxis]
 
 
-def _split(length: int, step: int) -> tuple[int, ...]:
-    whole, rest = divmod(length, max(1, step))
-    return (step,) * whole + ((rest,) if rest or not whole else ())
+def _sizes(spans: Sequence[Span]) -> tuple[int, ...]:
+    return tuple(stop - first for first, stop in spans)
 
 
 def _kept(attributes: Mapping[str, object]) -> dict[str, object]:

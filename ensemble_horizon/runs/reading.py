@@ -12,7 +12,8 @@ import numpy.typing as npt
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.runs.decoding import Decoder, decoder
 from ensemble_horizon.runs.handles import HANDLES, LOCK, Opened, border
-from ensemble_horizon.runs.headers import Source, VariableHeader
+from ensemble_horizon.runs.headers import VariableHeader
+from ensemble_horizon.runs.sources import Source
 
 Bounds = tuple[tuple[int, int], ...]
 Indices = npt.NDArray[np.int64]
