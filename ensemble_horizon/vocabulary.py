@@ -47,9 +47,9 @@ class Status(IntEnum):
 
 
 STATUS_MEANING = {
-    Status.reached: "the criterion is exceeded within the run",
-    Status.beyond_run: "not exceeded by the last lead (censored)",
-    Status.at_start: "exceeded at the first lead",
+    Status.reached: "the threshold is reached within the run",
+    Status.beyond_run: "not reached by the last lead (censored)",
+    Status.at_start: "reached at the first lead",
     Status.no_growth: "the spread does not grow, so there is no limit to state",
     Status.no_data: "too little data, or the criterion rests on what is not known",
 }

@@ -12,12 +12,12 @@ _ROUNDING = 1e-9
 
 @dataclass(frozen=True)
 class Crossing:
-    """Where N curves first exceed their threshold for good.
+    """Where N curves first reach their threshold, and stay there for as long as it takes to count.
 
     Parameters
     ----------
     time : (N,) lead of the crossing, NaN where there is none
-    at_start : (N,) bool, exceeded at the first lead that has a value; ``time`` is NaN there
+    at_start : (N,) bool, reached at the first lead that has a value; ``time`` is NaN there
     points : (N,) int, leads that have a value
     first : (N,) the first of those leads, NaN where there is none
     """

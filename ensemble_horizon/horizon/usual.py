@@ -70,6 +70,8 @@ class Usual:
         Between which the percentile lies, both equal to it where it is known.
     without_data : int
         Past nights left out because nothing was known of the limit.
+    needed : int
+        Nights with data that it takes to call anything usual.
 
     Examples
     --------
@@ -86,12 +88,50 @@ class Usual:
     season: bool = False
     percentile_bounds: tuple[float, float] = (float("nan"), float("nan"))
     without_data: int = 0
+    needed: int = LEAST_NIGHTS
 
     @classmethod
-    def unknown(cls, nights: int, *, season: bool = False, without_data: int = 0) -> Usual:
+    def unknown(
+        cls,
+        nights: int,
+        *,
+        season: bool = False,
+        without_data: int = 0,
+        needed: int = LEAST_NIGHTS,
+    ) -> Usual:
         """Too few nights to call anything usual."""
         nan = float("nan")
-        return cls(nights, nan, nan, nan, nan, Standing.unknown, season, without_data=without_data)
+        return cls(
+            nights, nan, nan, nan, nan, Standing.unknown, season, (nan, nan), without_data, needed
+        )
+
+    @property
+    def edge(self) -> float:
+        """The end of the usual range that tonight lies beyond; NaN where it lies beyond none.
+
+        Examples
+        --------
+        >>> Usual(30, 90.0, 70.0, 110.0, 3.0, Standing.shorter).edge
+        70.0
+        """
+        ends = {Standing.shorter: self.low, Standing.longer: self.high}
+        return ends.get(self.standing, float("nan"))
+
+    def within(self, low: float, high: float) -> bool:
+        """Whether an interval of tonight's limit holds the edge, so that it may be usual yet.
+
+        Parameters
+        ----------
+        low, high : float, lead units
+            Ends of the interval; NaN where it has none.
+
+        Examples
+        --------
+        >>> night = Usual(30, 90.0, 70.0, 110.0, 3.0, Standing.shorter)
+        >>> night.within(55.0, 80.0), night.within(55.0, 60.0)
+        (True, False)
+        """
+        return low <= self.edge <= high
 
 
 def usual_of(
@@ -154,7 +194,7 @@ def usual_of(
     time, event, left_out = _waiting(horizon, status, last_lead, first_lead)
     _require_night(tonight, first_lead)
     if time.size < least:
-        return Usual.unknown(time.size, season=season, without_data=left_out)
+        return Usual.unknown(time.size, season=season, without_data=left_out, needed=least)
     past = _Past.of(time, event, first_lead)
     low, median, high = (past.quantile(share) for share in (_LOW, 0.5, _HIGH))
     bounds = past.percentiles(tonight)
@@ -168,6 +208,7 @@ def usual_of(
         season=season,
         percentile_bounds=bounds,
         without_data=left_out,
+        needed=least,
     )
 
 

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import os
+import re
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from datetime import datetime
 from importlib.metadata import version
 from pathlib import Path
@@ -15,6 +17,7 @@ from ensemble_horizon.errors import InputError
 from ensemble_horizon.horizon.usual import Usual
 from ensemble_horizon.night.archive import NightUsual, UsualOptions, usual_of_night
 from ensemble_horizon.night.briefing import map_ground
+from ensemble_horizon.night.chain.owner import require_own
 from ensemble_horizon.night.provenance import (
     calibration_words,
     provenance_of,
@@ -27,16 +30,25 @@ from ensemble_horizon.products.limits import VariableResult as AnyResult
 from ensemble_horizon.products.limits import start_labels
 from ensemble_horizon.products.nights import night_of
 from ensemble_horizon.products.page import Briefing, VersionsTable, read_versions, write_page
+from ensemble_horizon.products.score_sentences import PastSkill
 from ensemble_horizon.products.stored import read_results
 from ensemble_horizon.products.wording import is_pooled, iso_start
 from ensemble_horizon.settings import Settings
-from ensemble_horizon.vocabulary import START
+from ensemble_horizon.spread.places import grid_points, nearest_point
+from ensemble_horizon.vocabulary import LATITUDE, LONGITUDE, START
 
 PAGE, SHEET = "briefing.html", "briefing.pdf"
 _NOT_SURVEYED = (
     "The files of the runs were not looked at for this briefing: of the input it knows only how "
     "many members were used."
 )
+
+_NOT_VERIFIED = (
+    "No past start is verified for this briefing: `brief` shows what `estimate` made, and it is "
+    "`nightly` and `verify` that hold past starts against what came true."
+)
+_FAR_KM = 25  # from here on a reader is told how far off the grid point of a site lies
+_OPEN_SIGNS = re.compile(r"[{*?\[]")
 
 
 def brief_and_write(
@@ -59,6 +71,8 @@ def brief_and_write(
     InputError
         If the products are missing, broken, of another kind or of other settings, or the folder of
         versions is not one.
+    SettingsError
+        If the archive is that of other runs.
     ProductError
         If the files cannot be written.
     """
@@ -75,6 +89,7 @@ def brief_and_write(
         troubles=_members_left_out(settings, results),
         notes=(*calibration_words(about), _NOT_SURVEYED, *usual.notes),
         versions=_versions(settings, versions),
+        no_skill=_NOT_VERIFIED,
         surveyed=False,
     )
     return briefing, write_briefing(folder, briefing)
@@ -87,7 +102,8 @@ def assemble_briefing(
     made: datetime,
     usual: Mapping[tuple[str, str, str], Usual],
     troubles: Sequence[str],
-    skill: Sequence[str] = (),
+    skill: Sequence[PastSkill] = (),
+    no_skill: str = "",
     notes: Sequence[str] = (),
     versions: VersionsTable | None = None,
     surveyed: bool = True,
@@ -104,8 +120,12 @@ def assemble_briefing(
         Time of making, UTC.
     usual : mapping
         What is usual of each (variable, place, criterion).
-    troubles, skill, notes : sequence of str
-        Plain sentences: what was wrong with the input, past skill, what else to know.
+    troubles, notes : sequence of str
+        Plain sentences: what was wrong with the input, what else to know.
+    skill : sequence of PastSkill
+        Past skill by variable and place.
+    no_skill : str
+        Why there is none, in a sentence.
     versions : VersionsTable, optional
         How two versions compare.
     surveyed : bool
@@ -128,9 +148,10 @@ def assemble_briefing(
         troubles=tuple(troubles),
         surveyed=surveyed,
         ground=map_ground(settings),
-        versions=versions,
-        skill=tuple(skill),
-        notes=tuple(notes),
+        versions=versions and replace(versions, tonight=_version_of(settings, versions)),
+        skill=_named(skill, one),
+        no_skill=no_skill,
+        notes=(*notes, *_far_sites(settings, one)),
         version=version("ensemble-horizon"),
     )
 
@@ -185,10 +206,13 @@ def usual_by_archive(settings: Settings, results: Sequence[AnyResult]) -> NightU
     ------
     InputError
         If the starts are not dates of the standard calendar.
+    SettingsError
+        If the archive is that of other runs.
     """
     if settings.night is None:
         return NightUsual({}, ())
     archive = settings.path(settings.night.archive)
+    require_own(settings, archive, products=False)
     return usual_of_night(archive, night_of(results), UsualOptions.of(settings.night))
 
 
@@ -241,6 +265,45 @@ def _members_left_out(settings: Settings, results: Sequence[AnyResult]) -> list[
         return []
     words = _members_words(settings, results)
     return [f"Only {words} are used; the survey of the runs names the others and what they lack."]
+
+
+def _named(skill: Sequence[PastSkill], results: Sequence[AnyResult]) -> tuple[PastSkill, ...]:
+    """Past skill under the names that the variables have tonight."""
+    names = {
+        str(item.curves.attrs.get("variable", "")): str(item.curves.attrs.get("long_name", ""))
+        for item in results
+    }
+    return tuple(
+        replace(item, long_name=names.get(item.variable) or item.long_name) for item in skill
+    )
+
+
+def _far_sites(settings: Settings, results: Sequence[AnyResult]) -> list[str]:
+    """Tell of each site whose grid point lies far away; nothing where no grid is at hand."""
+    maps = next((item.maps for item in results if item.maps is not None), None)
+    if maps is None or not {LATITUDE, LONGITUDE} <= set(maps.coords):
+        return []
+    latitude, longitude = grid_points({name: maps[name] for name in (LATITUDE, LONGITUDE)})
+    found = []
+    for site in settings.places()[1]:
+        _, distance = nearest_point(site, latitude, longitude)
+        if distance >= _FAR_KM:
+            found.append(f"The grid point used for {site.name} lies {distance:.0f} km away.")
+    return found
+
+
+def _version_of(settings: Settings, versions: VersionsTable) -> str:
+    """Return the version whose runs lie where tonight's do; empty where that is not certain."""
+    named = settings.run_files()
+    patterns = [named] if isinstance(named, str) else named
+    folders = [_OPEN_SIGNS.split(path)[0].rpartition("/")[0] for path in patterns]
+    here = [
+        any(folder and file.startswith(f"{folder}/") for folder in folders)
+        for file in versions.inputs
+    ]
+    if here == [True, False]:
+        return versions.version_a
+    return versions.version_b if here == [False, True] else ""
 
 
 def _versions(settings: Settings, folder: str | os.PathLike[str] | None) -> VersionsTable | None:

@@ -9,6 +9,7 @@ from typing import Any
 
 from ensemble_horizon.night.engine import Engine, usable_cores
 from ensemble_horizon.night.estimate import Estimate, Progress, estimate, silent
+from ensemble_horizon.night.products_folder import refuse_nights
 from ensemble_horizon.night.verification.verifying import Verification
 from ensemble_horizon.night.waiting import shares_of_estimate
 from ensemble_horizon.products import Drawing, Ground, PlaceMark, load_plotting, write_products
@@ -30,10 +31,11 @@ def estimate_and_write(
     InputError, SettingsError
         as `estimate`.
     ProductError
-        if the folder cannot be written; nothing half-written is left.
+        if the folder cannot be written, or holds nights; nothing half-written is left.
     """
-    found = estimate(settings, progress)
     folder = settings.path(settings.products.folder)
+    refuse_nights(folder)
+    found = estimate(settings, progress)
     return found, write_estimate(folder, settings, found, provenance(settings, found), progress)
 
 

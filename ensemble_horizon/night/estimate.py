@@ -12,10 +12,9 @@ import numpy as np
 
 from ensemble_horizon.horizon.curve_growth import growth_of_curves
 from ensemble_horizon.horizon.curve_limits import Curve, limits_of_curve
-from ensemble_horizon.horizon.map_limits import MapOptions
 from ensemble_horizon.night.calibrated import Calibrated, calibrated
 from ensemble_horizon.night.curves import curves_of_start, members_of_start, pool_starts
-from ensemble_horizon.night.engine import Engine, workers_for
+from ensemble_horizon.night.engine import Engine, cluster_of, workers_for
 from ensemble_horizon.night.health import faults_of, too_few, unusable
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import (
@@ -23,10 +22,16 @@ from ensemble_horizon.night.mapping import (
     MapPlan,
     PooledFields,
     map_fields,
+    map_options,
     map_plan,
     noise_of_start,
 )
-from ensemble_horizon.night.reading import ReadingContext, read_start
+from ensemble_horizon.night.reading import (
+    ReadingContext,
+    block_budget,
+    read_start,
+    warn_of_large_blocks,
+)
 from ensemble_horizon.night.results import (
     ALL_STARTS,
     CurveRow,
@@ -111,7 +116,8 @@ def estimate_input(
     job = _Job(settings, context, places, layout, plan, factors, progress)
     wanted = 4 * size * len(catalogue.members) * catalogue.leads.size * catalogue.starts.size
     workers = workers_for(settings.engine.workers, wanted * len(variables))
-    with Engine(workers, context) as engine:
+    cluster = cluster_of(settings.engine, settings.base, catalogue.paths)
+    with Engine(workers, context, cluster) as engine:
         results = [job.variable(engine, number, item) for number, item in enumerate(variables)]
     return Estimate(results, places, catalogue, [*found.faults, *job.faults])
 
@@ -146,6 +152,7 @@ class _Job:
     def variable(self, engine: Engine, number: int, variable: Variable) -> VariableResult:
         """All starts of one variable."""
         mode, starts = self.plan.mode, self.catalogue.starts.size
+        warn_of_large_blocks(self.context, number, self.settings.engine)
         lines: list[list[Curve]] = []
         members: list[int] = []
         maps: list[dict[str, np.ndarray]] = []
@@ -172,7 +179,7 @@ class _Job:
     def _read(self, engine: Engine, number: int, variable: Variable, start: int) -> Summary:
         without: frozenset[int] = frozenset()
         known: list[Fault] = []
-        block_bytes = self.settings.engine.block_memory_mib * 2**20 // 3
+        block_bytes = block_budget(self.settings.engine)
         while True:
             with _timed(f"reading {variable.name} {self.catalogue.start_label(start)}"):
                 reading = read_start(
@@ -216,16 +223,7 @@ class _Job:
     def _map(
         self, engine: Engine, fields: Fields, variable: Variable, members: int
     ) -> dict[str, np.ndarray]:
-        growth = self.settings.growth
-        options = MapOptions(
-            criteria=tuple(variable.criteria.values()),
-            hold=variable.hold,
-            law=growth.law,
-            scale=growth.scale,
-            confidence=self.plan.confidence,
-            members=members,
-            fields=self.plan.fields,
-        )
+        options = map_options(self.settings, self.plan, variable, members)
         if variable.name in self.factors:
             fields = self.factors[variable.name].fields(fields, self.layout)
         with _timed(f"mapping {variable.name}"):

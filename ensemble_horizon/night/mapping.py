@@ -30,7 +30,8 @@ from ensemble_horizon.spread.sampling import (
     pooled_noise,
 )
 
-_BATCH = 32768
+# Points of one task: never by the number of workers, on which no number may depend.
+_BATCH = 8192
 
 
 @dataclass(frozen=True)
@@ -59,6 +60,19 @@ def map_plan(settings: Settings, catalogue: Catalogue) -> MapPlan:
         return MapPlan("none")
     mode = settings.products.maps or ("each" if catalogue.starts.size == 1 else "pooled")
     return MapPlan(mode, confidence)
+
+
+def map_options(settings: Settings, plan: MapPlan, variable: Variable, members: int) -> MapOptions:
+    """What is asked at every point of the maps of a variable."""
+    return MapOptions(
+        criteria=tuple(variable.criteria.values()),
+        hold=variable.hold,
+        law=settings.growth.law,
+        scale=settings.growth.scale,
+        confidence=plan.confidence,
+        members=members,
+        fields=plan.fields,
+    )
 
 
 @dataclass(frozen=True)
@@ -155,8 +169,8 @@ def map_fields(
     table = None
     if options.confidence is not None:
         table = move_table(lead, fields.noise.whole, options.confidence, hold=options.hold)
-    parts = split_points(size, max(engine.workers, -(-size // _BATCH)))
-    tasks = [(_batch(lead, fields, variable, layout, part, table), options) for part in parts]
+    parts = split_points(size, -(-size // _BATCH))
+    tasks = ((_batch(lead, fields, variable, layout, part, table), options) for part in parts)
     result: dict[str, np.ndarray] = {}
     for number, found in engine.run(_limits, tasks):
         for name, values in found.items():

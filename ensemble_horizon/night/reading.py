@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 from itertools import product
@@ -11,7 +12,12 @@ import numpy as np
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.engine import Engine, shared
 from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.settings.tables import EngineTable
 from ensemble_horizon.spread.reduction import Reduction, Summary, empty_summary, reduce_block
+
+BEARABLE = 2  # times engine.block_memory_mib that a block may take before it is spoken of
+
+log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -134,8 +140,8 @@ def read_start(
     reduction = context.variables[variable].reduction
     members, leads = len(catalogue.members), catalogue.leads.size
     found = Reading(empty_summary(reduction, members, leads, reduction.size))
-    # In order: sums in another order would be others in the last digits.
-    for block, part in zip(blocks, engine.run_in_order(read_block, blocks), strict=True):
+    for number, part in engine.run(read_block, blocks):
+        block = blocks[number]
         points = window_points(catalogue.grid.shape, block.window)
         found.summary.add(part.summary, slice(*block.leads), points)
         found.damage |= part.damage
@@ -147,12 +153,46 @@ def plan_blocks(
     catalogue: Catalogue, parts: tuple[str, ...], variable: int, start: int, block_bytes: int
 ) -> Iterator[Block]:
     """Blocks of one start that follow the files' own chunks."""
-    step, shape = catalogue.natural_block(parts[0], block_bytes // len(parts))
-    total = catalogue.leads.size
-    windows = [_pieces(size, part) for size, part in zip(catalogue.grid.shape, shape, strict=True)]
-    for first in range(0, total, step):
-        for window in product(*windows):
-            yield Block(variable, start, (first, min(first + step, total)), window)
+    blocks = catalogue.blocks(parts, start, block_bytes)
+    for leads in blocks.leads:
+        for window in product(*blocks.axes):
+            yield Block(variable, start, leads, window)
+
+
+def block_budget(table: EngineTable) -> int:
+    """Bytes of values in one block: a third of the memory, as they are held up to three times."""
+    return table.block_memory_mib * 2**20 // 3
+
+
+def warn_of_large_blocks(context: ReadingContext, number: int, table: EngineTable) -> None:
+    """Log it where chunks make the blocks of a variable larger than the settings allow."""
+    catalogue, variable = context.catalogue, context.variables[number]
+    blocks = catalogue.blocks(variable.parts, 0, block_budget(table))
+    allowed = table.block_memory_mib * 2**20
+    if blocks.size > BEARABLE * allowed:
+        spans = (blocks.leads, *blocks.axes)
+        shape = (max(stop - first for first, stop in span) for span in spans)
+        members = len(catalogue.members)
+        log.warning("%s", too_large(variable.name, (members, *shape), blocks.size, allowed))
+
+
+def too_large(name: str, block: tuple[int, ...], size: int, allowed: int) -> str:
+    """Say that chunks do not let blocks become as small as the settings allow.
+
+    Examples
+    --------
+    >>> print(too_large("t2", (50, 41, 721, 1440), 8_512_560_000, 192 * 2**20))
+    t2: one task takes 8118 MiB (50 members x 41 leads x 721 x 1440), more than \
+engine.block_memory_mib = 192, because a chunk cannot be read in part; lower engine.workers if \
+memory is short, or rewrite the files with smaller chunks
+    """
+    members, leads, *window = block
+    shape = " x ".join([f"{members} members", f"{leads} leads", *map(str, window)])
+    return (
+        f"{name}: one task takes {size / 2**20:.0f} MiB ({shape}), more than "
+        f"engine.block_memory_mib = {allowed // 2**20}, because a chunk cannot be read in part; "
+        "lower engine.workers if memory is short, or rewrite the files with smaller chunks"
+    )
 
 
 def window_points(shape: tuple[int, ...], window: tuple[tuple[int, int], ...]) -> np.ndarray | None:
@@ -161,7 +201,3 @@ def window_points(shape: tuple[int, ...], window: tuple[tuple[int, int], ...]) -
         return None
     index = np.arange(int(np.prod(shape))).reshape(shape)
     return index[tuple(slice(*bounds) for bounds in window)].ravel()
-
-
-def _pieces(size: int, step: int) -> list[tuple[int, int]]:
-    return [(first, min(first + step, size)) for first in range(0, size, max(step, 1))]

@@ -13,7 +13,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from ensemble_horizon.night.engine import Engine, shared, usable_cores
+from ensemble_horizon.night.engine import Engine, cluster_of, shared, usable_cores
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.products.archive_folder import (
     ANALYSES,
@@ -106,8 +106,11 @@ def rehearse(settings: Rehearsal, progress: Progress = silent) -> Rehearsed:
     }
     total = len(experiment.versions) * len(dates)
     progress("forecasts", total - len(todo), total)
+    cluster = None
+    if todo:
+        cluster = cluster_of(settings.engine, settings.base, folder=archive.path)
     with (
-        Engine(_workers(settings, experiment, len(todo)), job) as engine,
+        Engine(_workers(settings, experiment, len(todo)), job, cluster) as engine,
         contextlib.closing(_tasks(job, dates, todo)) as tasks,
     ):
         for done, _ in enumerate(engine.run(_forecast, tasks), start=total - len(todo) + 1):

@@ -102,6 +102,12 @@ def fit_note(panel: Panel) -> str:
     return " · ".join(part.strip() for part in parts) or "no law fitted"
 
 
+def is_logarithmic(spread: np.ndarray) -> bool:
+    """Whether a spread grows so far that its axis has equal steps for equal ratios."""
+    known = spread[np.isfinite(spread) & (spread > 0)]
+    return bool(known.size > 2 and known.max() / known.min() >= _LOG_FROM)
+
+
 def level_on_curve(limit: Limit, units: str, saturation: float) -> float:
     """Return the height of a criterion on the axis of the spread; NaN where it has none there."""
     if "chance" in limit.criterion_kind:
@@ -134,8 +140,7 @@ def _spread(axes: Axes, panel: Panel) -> None:
         return
     units = str(panel.curves.attrs.get("units", "1"))
     levels = [level_on_curve(limit, units, panel.single("saturation")) for limit in panel.limits]
-    known = spread[np.isfinite(spread) & (spread > 0)]
-    logarithmic = known.size > 2 and known.max() / known.min() >= _LOG_FROM
+    logarithmic = is_logarithmic(spread)
     axes.fill_between(lead, low, high, color=BAND, linewidth=0, zorder=1)
     axes.plot(lead, fitted, color=LAW_INK, linewidth=1.5, linestyle=(0, (4, 2)), zorder=3)
     axes.plot(lead, spread, color=INK, linewidth=1.7, zorder=4)

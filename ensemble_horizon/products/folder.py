@@ -251,6 +251,15 @@ def earlier_products(folder: Path, leaflet: Leaflet) -> list[Path]:
     return names
 
 
+def holds_estimate(folder: str | os.PathLike[str]) -> bool:
+    """Whether products of an estimate stand in a folder itself."""
+    try:
+        with (Path(folder) / README).open(encoding="utf-8") as file:
+            return file.readline().rstrip("\n") == _ESTIMATE.title
+    except (OSError, UnicodeDecodeError):
+        return False
+
+
 def _move_in(aside: Path, target: Path, outdated: Sequence[Path]) -> None:
     files = [path.relative_to(aside) for path in written_files(aside)]
     before = aside / ".before"

@@ -37,7 +37,9 @@ class Limit:
 
     ``low`` and ``high`` are the ends of the interval: ``high`` is infinite where it lies beyond the
     run. ``law`` is "none" where none was fitted, and empty where that is not known. ``index`` is
-    the position (start, place, criterion) in the curves it came from.
+    the position (start, place, criterion) in the curves it came from. ``rule`` says what the
+    criterion asks for, whatever its name, in ``units``; empty where that is not known. ``hold`` is
+    how long a crossing must last.
     """
 
     start: str
@@ -61,6 +63,9 @@ class Limit:
     law: str
     members: int | None
     index: tuple[int, int, int]
+    rule: str = ""
+    units: str = ""
+    hold: float = 0.0
 
     @property
     def text(self) -> str:
@@ -110,6 +115,8 @@ def curve_limits(curves: xr.Dataset) -> Iterator[Limit]:
     kinds = _labels(curves, "place_kind", PLACE)
     criterion_kinds = _labels(curves, "criterion_kind", CRITERION)
     threshold_units = _labels(curves, "threshold_units", CRITERION)
+    rules = _labels(curves, "criterion_rule", CRITERION)
+    size, hold = str(curves.attrs.get("units", "1")), float(curves.attrs.get("hold", 0.0))
     units = str(curves[LEAD].attrs.get("units", "hours"))
     last_lead = float(curves[LEAD].values[-1])
     name = str(curves.attrs.get("variable", "variable"))
@@ -135,6 +142,9 @@ def curve_limits(curves: xr.Dataset) -> Iterator[Limit]:
                     law=laws[position][row],
                     members=int(count) if np.isfinite(count) else None,
                     index=index,
+                    rule=rules[column],
+                    units=size,
+                    hold=hold,
                     **{key: float(values[index]) for key, values in numbers.items()},
                 )
 

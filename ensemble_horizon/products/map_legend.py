@@ -15,7 +15,7 @@ from ensemble_horizon.vocabulary import CAUTION, Status
 
 STATUS_WORDS = {
     Status.beyond_run: "beyond the run",
-    Status.at_start: "exceeded at the first lead",
+    Status.at_start: "reached at the first lead",
     Status.no_growth: "no growth, so no limit",
     Status.no_data: "too little known",
 }

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Iterable
 from pathlib import Path
 
 import numpy as np
@@ -33,6 +34,8 @@ from ensemble_horizon.products.wording import (
     criterion_words,
     is_pooled,
     lead_number,
+    lead_units,
+    rule_words,
     start_text,
     with_units,
 )
@@ -115,12 +118,16 @@ def draw_field(
     content: MapField,
     box: tuple[float, float, int, int],
     ground: Ground,
+    scale: HourScale | None = None,
 ) -> Axes:
-    """Draw one map with its colour bar at ``box``: left, top, width and height in pixels."""
+    """Draw one map with its colour bar at ``box``: left, top, width and height in pixels.
+
+    ``scale`` is that of several maps side by side; otherwise the map has its own.
+    """
     left, top, width, height = box
     axes = sheet.axes(left, top, width, height)
     values = np.where(content.status == Status.reached, content.horizon, np.nan)
-    scale = hour_scale(values, content.units)
+    scale = scale or hour_scale(values, content.units)
     paint_map(axes, view, values, content.status, scale, (width, height))
     named = draw_ground(axes, view, ground, width)
     lines = draw_contours(axes, view, values, scale, (width, height))
@@ -131,6 +138,15 @@ def draw_field(
     return axes
 
 
+def shared_scales(contents: Iterable[MapField]) -> dict[str, HourScale]:
+    """Return one scale for all maps of the same lead units, by those in short."""
+    values: dict[str, list[np.ndarray]] = {}
+    for content in contents:
+        reached = content.horizon[content.status == Status.reached]
+        values.setdefault(lead_units(content.units), []).append(reached)
+    return {units: hour_scale(np.concatenate(parts), units) for units, parts in values.items()}
+
+
 def map_content(
     one: xr.Dataset, members: int | None = None, last_lead: float | None = None
 ) -> MapField:
@@ -139,15 +155,7 @@ def map_content(
     last_lead = end if last_lead is None else last_lead
     members = one.attrs.get("members") if members is None else members
     label = str(one["start_label"].values) if "start_label" in one else ""
-    words = str(one[CRITERION].values)
-    kind = str(one["criterion_kind"].values) if "criterion_kind" in one else ""
-    if kind == "tolerance" and "threshold" not in one:
-        # The name says the number; only its units are wanting.
-        words = with_units(words, str(one["threshold_units"].values))
-    if "threshold" in one and one["threshold"].ndim == 0 and np.isfinite(one["threshold"]):
-        unit = str(one["threshold_units"].values) if "threshold_units" in one else ""
-        words = criterion_words(words, float(one["threshold"]), unit)
-    parts = [f"Criterion: {words}"]
+    parts = [f"Criterion: {map_criterion(one)}"]
     when = start_text(one[START].values[()], label)
     parts.append(when if is_pooled(one[START].values[()], label) else f"start {when}")
     if members is not None:
@@ -168,6 +176,24 @@ def map_content(
         subtitle="   ·   ".join(parts),
         words=STATUS_WORDS | one.attrs.get("status_words", {}),
     )
+
+
+def map_criterion(one: xr.Dataset) -> str:
+    """Return the criterion of a map with its size, as far as that is the same at every point."""
+    name = str(one[CRITERION].values)
+    kind = str(one["criterion_kind"].values) if "criterion_kind" in one else ""
+    units = str(one["threshold_units"].values) if "threshold_units" in one else ""
+    rule = str(one["criterion_rule"].values) if "criterion_rule" in one else ""
+    size = rule_words(rule, str(one.attrs.get("units", "1")))
+    single = "threshold" in one and one["threshold"].ndim == 0 and np.isfinite(one["threshold"])
+    if single and not (kind == "chance" and size):
+        return criterion_words(name, float(one["threshold"]), units)
+    if kind == "tolerance" and (name == rule or not size):
+        # The name says the number; only its units are wanting.
+        return with_units(name, units)
+    if not size:
+        return name
+    return size if name == rule else f"{name} ({size})"
 
 
 def paint_map(

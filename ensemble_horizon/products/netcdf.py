@@ -73,8 +73,14 @@ FIELD_COMMENTS = {
 }
 
 
+_LONGEST = 80
+
+
 def valid_name(label: str, taken: set[str] | None = None) -> str:
     """Return a NetCDF name made from any label: ASCII letters, digits and underscores.
+
+    Long labels are cut: NetCDF names and names of files end at 255 characters, and two labels and
+    a kind of number have to fit into one.
 
     Parameters
     ----------
@@ -89,7 +95,7 @@ def valid_name(label: str, taken: set[str] | None = None) -> str:
     ('gale_17_m_s', 'Ile_d_ete', 'v_2t')
     """
     plain = unicodedata.normalize("NFKD", label).encode("ascii", "ignore").decode()
-    base = re.sub(r"[^A-Za-z0-9]+", "_", plain).strip("_") or "unnamed"
+    base = re.sub(r"[^A-Za-z0-9]+", "_", plain).strip("_")[:_LONGEST].rstrip("_") or "unnamed"
     if not base[0].isalpha():
         base = f"v_{base}"
     name, count = base, 1

@@ -80,7 +80,10 @@ class SkillLimit:
             text = f"{duration(self.horizon, self.units)} {ends}".strip()
             gap = duration(self.gap, self.units) if np.isfinite(self.gap) else ""
             return f"{text}, within {gap} without a score" if gap else text
-        return self._without_number(self.status)
+        words = self._without_number(self.status)
+        if self.status == Status.beyond_run and np.isfinite(self.low):
+            return f"{words[:-1]}; at least {duration(self.low, self.units)})"
+        return words
 
     @property
     def significant_words(self) -> str:

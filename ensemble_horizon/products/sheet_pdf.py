@@ -9,10 +9,12 @@ from pathlib import Path
 
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.lines import Line2D
 from matplotlib.transforms import Bbox
 
-from ensemble_horizon.products.curve_panel import BAND, LAW_INK, Panel, colour_of, draw_panel
+from ensemble_horizon.products.curve_panel import (
+    Panel,
+    draw_panel,
+)
 from ensemble_horizon.products.fitted_text import broken, drawable, shortened
 from ensemble_horizon.products.limits import Limit
 from ensemble_horizon.products.map_legend import (
@@ -22,30 +24,31 @@ from ensemble_horizon.products.map_legend import (
     legend_rows,
     status_shares,
 )
-from ensemble_horizon.products.maps import draw_field, map_content
+from ensemble_horizon.products.maps import draw_field, map_content, map_criterion, shared_scales
 from ensemble_horizon.products.page.briefing import Briefing
+from ensemble_horizon.products.page.naming import told_apart
 from ensemble_horizon.products.paper import HEIGHT, MARGIN, WIDTH, Paper
 from ensemble_horizon.products.places import Ground
-from ensemble_horizon.products.sheet import INK, SOFT_INK, line_height
+from ensemble_horizon.products.sheet import SOFT_INK, line_height
+from ensemble_horizon.products.sheet_notes import draw_notes
 from ensemble_horizon.products.sheet_table import (
-    HEADING,
     ROW,
     SHORTER,
+    TablePlan,
     draw_table,
-    table_height,
+    plan_table,
 )
-from ensemble_horizon.products.tables import criterion_text
 from ensemble_horizon.products.view import MapView, map_view
 from ensemble_horizon.products.wording import interval_name, lead_units, start_text
 from ensemble_horizon.vocabulary import CAUTION, CRITERION, LEAD, PLACE, START, Status
 
 SOFTWARE = "Ensemble Horizon"
 _ROOM = WIDTH - 2 * MARGIN
-_MOST_MAPS, _MOST_STRIPS, _MOST_TROUBLES = 2, 6, 5
+_MOST_MAPS, _MOST_STRIPS, _MOST_TROUBLES, _MOST_LINES = 2, 6, 5, 3
 _LOWEST_MAP, _HIGHEST_MAP = 236, 560
 _BESIDE_MAP = (50, 98)  # parallels at the left, colour bar at the right
 _MAP_TITLE, _MAP_TICKS, _MAP_LEGEND = 50, 28, 24
-_PANEL_LEFT, _PANEL_WIDTH, _NOTES_LEFT = MARGIN + 44, 420, MARGIN + 498
+_PANEL_LEFT, _PANEL_WIDTH = MARGIN + 44, 420
 
 
 def write_sheet(path: str | os.PathLike[str], briefing: Briefing) -> Path:
@@ -83,6 +86,7 @@ def write_sheet(path: str | os.PathLike[str], briefing: Briefing) -> Path:
 def draw_sheet(briefing: Briefing) -> Paper:
     """Lay the page out and draw it."""
     paper = Paper()
+    briefing = told_apart(briefing)
     limits = briefing.shortest_first()
     top = _trouble(paper, _head(paper, briefing), briefing.troubles)
     foot = _foot(paper, briefing)
@@ -91,30 +95,33 @@ def draw_sheet(briefing: Briefing) -> Paper:
     below = (panel.height + 16) if panel else 0
     around = _MAP_TITLE + _MAP_TICKS + _legend_height(plans) + 10 if plans else 0
     # The table first, then maps as large as the rest of the page allows.
-    spare = foot - top - below - around - table_height(len(limits)) - 10
-    high = int(np.clip(spare, _LOWEST_MAP, _HIGHEST_MAP)) if plans else 0
-    room = foot - top - below - around - high - 10
-    shown = limits[: _rows_that_fit(len(limits), room)]
-    confidence = briefing.results[0].curves.attrs.get("confidence")
-    usual = [briefing.usual_of(limit) for limit in shown]
-    draw_table(paper, top, shown, usual, interval_name(confidence))
-    top += table_height(len(shown)) + 10
-    if len(shown) < len(limits):
-        more = f"and {len(limits) - len(shown)} more on the page"
+    left = foot - top - below - around - 10
+    table = _table(briefing, limits, left - _map_height(plans, _LOWEST_MAP))
+    high = int(np.clip(left - table.height, _LOWEST_MAP, _HIGHEST_MAP)) if plans else 0
+    draw_table(paper, top, table)
+    top += table.height + 10
+    if len(table.rows) < len(limits):
+        more = f"and {len(limits) - len(table.rows)} more on the page"
         paper.text(MARGIN, top - 8, more, size=8, colour=SOFT_INK)
         top += ROW
     if plans:
         top = _maps(paper, plans, top, high, briefing.ground)
     if panel:
         draw_panel(paper, panel, _PANEL_LEFT, top + 6)
-    _notes(paper, briefing, panel, top + 6, foot)
+    draw_notes(paper, briefing, panel, top + 6, foot)
     return paper
 
 
-def _rows_that_fit(count: int, room: float) -> int:
-    """Return how many rows the table shows; the line that tells of the others takes one."""
-    most = max(int((room - HEADING) // ROW), 1)
-    return count if count <= most else max(most - 1, 1)
+def _table(briefing: Briefing, limits: Sequence[Limit], room: float) -> TablePlan:
+    """Set the table out: names in several lines where there is room, in one where there is not."""
+    name = interval_name(briefing.results[0].curves.attrs.get("confidence"))
+    usual = [briefing.usual_of(limit) for limit in limits]
+    for most in range(_MOST_LINES, 0, -1):
+        plan = plan_table(limits, usual, name, most=most)
+        if plan.height <= room:
+            return plan
+    fit = plan.rows_that_fit(room)
+    return plan_table(limits[:fit], usual[:fit], name)
 
 
 def _head(paper: Paper, briefing: Briefing) -> float:
@@ -192,11 +199,19 @@ def _map_plans(briefing: Briefing, limits: Sequence[Limit]) -> list[_MapPlan]:
         shares = status_shares(view, content, *view.pixel_size(400, 400))
         plans.append(
             _MapPlan(
-                content, view, limit.long_name, criterion_text(limit), width,
+                content, view, limit.long_name, map_criterion(one), width,
                 legend_rows(legend_entries(content, shares), width),
             )
         )  # fmt: skip
     return plans
+
+
+def _map_sizes(plans: Sequence[_MapPlan], most: int) -> list[tuple[int, int]]:
+    return [plan.view.pixel_size(plan.width - sum(_BESIDE_MAP), most) for plan in plans]
+
+
+def _map_height(plans: Sequence[_MapPlan], most: int) -> int:
+    return max((height for _, height in _map_sizes(plans, most)), default=0)
 
 
 def _legend_height(plans: Sequence[_MapPlan]) -> int:
@@ -205,22 +220,24 @@ def _legend_height(plans: Sequence[_MapPlan]) -> int:
 
 def _maps(paper: Paper, plans: Sequence[_MapPlan], top: float, most: int, ground: Ground) -> float:
     """Draw the maps side by side; return where the next thing stands."""
-    before, behind = _BESIDE_MAP
-    sizes = [plan.view.pixel_size(plan.width - before - behind, most) for plan in plans]
-    high = max(height for _, height in sizes)
+    before = _BESIDE_MAP[0]
+    scales = shared_scales(plan.content for plan in plans)
+    sizes, high = _map_sizes(plans, most), _map_height(plans, most)
     legend = top + _MAP_TITLE + high + _MAP_TICKS
     for position, (plan, (width, height)) in enumerate(zip(plans, sizes, strict=True)):
         left = MARGIN + position * (plan.width + 24)
         title = shortened(f"How far ahead: {plan.title}", plan.width, 9.5, bold=True)
         paper.text(left, top, title, size=9.5, weight="bold")
-        words = shortened(f"Criterion: {plan.subtitle}", plan.width, 8)
+        words = shortened(plan.subtitle, plan.width, 8)
         paper.text(left, top + 19, words, size=8, colour=SOFT_INK)
         box = (left + before, top + _MAP_TITLE, width, height)
         marks = [
             replace(mark, name=shortened(mark.name, 0.5 * width, 8, bold=True))
             for mark in ground.marks
         ]
-        axes = draw_field(paper, plan.view, plan.content, box, replace(ground, marks=tuple(marks)))
+        named = replace(ground, marks=tuple(marks))
+        scale = scales[lead_units(plan.content.units)]
+        axes = draw_field(paper, plan.view, plan.content, box, named, scale)
         _clear(axes)
         draw_legend(paper, plan.legend, legend, left)
     return legend + _legend_height(plans) + 10
@@ -269,53 +286,3 @@ def _panel(briefing: Briefing, limits: Sequence[Limit]) -> Panel | None:
         width=_PANEL_WIDTH,
         with_chance="chance" in one and bool(one["chance"].notnull().any()),
     )
-
-
-def _notes(paper: Paper, briefing: Briefing, panel: Panel | None, top: float, foot: float) -> None:
-    """Write the key of the curve, and below it whatever sentences there is room for."""
-    left = _NOTES_LEFT if panel else MARGIN
-    room = WIDTH - MARGIN - left
-    if panel:
-        top = _key(paper, panel, left, top, room)
-    versions = briefing.versions
-    compared = () if versions is None else (
-        f"{versions.version_b} is compared with {versions.version_a} on the page.",
-    )  # fmt: skip
-    for heading, sentences in (
-        ("Past skill", briefing.skill), ("Versions", compared), ("Notes", briefing.notes),
-    ):  # fmt: skip
-        lines = [line for words in sentences for line in broken(f"· {words}", room, 8, most=4)]
-        fit = int((foot - top - line_height(9) - 4) // line_height(8))
-        if not lines or fit < 2:
-            continue
-        if len(lines) > fit:
-            lines = [*lines[: fit - 1], "and more on the page"]
-        top = paper.lines(left, top, [heading], size=9, weight="bold")
-        top = paper.lines(left, top, lines, size=8) + 8
-
-
-def _key(paper: Paper, panel: Panel, left: float, top: float, room: float) -> float:
-    """Name the lines of the curve; return where the next thing stands."""
-    title = broken(
-        f"How fast the members part: {panel.limits[0].long_name}", room, 9, most=2, bold=True
-    )
-    top = paper.lines(left, top, title, size=9, weight="bold") + 2
-    units = str(panel.curves.attrs.get("units", "1"))
-    size = "" if units == "1" else f"spread in {units}, "
-    words = f"{size}lead in {lead_units(panel.limits[0].horizon_units)}"
-    top = paper.lines(left, top, broken(words, room, 8, most=1), size=8, colour=SOFT_INK) + 4
-    band = f"its {interval_name(panel.curves.attrs.get('confidence')).lower()}"
-    entries = [("spread", INK), (band, BAND), ("fitted law", LAW_INK)]
-    entries += [
-        (criterion_text(limit), colour_of(position)) for position, limit in enumerate(panel.limits)
-    ]
-    for words, colour in entries:
-        y = 1 - (top + 7) / HEIGHT
-        line = Line2D([left / WIDTH, (left + 26) / WIDTH], [y, y], color=colour)
-        line.set(linewidth=7 if colour == BAND else 1.7, solid_capstyle="butt")
-        line.set_linestyle((0, (4, 2)) if colour == LAW_INK else "-")
-        paper.figure.add_artist(line)
-        paper.text(left + 34, top, shortened(words, room - 34, 8), size=8)
-        top += 17
-    lines = broken("Diamond and bar below: limit and interval.", room, 7.5, most=2)
-    return paper.lines(left, top + 2, lines, size=7.5, colour=SOFT_INK) + 10

@@ -2,18 +2,24 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ensemble_horizon.products.fitted_text import drawable, shortened, text_width
+from ensemble_horizon.products.fitted_text import broken, drawable, shortened, text_width
 from ensemble_horizon.products.limits import Limit
-from ensemble_horizon.products.page.standing import standing_name
+from ensemble_horizon.products.page.standing import (
+    at_edge,
+    rank_words,
+    standing_name,
+    unknown_because,
+)
 from ensemble_horizon.products.paper import MARGIN, WIDTH, Paper
-from ensemble_horizon.products.sheet import INK, SOFT_INK
-from ensemble_horizon.products.tables import criterion_text
+from ensemble_horizon.products.sheet import INK, SOFT_INK, line_height
+from ensemble_horizon.products.tables import criterion_parts, criterion_text
 from ensemble_horizon.products.wording import duration, horizon_text, lead_number, lead_units
 from ensemble_horizon.vocabulary import Status
 
@@ -24,8 +30,9 @@ ROW, HEADING = 18, 24
 SHORTER, LONGER = "#8a2517", "#0f6158"
 _TONES = {"shorter": SHORTER, "longer": LONGER}
 _SIZE, _HEADING_SIZE, _GAP = 8.0, 7.5, 10
+_BREAK = re.compile(" (?=than )")  # where tonight's place breaks into two lines
 _STRIPE = "#f5f6f4"
-_NAMES, _LIMIT, _STANDING = 3, 3, 6  # how many columns are names; where limit and standing stand
+_CRITERION, _NAMES, _LIMIT, _STANDING = 2, 3, 3, 6  # where they stand; three columns are names
 
 
 @dataclass(frozen=True)
@@ -53,77 +60,149 @@ def row_of(limit: Limit, usual: Usual | None) -> Row:
         words = horizon_text(limit.status, none, none, none, none, limit.last_lead, units)
         between = ""
     if usual is None or np.isnan(usual.median):
-        return Row(words, between, "not known", "", SOFT_INK)
+        why = "" if usual is None else unknown_because(usual).removesuffix(" nights needed")
+        return Row(words, between, f"{why} nights" if why else "not known", "", SOFT_INK)
     ends = [
         lead_number(value, units) if np.isfinite(value) else last
         for value in (usual.median, usual.low, usual.high)
     ]
     known = f"{ends[0]} ({ends[1]} to {ends[2]})"
-    name = standing_name(usual)
+    name = standing_name(usual, limit)
     if name == "unknown":
         return Row(words, between, known, "", SOFT_INK)
-    rank = "" if np.isnan(usual.percentile) else f"{usual.percentile:.0f}, "
-    tone = _TONES.get(name, SOFT_INK)
-    return Row(words, between, known, f"{rank}{'as ' if name == 'usual' else ''}{name}", tone)
+    if name == "usual":
+        told = "at the edge" if at_edge(usual, limit) else "as usual"
+        return Row(words, between, known, told, SOFT_INK)
+    rank = rank_words(usual, short=True).removesuffix(" past nights")
+    told = rank if rank.startswith(name) else name
+    if usual.within(limit.low, limit.high):
+        # The interval reaches into the usual: not to be shouted.
+        return Row(words, between, known, f"perhaps {told}", SOFT_INK)
+    return Row(words, between, known, told, _TONES.get(name, SOFT_INK))
 
 
-def table_height(count: int) -> int:
-    """Return the height of a table of ``count`` rows in pixels, its heading included."""
-    return HEADING + ROW * count
+@dataclass(frozen=True)
+class TablePlan:
+    """A table set out: where its columns begin, and the lines of each cell."""
+
+    headings: tuple[str, ...]
+    lefts: tuple[float, ...]
+    rows: tuple[Row, ...]
+    cells: tuple[tuple[list[str], ...], ...]
+
+    @property
+    def heights(self) -> list[float]:
+        """Height of each row in pixels."""
+        return [
+            ROW + (max(len(lines) for lines in cells) - 1) * line_height(_SIZE)
+            for cells in self.cells
+        ]
+
+    @property
+    def height(self) -> float:
+        """Height of the table in pixels, its heading included."""
+        return HEADING + sum(self.heights)
+
+    def rows_that_fit(self, room: float) -> int:
+        """Return how many rows to show; the line that tells of the others takes one."""
+        if self.height <= room:
+            return len(self.rows)
+        ends = HEADING + np.cumsum(self.heights)
+        return max(int(np.count_nonzero(ends <= room - ROW)), 1)
 
 
-def draw_table(
-    paper: Paper,
-    top: float,
-    limits: Sequence[Limit],
-    usual: Sequence[Usual | None],
-    interval: str,
-) -> None:
-    """Draw the heading and a row for each of ``limits`` over the whole width of the page.
+def plan_table(
+    limits: Sequence[Limit], usual: Sequence[Usual | None], interval: str, *, most: int = 1
+) -> TablePlan:
+    """Set out a row for each of ``limits`` over the whole width of the page.
 
     Parameters
     ----------
-    paper : Paper
-    top : float
-        Upper edge in pixels.
     limits : sequence of Limit
         In the order to show them.
     usual : sequence of Usual or None
         One for each limit; the columns are left out where all are None.
     interval : str
         Name of the interval, such as ``90 % interval``.
+    most : int
+        Lines that a name may take; what does not fit is cut, but never a threshold.
     """
     compared = any(item is not None for item in usual)
     headings = ["place", "variable", "criterion", "limit", interval]
     if compared:
-        headings += ["usual (10 to 90 %)", "percentile"]
+        headings += ["usual (10 to 90 %)", "past nights"]
     rows = [row_of(limit, known) for limit, known in zip(limits, usual, strict=True)]
-    cells = [_cells(limit, row)[: len(headings)] for limit, row in zip(limits, rows, strict=True)]
-    lefts = _lefts(headings, cells)
-    for column, words in enumerate(headings):
+    if most == 1:
+        # Names need the room more: which of the past nights were longer stands on the page.
+        rows = [replace(row, standing=_BREAK.split(row.standing)[0]) for row in rows]
+    texts = [_texts(limit, row)[: len(headings)] for limit, row in zip(limits, rows, strict=True)]
+    lefts = _lefts(headings, texts, most)
+    cells = [
+        tuple(_lines(limit, row, column, words, lefts, most) for column, words in enumerate(line))
+        for limit, row, line in zip(limits, rows, texts, strict=True)
+    ]
+    return TablePlan(tuple(headings), tuple(lefts), tuple(rows), tuple(cells))
+
+
+def draw_table(paper: Paper, top: float, plan: TablePlan) -> None:
+    """Draw the heading and all rows, the upper edge at ``top`` pixels."""
+    lefts = plan.lefts
+    for column, words in enumerate(plan.headings):
         room = lefts[column + 1] - lefts[column] - _GAP
         short = shortened(words, room, _HEADING_SIZE)
         paper.text(lefts[column], top, short, size=_HEADING_SIZE, colour=SOFT_INK)
     paper.rule(top + HEADING - 6)
-    for position, (row, texts) in enumerate(zip(rows, cells, strict=True)):
-        upper = top + HEADING + ROW * position
+    upper = top + HEADING
+    for position, (row, cells) in enumerate(zip(plan.rows, plan.cells, strict=True)):
+        height = plan.heights[position]
         if position % 2:
-            paper.area((MARGIN - 6, upper - 3, WIDTH - 2 * MARGIN + 12, ROW), _STRIPE)
-        for column, words in enumerate(texts):
-            end = column + (2 if column == _LIMIT and not row.interval else 1)
-            bold = _is_bold(column, row)
-            room = lefts[end] - lefts[column] - _GAP
-            paper.text(
+            paper.area((MARGIN - 6, upper - 3, WIDTH - 2 * MARGIN + 12, height), _STRIPE)
+        for column, lines in enumerate(cells):
+            colour = INK if column <= _LIMIT else SOFT_INK
+            paper.lines(
                 lefts[column],
                 upper,
-                shortened(words, room, _SIZE, bold=bold),
+                lines,
                 size=_SIZE,
-                weight="bold" if bold else "normal",
-                colour=row.tone if column == _STANDING else INK if column <= _LIMIT else SOFT_INK,
+                weight="bold" if _is_bold(column, row) else "normal",
+                colour=row.tone if column == _STANDING else colour,
             )
+        upper += height
 
 
-def _cells(limit: Limit, row: Row) -> list[str]:
+def fitted_criterion(limit: Limit, room: float, size: float, *, most: int = 1) -> list[str]:
+    """Return a criterion in lines that fit ``room`` pixels; its name is cut before its size is."""
+    name, threshold = criterion_parts(limit)
+    lines = broken(criterion_text(limit), room, size, most=most)
+    if not lines or not lines[-1].endswith("…"):
+        return lines
+    if not threshold:
+        # A chance told in words: the short form, which has both of its numbers.
+        chance = limit.criterion_kind == "chance" and bool(limit.rule)
+        short = f"{limit.rule} {limit.units}" if chance else criterion_text(limit)
+        return broken(short, room, size, most=most)
+    behind = f"({threshold})"
+    if most > 1:
+        return [*broken(name, room, size, most=most - 1), shortened(behind, room, size)]
+    left = room - text_width(f" {drawable(behind)}", size)
+    head = shortened(name, left, size) if left > text_width("…", size) else ""
+    return [shortened(f"{head} {behind}".strip(), room, size)]
+
+
+def _lines(
+    limit: Limit, row: Row, column: int, words: str, lefts: Sequence[float], most: int
+) -> list[str]:
+    """The lines of one cell."""
+    end = column + (2 if column == _LIMIT and not row.interval else 1)
+    room = lefts[end] - lefts[column] - _GAP
+    if column == _CRITERION:
+        return fitted_criterion(limit, room, _SIZE, most=most)
+    if column < _NAMES or column == _STANDING:
+        return broken(words, room, _SIZE, most=most, bold=_is_bold(column, row))
+    return [shortened(words, room, _SIZE, bold=_is_bold(column, row))]
+
+
+def _texts(limit: Limit, row: Row) -> list[str]:
     names = [limit.place, limit.long_name, criterion_text(limit)]
     return [*names, row.limit, row.interval, row.usual, row.standing]
 
@@ -142,7 +221,7 @@ def _between(limit: Limit, last: str) -> str:
     return f"{low} to {high} {lead_units(units)}"
 
 
-def _lefts(headings: Sequence[str], cells: Sequence[Sequence[str]]) -> list[float]:
+def _lefts(headings: Sequence[str], cells: Sequence[Sequence[str]], most: int) -> list[float]:
     """Return where the columns begin, and where the last one ends.
 
     Numbers have the room they need; names share what is left, and those that need less than an
@@ -151,6 +230,8 @@ def _lefts(headings: Sequence[str], cells: Sequence[Sequence[str]]) -> list[floa
     needs, spare = [], _GAP + 1  # a pixel, for sums that are rounded
     for column, heading in enumerate(headings):
         texts = [row[column] for row in cells if column != _LIMIT or row[_LIMIT + 1]]
+        if column == _STANDING and most > 1:
+            texts = [part for words in texts for part in _BREAK.split(words)]
         bold = column in (_LIMIT, _STANDING)
         widest = max((text_width(drawable(words), _SIZE, bold=bold) for words in texts), default=0)
         needs.append(max(widest, text_width(heading, _HEADING_SIZE)) + spare)

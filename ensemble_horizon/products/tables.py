@@ -13,7 +13,7 @@ from rich.text import Text
 
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
 from ensemble_horizon.products.rows import cell, write_rows
-from ensemble_horizon.products.wording import criterion_words, duration
+from ensemble_horizon.products.wording import criterion_words, duration, number, rule_words
 from ensemble_horizon.vocabulary import CAUTION, Status
 
 COLUMNS = (
@@ -39,7 +39,8 @@ COLUMN_NOTES = {
     "variable": "name of the variable in the settings",
     "place": "region or site",
     "criterion": "name of the criterion in the settings",
-    "threshold": "what the spread is held against (a probability for a chance criterion)",
+    "threshold": "what the spread is held against (a probability for a chance criterion); the "
+    "criterion is met where the curve reaches it",
     "threshold_units": "units of the threshold",
     "horizon": "the limit; empty unless the status is reached",
     "low": "lower end of the interval of the horizon; empty where there is none",
@@ -159,7 +160,29 @@ def limits_table(results: Iterable[VariableResult], *, most: int | None = None) 
 
 def criterion_text(limit: Limit) -> str:
     """Return a criterion with its threshold: ``gale (5 m s-1)``; no units where dimensionless."""
-    return criterion_words(limit.criterion, limit.threshold, limit.threshold_units)
+    name, threshold = criterion_parts(limit)
+    return f"{name} ({threshold})" if threshold else name
+
+
+def criterion_parts(limit: Limit) -> tuple[str, str]:
+    """Return a criterion and its threshold; the latter is empty where the former says it all.
+
+    A chance is told in words, and takes the place of a name that was made from its numbers.
+    """
+    if limit.criterion_kind == "chance":
+        words = rule_words(limit.rule, limit.units)
+        if words:
+            return (words, "") if limit.criterion == limit.rule else (limit.criterion, words)
+    if limit.criterion_kind.endswith("fraction") and limit.threshold_units not in ("", "1"):
+        # The number in the name is the fraction, whatever the threshold happens to be.
+        if not np.isfinite(limit.threshold):
+            return limit.criterion, "threshold not known"
+        return limit.criterion, f"{number(limit.threshold)} {limit.threshold_units}"
+    words = criterion_words(limit.criterion, limit.threshold, limit.threshold_units)
+    behind = words.removeprefix(limit.criterion)
+    if behind.startswith(" (") and words.startswith(limit.criterion):
+        return limit.criterion, behind[2:-1]
+    return words, ""
 
 
 def shortest_first(limit: Limit) -> tuple[int, float, str, str]:

@@ -8,6 +8,7 @@ import numpy as np
 
 from ensemble_horizon.vocabulary import Status
 
+_SHARES = {0.25: "a quarter", 0.5: "half", 0.75: "three quarters"}
 _SHORT_UNITS = {"hours": "h", "hour": "h", "h": "h", "days": "d", "day": "d", "1": "time units"}
 
 
@@ -131,7 +132,7 @@ def horizon_text(
         return f"beyond the run (> {duration(last_lead, units)}{law}{early})"
     if status == Status.at_start:
         lead = f" ({duration(horizon, units)})" if np.isfinite(horizon) and horizon > 0 else ""
-        return f"exceeded at the first lead{lead}"
+        return f"reached at the first lead{lead}"
     if status == Status.no_growth:
         return "no growth, so no limit"
     return "too little known"
@@ -198,11 +199,17 @@ def with_units(words: str, units: str) -> str:
     >>> with_units("tolerance 5", "m s-1"), with_units("gale", "m s-1")
     ('tolerance 5 m s-1', 'gale')
     """
-    try:
-        float(words.split()[-1])
-    except (ValueError, IndexError):
+    if not _is_number(words.split()[-1] if words.split() else ""):
         return words
     return words if units in ("", "1") else f"{words} {units}"
+
+
+def _is_number(word: str) -> bool:
+    try:
+        float(word)
+    except ValueError:
+        return False
+    return True
 
 
 def criterion_words(criterion: str, threshold: float, units: str) -> str:
@@ -221,3 +228,39 @@ def criterion_words(criterion: str, threshold: float, units: str) -> str:
     if criterion.split()[-1:] == [value]:
         return f"{criterion}{unit}"
     return criterion if value in criterion.split() else f"{criterion} ({value}{unit})"
+
+
+def rule_words(rule: str, units: str) -> str:
+    """Return what the rule of a criterion asks for, with units; nothing if it tells no size.
+
+    ``rule`` is the label that a criterion has without a name, ``units`` those of the variable.
+
+    Examples
+    --------
+    >>> rule_words("chance 0.25 beyond 4", "m s-1"), rule_words("tolerance 5", "m s-1")
+    ('a quarter of members more than 4 m s-1 from the median', '5 m s-1')
+    >>> rule_words("chance 0.3 beyond 17", "1"), rule_words("climatology fraction 0.5", "m s-1")
+    ('30 % of members more than 17 from the median', '')
+    """
+    unit = "" if units in ("", "1") else f" {units}"
+    match rule.split():
+        case ["tolerance", size]:
+            return f"{size}{unit}"
+        case ["chance", share, "beyond", size] if _is_number(share):
+            part = _SHARES.get(float(share), f"{100 * float(share):.3g} %")
+            return f"{part} of members more than {size}{unit} from the median"
+    return ""
+
+
+def crossing_words(hold: float, units: str) -> tuple[str, str]:
+    """Return what a limit is, and where a curve has it, given how long a crossing must last.
+
+    Examples
+    --------
+    >>> crossing_words(0, "hours")
+    ('is first reached', 'where the curve first reaches it')
+    >>> crossing_words(12, "hours")[1]
+    'where the curve first reaches it for at least 12 h'
+    """
+    lasting = f" for at least {duration(hold, units)}" if hold > 0 else ""
+    return f"is first reached{lasting}", f"where the curve first reaches it{lasting}"

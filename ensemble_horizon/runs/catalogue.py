@@ -18,7 +18,7 @@ import numpy.typing as npt
 
 from ensemble_horizon.checks import require_choice
 from ensemble_horizon.errors import ArgumentError
-from ensemble_horizon.runs.chunks import Blocks, cut, grid_steps, lead_spans
+from ensemble_horizon.runs.chunks import Blocks, chunk_numbers, cut, grid_steps, straddled
 from ensemble_horizon.runs.faults import Fault
 from ensemble_horizon.runs.grids import Grid
 from ensemble_horizon.runs.headers import VariableHeader
@@ -210,47 +210,37 @@ class Catalogue:
         start : int, optional
             Position of the start; blocks that suit all starts without.
         """
-        chosen = slice(None) if start is None else slice(start, start + 1)
-        chunks, leads, point = [], [], 0
-        grid_chunks: set[tuple[int, ...]] = set()
+        point, borders = 0, np.zeros(self.lead_ticks.size + 1, dtype=bool)
+        steps: set[tuple[int, ...]] = set()
         for name in variables:
-            table = self._table(name)
-            present = table.source[chosen] >= 0
-            source = table.source[chosen][present]
-            chunk, found = self._chunk_numbers(name, source, table.position[chosen][present])
-            chunks.append(chunk + (0 if not chunks else 1 + chunks[-1].max(initial=0)))
-            leads.append(np.nonzero(present)[1])
-            grid_chunks |= found
+            _, lead, chunk = self.chunks(name, start)
+            borders |= straddled(chunk, lead, self.lead_ticks.size)
+            steps |= {self.sources[number].grid_chunks(name) for number in self._used(name, start)}
             point += len(self.members) * self.dtype(name).itemsize
-        spans = lead_spans(np.concatenate(chunks), np.concatenate(leads), self.lead_ticks.size)
-        shape = self.grid.shape
-        return cut(spans, grid_steps(grid_chunks, shape), shape, point, budget)
+        return cut(borders, grid_steps(steps, self.grid.shape), self.grid.shape, point, budget)
 
-    def _chunk_numbers(
-        self, variable: str, source: npt.NDArray[np.int32], position: npt.NDArray[np.int32]
-    ) -> tuple[npt.NDArray[np.int64], set[tuple[int, ...]]]:
-        """A number (N,) for the chunk along the run dimensions of each field, and grid chunks."""
-        chunk = np.empty(source.size, dtype=np.int64)
-        grid_chunks: set[tuple[int, ...]] = set()
-        numbers, which = np.unique(source, return_inverse=True)
-        alike: dict[tuple[tuple[int, ...], tuple[int, ...]], list[int]] = {}
-        for place, number in enumerate(numbers):
-            held = self.sources[number]
-            grid_chunks.add(held.grid_chunks(variable))
-            alike.setdefault((held.run_shape, held.run_chunks(variable)), []).append(place)
-        first = 0
-        for (shape, sizes), places in alike.items():
-            here = np.isin(which, places) if len(alike) > 1 else slice(None)
-            counts = tuple(-(-length // size) for length, size in zip(shape, sizes, strict=True))
-            inside = np.zeros(position[here].size, dtype=np.int64)
-            if shape:
-                axes = np.unravel_index(position[here], shape)
-                within = tuple(axis // size for axis, size in zip(axes, sizes, strict=True))
-                inside = np.ravel_multi_index(within, counts)
-            per_source = int(np.prod(counts, dtype=np.int64))
-            chunk[here] = first + which[here] * per_source + inside
-            first += numbers.size * per_source
-        return chunk, grid_chunks
+    def chunks(
+        self, variable: str, start: int | None = None
+    ) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64], npt.NDArray[np.int64]]:
+        """Start, lead and chunk of every field, of one start or of all: (N,) positions, numbers.
+
+        A chunk is here what lies together along the run dimensions of one file, whatever its part
+        of the grid.
+        """
+        first = 0 if start is None else start
+        chosen = slice(None) if start is None else slice(start, start + 1)
+        table = self._table(variable)
+        source, position = table.source[chosen], table.position[chosen]
+        present = source >= 0
+        starts, leads, _ = np.nonzero(present)
+        chunk = chunk_numbers(self.sources, variable, source[present], position[present])
+        return starts + first, leads, chunk
+
+    def _used(self, variable: str, start: int | None) -> list[int]:
+        """Sources that hold a variable at a start, or at any."""
+        source = self._table(variable).source
+        numbers = np.unique(source if start is None else source[start])
+        return [int(number) for number in numbers if number >= 0]
 
     def subset(self, starts: Index = slice(None), members: Index = slice(None)) -> Catalogue:
         """The catalogue of some starts and members, given by position."""

@@ -14,6 +14,8 @@ from itertools import pairwise
 import numpy as np
 import numpy.typing as npt
 
+from ensemble_horizon.runs.sources import Source
+
 Span = tuple[int, int]
 
 
@@ -29,10 +31,44 @@ class Blocks:
     size: int
 
 
-def lead_spans(
+def chunk_numbers(
+    sources: Sequence[Source],
+    variable: str,
+    source: npt.NDArray[np.int32],
+    position: npt.NDArray[np.int32],
+) -> npt.NDArray[np.int64]:
+    """A number (N,) for the chunk along the run dimensions that holds each field.
+
+    Parameters
+    ----------
+    source, position : (N,) int
+        Of each field: position in ``sources``, and flat index in its run dimensions.
+    """
+    chunk = np.empty(source.size, dtype=np.int64)
+    numbers, which = np.unique(source, return_inverse=True)
+    alike: dict[tuple[tuple[int, ...], tuple[int, ...]], list[int]] = {}
+    for place, number in enumerate(numbers):
+        held = sources[number]
+        alike.setdefault((held.run_shape, held.run_chunks(variable)), []).append(place)
+    first = 0
+    for (shape, sizes), places in alike.items():
+        here = np.isin(which, places)
+        counts = tuple(-(-length // size) for length, size in zip(shape, sizes, strict=True))
+        inside = np.zeros(np.count_nonzero(here), dtype=np.int64)
+        if shape:
+            axes = np.unravel_index(position[here], shape)
+            within = tuple(axis // size for axis, size in zip(axes, sizes, strict=True))
+            inside = np.ravel_multi_index(within, counts).astype(np.int64)
+        each = math.prod(counts)
+        chunk[here] = first + which[here] * each + inside
+        first += numbers.size * each
+    return chunk
+
+
+def straddled(
     chunk: npt.NDArray[np.int64], lead: npt.NDArray[np.int64], total: int
-) -> tuple[Span, ...]:
-    """The shortest spans of leads such that no chunk lies in two of them.
+) -> npt.NDArray[np.bool_]:
+    """Borders (total + 1,) between leads that a chunk reaches across.
 
     Parameters
     ----------
@@ -45,19 +81,18 @@ def lead_spans(
     --------
     Chunks of three leads; a second file begins at the lead after the fourth.
 
-    >>> lead_spans(np.array([0, 0, 0, 1, 2, 2, 2]), np.arange(7), 7)
-    ((0, 3), (3, 4), (4, 7))
+    >>> np.flatnonzero(~straddled(np.array([0, 0, 0, 1, 2, 2, 2]), np.arange(7), 7))
+    array([0, 3, 4, 7])
     """
     _, number = np.unique(chunk, return_inverse=True)
     low = np.full(number.max(initial=-1) + 1, total, dtype=np.int64)
     high = np.full(low.size, -1, dtype=np.int64)
     np.minimum.at(low, number, lead)
     np.maximum.at(high, number, lead)
-    inside = np.zeros(total + 2, dtype=np.int64)  # chunks that reach across the border before it
-    np.add.at(inside, low + 1, 1)
-    np.add.at(inside, high + 1, -1)
-    open_borders = np.flatnonzero(np.cumsum(inside)[1:total] == 0) + 1
-    return tuple(pairwise([0, *(int(border) for border in open_borders), total]))
+    across = np.zeros(total + 2, dtype=np.int64)
+    np.add.at(across, low + 1, 1)
+    np.add.at(across, high + 1, -1)
+    return np.cumsum(across)[: total + 1] > 0
 
 
 def grid_steps(storages: Iterable[tuple[int, ...]], shape: tuple[int, ...]) -> tuple[int, ...]:
@@ -75,14 +110,18 @@ def grid_steps(storages: Iterable[tuple[int, ...]], shape: tuple[int, ...]) -> t
 
 
 def cut(
-    spans: Sequence[Span], steps: tuple[int, ...], shape: tuple[int, ...], point: int, budget: int
+    borders: npt.NDArray[np.bool_],
+    steps: tuple[int, ...],
+    shape: tuple[int, ...],
+    point: int,
+    budget: int,
 ) -> Blocks:
     """Blocks as large as ``budget`` bytes allow, and never less than whole chunks.
 
     Parameters
     ----------
-    spans, steps
-        What cannot be divided: of `lead_spans` and `grid_steps`.
+    borders, steps
+        What cannot be divided: of `straddled` and `grid_steps`.
     point : int
         Bytes of the values of all members at one point and lead.
 
@@ -90,11 +129,13 @@ def cut(
     --------
     Whole fields where the budget allows one, rows of chunks where it does not.
 
-    >>> cut([(0, 3), (3, 4)], (10, 60), (40, 60), 8, 10**6)
+    >>> borders = np.array([False, True, True, False, False])
+    >>> cut(borders, (10, 60), (40, 60), 8, 10**6)
     Blocks(leads=((0, 4),), axes=(((0, 40),), ((0, 60),)), size=76800)
-    >>> cut([(0, 3), (3, 4)], (10, 60), (40, 60), 8, 30_000)
+    >>> cut(borders, (10, 60), (40, 60), 8, 30_000)
     Blocks(leads=((0, 3), (3, 4)), axes=(((0, 20), (20, 40)), ((0, 60),)), size=28800)
     """
+    spans = list(pairwise(int(border) for border in np.flatnonzero(~borders)))
     unit = max(stop - first for first, stop in spans)
     window = list(shape)
     for axis, step in enumerate(steps):

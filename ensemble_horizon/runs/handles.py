@@ -41,7 +41,7 @@ _CLASSIC = (b"CDF\x01", b"CDF\x02", b"CDF\x05")
 class Opened:
     """An open file, and the decoders of the variables that were read from it."""
 
-    stamp: tuple[int, int]
+    stamp: tuple[int, ...]
     dataset: netCDF4.Dataset
     decoders: dict[str, Decoder] = field(default_factory=dict)
 
@@ -62,7 +62,7 @@ class Handles:
             # Closing a parent's handle in the child could touch state that both share.
             self._inherited.append(self._open)
             self._open, self._pid = OrderedDict(), os.getpid()
-        stamp = _stamp(path)
+        stamp = stamp_of(path)
         known = self._open.get(path)
         if known is not None and known.stamp == stamp:
             self._open.move_to_end(path)
@@ -128,6 +128,21 @@ def open_raw(path: str) -> netCDF4.Dataset:
         raise _truncated(path, f"a file cut short by {missing} bytes")
     dataset.set_auto_maskandscale(False)
     return dataset
+
+
+def stamp_of(path: str) -> tuple[int, ...]:
+    """By what another file of the same name shows, also one that kept size and time of the old.
+
+    Raises
+    ------
+    InputError
+        If there is no file any more.
+    """
+    try:
+        status = os.stat(path)  # noqa: PTH116 (on the path of every read, and a string is at hand)
+    except OSError as error:
+        raise diagnose(path, error) from error
+    return status.st_mtime_ns, status.st_size, status.st_ino, status.st_ctime_ns
 
 
 @contextlib.contextmanager
@@ -200,14 +215,6 @@ def _kind_of(head: bytes) -> str:
     if all(byte in printable for byte in head):
         return "a text file"
     return "a file of another format"
-
-
-def _stamp(path: str) -> tuple[int, int]:
-    try:
-        status = os.stat(path)  # noqa: PTH116 (on the path of every read, and a string is at hand)
-    except OSError as error:
-        raise diagnose(path, error) from error
-    return status.st_mtime_ns, status.st_size
 
 
 def _first_line(error: BaseException) -> str:

@@ -243,9 +243,7 @@ class HeaderReading:
         lengths = tuple(self.sizes[dim] for dim in run_dims)
         space_axes = tuple(dims.index(dim) for dim in space_dims)
         storage = {name: storage_of(self.variables[name], space_axes) for name in names}
-        source = Source(
-            self.file.path, tuple(run_axes), lengths, space_axes, tuple(fixed), storage
-        )
+        source = Source(self.file.path, tuple(run_axes), lengths, space_axes, tuple(fixed), storage)
         moments = self._moments(run_dims, names[0])
         grid = read_grid(space_dims, space, self.sizes, places, self.known)
         headers = tuple(self._variable(name) for name in names)

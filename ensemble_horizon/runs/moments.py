@@ -46,7 +46,6 @@ class Moments:
     lead: Ticks
     member: np.ndarray | None
     calendar: str
-    lead_axis: int | None
     mismatch: str | None
     lead_units: str = HOURS
 
@@ -92,12 +91,8 @@ def read_moments(
         if abs(inside - told) > 1e-6:
             mismatch = f"lead {inside:g} h inside the file, {told:g} h in its name"
     member = _members(file, coordinates.get(MEMBER), dims, sizes, dim_roles)
-    moving = [axis for axis in range(len(sizes)) if sizes[axis] > 1 and _varies(lead, axis)]
-    if not moving:
-        moving = [axis for axis, dim in enumerate(dims) if dim_roles[dim] in (LEAD, VALID)]
     plain = LEAD in coordinates and str(getattr(coordinates[LEAD], "units", "")) == MODEL_TIME
-    return Moments(start, lead, member, calendar, moving[0] if moving else None, mismatch,
-                   MODEL_TIME if plain else HOURS)  # fmt: skip
+    return Moments(start, lead, member, calendar, mismatch, MODEL_TIME if plain else HOURS)
 
 
 def _analysis(
@@ -110,7 +105,7 @@ def _analysis(
             raise _no_time(file.path)
         valid = np.full(sizes, date_ticks(file.parts.start), dtype=np.int64)
     zeros = np.zeros(sizes, dtype=np.int64)
-    return Moments(valid, zeros, zeros.astype(object), calendar, None, None)
+    return Moments(valid, zeros, zeros.astype(object), calendar, None)
 
 
 def _start(
@@ -216,10 +211,6 @@ def _spread_out(
     moved = np.transpose(values, order) if over else values
     shape = tuple(size if dim in over else 1 for dim, size in zip(dims, sizes, strict=True))
     return np.ascontiguousarray(np.broadcast_to(np.reshape(moved, shape), sizes))
-
-
-def _varies(values: Ticks, axis: int) -> bool:
-    return bool((np.diff(values, axis=axis) != 0).any())
 
 
 def _refuse_time_beside_lead(

@@ -21,6 +21,7 @@ Indices = npt.NDArray[np.int64]
 # Reading a span with gaps is cheaper than many calls while at least this part of it is wanted.
 _DENSE = 0.5
 _CHUNK_CACHE = 2 * 2**20
+_CALL_VALUES = 2**23  # of one call: what was read and what is decoded of it are held at once
 
 
 @dataclass(frozen=True)
@@ -82,7 +83,10 @@ def raw_blocks(
     position: npt.NDArray[np.int32],
     bounds: Bounds,
 ) -> Iterator[RawBlock]:
-    """Read the wanted fields of ``source`` as stored, adjacent ones in one call."""
+    """Read the wanted fields of ``source`` as stored, adjacent ones in one call.
+
+    Calls take in whole chunks along the run dimensions, so that none is decompressed twice.
+    """
     member, lead = np.nonzero(where)
     if member.size == 0:
         return
@@ -90,33 +94,65 @@ def raw_blocks(
         axes = np.stack(np.unravel_index(position[where], source.run_shape))
     else:
         axes = np.zeros((0, member.size), dtype=np.int64)
-    whole = [np.unique(axis) for axis in axes]
-    one = all(part[-1] - part[0] + 1 == part.size for part in whole)
-    one = one and math.prod(part.size for part in whole) == member.size
-    everything = np.arange(member.size)
-    for chosen in (everything,) if one else _slabs(axes, everything):
-        along = whole if one else [np.unique(axis[chosen]) for axis in axes]
+    sizes = np.array(source.run_chunks(variable), dtype=np.int64)[:, np.newaxis]
+    fields = math.prod(stop - first for first, stop in bounds)
+    for chosen in _calls(axes, sizes, max(1, _CALL_VALUES // max(1, fields))):
+        along = [np.unique(axis[chosen]) for axis in axes]
         raw, decode = _read_slab(source, variable, along, bounds)
         shape = tuple(part.size for part in along)
         # The slab holds its fields in the order of the axes, so the labels are sorted likewise.
         order = chosen[np.lexsort(axes[::-1, chosen])] if along else chosen
-        yield RawBlock(raw, member[order].reshape(shape), lead[order].reshape(shape), decode)
+        if math.prod(shape) == chosen.size:
+            yield RawBlock(raw, member[order].reshape(shape), lead[order].reshape(shape), decode)
+        else:
+            places = zip(along, axes[:, order], strict=True)
+            picked = tuple(np.searchsorted(part, axis) for part, axis in places)
+            yield RawBlock(raw[picked], member[order], lead[order], decode)
 
 
-def _slabs(axes: Indices, chosen: Indices, axis: int = 0) -> Iterator[Indices]:
-    """Split the fields into sets that are full products of dense positions along every axis."""
-    if axis == len(axes):
+def _calls(axes: Indices, sizes: Indices, most: int) -> Iterator[Indices]:
+    """Split the fields into calls of about ``most`` fields, with no chunk in two of them."""
+    cells, cell = axes // sizes, np.arange(axes.shape[1])
+    if (sizes > 1).any():
+        cells, cell = np.unique(cells, axis=1, return_inverse=True)
+        cell = cell.ravel()
+    count = cells.shape[1]
+    whole = [np.unique(axis) for axis in cells]
+    one = all(part[-1] - part[0] + 1 == part.size for part in whole)
+    one = one and math.prod(part.size for part in whole) == count
+    portion = max(1, most * count // cell.size)
+    for slab in (np.arange(count),) if one else _slabs(cells, np.arange(count)):
+        for part in _portions(cells, slab, portion):
+            here = slice(None) if part.size == count else np.isin(cell, part)
+            yield np.arange(cell.size)[here]
+
+
+def _portions(cells: Indices, slab: Indices, most: int) -> Iterator[Indices]:
+    """Cut a slab along its first axis that is longer than one, so that calls stay small."""
+    for axis in cells[:, slab]:
+        along = np.unique(axis)
+        if along.size > 1 and slab.size > most:
+            step = max(1, most * along.size // slab.size)
+            for first in range(0, along.size, step):
+                yield slab[np.isin(axis, along[first : first + step])]
+            return
+    yield slab
+
+
+def _slabs(cells: Indices, chosen: Indices, axis: int = 0) -> Iterator[Indices]:
+    """Split the cells into sets that are full products of dense positions along every axis."""
+    if axis == len(cells):
         yield chosen
         return
-    positions = np.unique(axes[axis, chosen])
+    positions = np.unique(cells[axis, chosen])
     for run in _dense_runs(positions):
-        part = chosen[np.isin(axes[axis, chosen], run)]
-        rest = [np.unique(axes[later, part]).size for later in range(axis + 1, len(axes))]
+        part = chosen[np.isin(cells[axis, chosen], run)]
+        rest = [np.unique(cells[later, part]).size for later in range(axis + 1, len(cells))]
         if run.size * math.prod(rest) == part.size:
-            yield from _slabs(axes, part, axis + 1)
+            yield from _slabs(cells, part, axis + 1)
         else:
             for single in run:
-                yield from _slabs(axes, part[axes[axis, part] == single], axis + 1)
+                yield from _slabs(cells, part[cells[axis, part] == single], axis + 1)
 
 
 def _dense_runs(positions: Indices) -> list[Indices]:
@@ -164,10 +200,12 @@ def _variable(opened: Opened, path: str, variable: str, rank: int) -> Decoder:
             found="another layout",
             remedy="the file was replaced meanwhile; start again",
         )
-    # Blocks follow the chunks, so a chunk is wanted once: the library's cache of 64 MB for each
-    # variable of each open file would only fill the memory.
+    # Blocks follow the chunks, so a chunk is wanted once: what the library kept of it, up to 64 MB
+    # for each variable of each open file, would only fill the memory. A small variable, such as the
+    # analyses of a region, may be read moment by moment.
     if stored.chunking() not in (None, "contiguous"):
-        stored.set_var_chunk_cache(_CHUNK_CACHE)
+        small = math.prod(stored.shape) * stored.dtype.itemsize <= _CHUNK_CACHE
+        stored.set_var_chunk_cache(_CHUNK_CACHE if small else 0)
     made = decoder(stored.dtype, {key: stored.getncattr(key) for key in stored.ncattrs()})
     opened.decoders[variable] = made
     return made

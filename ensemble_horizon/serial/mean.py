@@ -148,10 +148,12 @@ def mean_noise(values: np.ndarray) -> MeanNoise:
     for rows, dense in closed_up(values):
         if dense.shape[0] < LEAST_STARTS:
             continue
-        scatters = np.ptp(dense, axis=0) > _ROUNDING * np.abs(dense).max(axis=0)
+        low, high = dense.min(axis=0), dense.max(axis=0)
+        scatters = high - low > _ROUNDING * np.maximum(np.abs(low), np.abs(high))
         reason[rows] = np.where(scatters, Reason.given, Reason.no_scatter)
-        rows = rows[scatters]
-        variance[rows], dof[rows] = _noise(dense[:, scatters])
+        if not scatters.all():
+            rows, dense = rows[scatters], dense[:, scatters]
+        variance[rows], dof[rows] = _noise(dense)
     return MeanNoise(variance, dof, starts, reason)
 
 
@@ -159,12 +161,14 @@ def _noise(dense: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     number = dense.shape[0]
     cosines, products = _contrasts(number)
     departure = dense - dense.mean(axis=0)
-    correlation = (departure[1:] * departure[:-1]).sum(axis=0) / (departure**2).sum(axis=0)
+    square = np.einsum("sk,sk->k", departure, departure)
+    correlation = np.einsum("sk,sk->k", departure[1:], departure[:-1]) / square
     correlation = np.clip((correlation + 1 / number) / (1 - 4 / number), 0.0, _STRONGEST)
-    lag = np.arange(1, number)[:, np.newaxis]
-    power = correlation ** (lag - 1)
-    expected = 1 + products @ (power * correlation)
-    slope = products @ (power * lag) / expected
+    power = np.ones_like(dense)
+    for lag in range(1, number):
+        np.multiply(power[lag - 1], correlation, out=power[lag])
+    expected = 1 + products @ power[1:]
+    slope = (products * np.arange(1, number)) @ power[:-1] / expected
     square = (cosines @ departure) ** 2 / expected[1:] * expected[0]
     pull = (slope[0] - slope[1:]).mean(axis=0)
     relative = 2 / cosines.shape[0] + pull**2 * (1 - correlation**2) / number

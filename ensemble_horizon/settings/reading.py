@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+from collections.abc import Iterable
 from contextlib import suppress
 from pathlib import Path
 from typing import Any
@@ -128,6 +129,8 @@ def _cross_checks(settings: Settings) -> list[str]:
             except EnsembleHorizonError as error:
                 found.append(f"{kind}.{name}: expected {error.expected}, found {error.found}")
     found += _strange_names(settings)
+    found += _names_with_nul(settings)
+    found += _folders_in_one_another(settings)
     for name, variable in settings.variables.items():
         labels: set[str] = set()
         for number, item in enumerate(variable.criteria):
@@ -161,6 +164,36 @@ def _strange_names(settings: Settings) -> list[str]:
         for name in names
         if name not in settings.variables
     ]
+
+
+def _names_with_nul(settings: Settings) -> list[str]:
+    """Names that would be cut off, as text in NetCDF files ends at the character NUL."""
+    tables: dict[str, Iterable[str]] = {
+        "variables": settings.variables, "regions": settings.regions, "sites": settings.sites,
+    }  # fmt: skip
+    return [
+        f"{key}.{name.replace(chr(0), '<NUL>')}: a name without the character NUL"
+        for key, names in tables.items()
+        for name in names
+        if "\0" in name
+    ]
+
+
+def _folders_in_one_another(settings: Settings) -> list[str]:
+    """Archive and products in one folder, or one inside the other."""
+    if settings.night is None or not (settings.night.archive and settings.products.folder):
+        return []
+    archive = settings.path(settings.night.archive).resolve()
+    products = settings.path(settings.products.folder).resolve()
+    if archive == products:
+        where = "is the folder of products.folder"
+    elif archive.is_relative_to(products):
+        where = "lies inside that of products.folder"
+    elif products.is_relative_to(archive):
+        where = "holds that of products.folder"
+    else:
+        return []
+    return [f"night.archive: a folder beside products.folder; {archive} {where}, {products}"]
 
 
 def _known_keys(loc: tuple[int | str, ...]) -> list[str]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import difflib
 import os
+import re
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -165,10 +166,38 @@ class CalibrationTable(Table):
 
 
 class EngineTable(Table):
-    """``[engine]``: where the reading is done."""
+    """``[engine]``: where the work is done, on this machine or on a cluster.
+
+    ``scheduler``: the address of a dask scheduler, the path of a scheduler file, or "configured"
+    for what dask's own configuration names.
+    """
 
     workers: Annotated[int, Field(ge=1, le=1024)] | None = None
     block_memory_mib: Annotated[int, Field(ge=8)] = 192
+    scheduler: Annotated[str, Field(min_length=1)] | None = None
+
+    @field_validator("scheduler")
+    @classmethod
+    def _reachable(cls, value: str | None) -> str | None:
+        if value is None or re.fullmatch(r"(tcp|tls)://[^/\s]+:\d+", value):
+            return value
+        if "://" in value or re.fullmatch(r"[^/\\]+:\d+", value):
+            host = value.rpartition("://")[2]
+            known = re.fullmatch(r"[^/\s]+:\d+", host) is not None
+            example = f"tcp://{host}" if known else "tcp://host:8786"
+            raise ValueError(
+                f"an address such as {example} or {example.replace('tcp', 'tls', 1)}, "
+                'the path of a scheduler file, or "configured"'
+            )
+        return value
+
+    @model_validator(mode="after")
+    def _one_place(self) -> EngineTable:
+        if self.workers is not None and self.scheduler is not None:
+            raise ValueError(
+                "either engine.workers or engine.scheduler, not both: a cluster has its own workers"
+            )
+        return self
 
 
 class ProductsTable(Table):

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import xarray as xr
 from scipy import special
@@ -79,7 +81,10 @@ def crps_of_departures(departure: np.ndarray, fair: bool = True) -> np.ndarray:
     # sum |x_m - x_k| over all pairs is 2 sum (2 i - M - 1) x_(i), taken here from the outside in.
     apart = np.zeros_like(distance)
     for place in range(members // 2):
-        apart += (members - 1 - 2 * place) * (rows[members - 1 - place] - rows[place])
+        width = rows[members - 1 - place]
+        width -= rows[place]
+        width *= members - 1 - 2 * place
+        apart += width
     with np.errstate(invalid="ignore", divide="ignore"):
         pairs = departure.dtype.type(members * (members - 1 if fair else members))
         return np.asarray(distance / members - apart / pairs)
@@ -99,7 +104,7 @@ def gaussian_crps(departure: np.ndarray, deviation: np.ndarray) -> np.ndarray:
     away = np.abs(departure)
     with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
         z = away / deviation
-        density = np.exp(-0.5 * z * z) * (2 / np.sqrt(2 * np.pi)) - 1 / np.sqrt(np.pi)
+        density = np.exp(-0.5 * z * z) * math.sqrt(2 / math.pi) - 1 / math.sqrt(math.pi)
         score = deviation * (z * (2 * special.ndtr(z) - 1) + density)
     return np.where(deviation == 0, away, score)
 

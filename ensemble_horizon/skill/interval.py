@@ -229,8 +229,10 @@ def statistic_interval(
     True
     """
     known = np.isfinite(inputs).all(axis=0)
+    starts = known.sum(axis=0)
+    whole = bool(known.all())
     with np.errstate(invalid="ignore", divide="ignore"):
-        means = np.where(known, inputs, 0.0).sum(axis=1) / known.sum(axis=0)
+        means = (inputs if whole else np.where(known, inputs, 0.0)).sum(axis=1) / starts
         middle = statistic.scale(means)
         # Beside the size of what it is made of, rounding is told from scatter.
         size = np.abs(statistic.slopes(means) * means).sum(axis=0)
@@ -244,9 +246,9 @@ def statistic_interval(
         value = statistic.back(middle)
     low, high = np.sort(ends, axis=0)
     # A statistic without a derivative, as of a score of zero, has no interval by this way.
-    undefined = (noise.starts < known.sum(axis=0)) & (noise.reason == Reason.few_starts)
+    undefined = (noise.starts < starts) & (noise.reason == Reason.few_starts)
     reason = np.where(undefined, Reason.no_scatter, noise.reason).astype(np.int8)
-    return Interval(value, low, high, noise.variance, noise.dof, known.sum(axis=0), reason)
+    return Interval(value, low, high, noise.variance, noise.dof, starts, reason)
 
 
 def square_reach(variance: np.ndarray, dof: np.ndarray, confidence: float) -> np.ndarray:
@@ -278,10 +280,10 @@ def square_reach(variance: np.ndarray, dof: np.ndarray, confidence: float) -> np
 
 def influence(statistic: Statistic, inputs: np.ndarray, means: np.ndarray) -> np.ndarray:
     """What each start (S, K) adds to the statistic on its scale; NaN where it has no inputs."""
-    slopes = statistic.slopes(means)
-    known = np.isfinite(inputs).all(axis=0)
-    series = (slopes[:, np.newaxis] * (inputs - means[:, np.newaxis])).sum(axis=0)
-    return np.where(known, series, np.nan)
+    series = np.zeros(inputs.shape[1:])
+    for one, mean, slope in zip(inputs, means, statistic.slopes(means), strict=True):
+        series += slope * (one - mean)
+    return np.where(np.isfinite(inputs).all(axis=0), series, np.nan)
 
 
 def _joined(scores: list[xr.DataArray], statistic: Statistic) -> list[xr.DataArray]:

@@ -152,8 +152,11 @@ class Sides(NamedTuple):
     present: np.ndarray
 
 
-def sides(departure: np.ndarray) -> Sides:
-    """Count the members (M, P), minus the analysis, by the side on which they lie: numpy kernel."""
+def sides(departure: np.ndarray, present: np.ndarray | None = None) -> Sides:
+    """Count the members (M, P), minus the analysis, by the side on which they lie: numpy kernel.
+
+    ``present`` (P,), the members that have a value, is counted where it is not given.
+    """
     # Sums of one kind of number are several times faster than sums of truth values.
     small = departure.shape[0] < 128
 
@@ -162,7 +165,9 @@ def sides(departure: np.ndarray) -> Sides:
             return np.asarray(np.add.reduce(which.view(np.int8), axis=0, dtype=np.int8))
         return np.asarray(np.add.reduce(which, axis=0, dtype=np.int64))
 
-    return Sides(number(departure < 0), number(departure == 0), number(np.isfinite(departure)))
+    if present is None:
+        present = number(np.isfinite(departure))
+    return Sides(number(departure < 0), number(departure == 0), present)
 
 
 def ranks(found: Sides, members: int, generator: np.random.Generator) -> np.ndarray:
@@ -219,8 +224,12 @@ def outside(found: Sides) -> np.ndarray:
     [1.0, 0.5]
     """
     below, equal, count = found
-    chance = ((below == 0).astype(float) + (below + equal == count)) / (equal + 1.0)
-    return np.where(count > 0, chance, np.nan)
+    chance = ((below == 0) | (below == count)).astype(float)
+    tied = np.flatnonzero(equal)
+    edges = (below[tied] == 0).astype(float) + (below[tied] + equal[tied] == count[tied])
+    chance[tied] = edges / (equal[tied] + 1.0)
+    chance[count == 0] = np.nan
+    return chance
 
 
 def _outside_last(error: np.ndarray) -> np.ndarray:

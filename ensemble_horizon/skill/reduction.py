@@ -140,7 +140,10 @@ def reduce_scores(
         CLIMATOLOGY: None if reduction.mean is None else reduction.mean[window],
         PERSISTENCE: persistence,
     }
-    deviation = None if reduction.deviation is None else reduction.deviation[window]
+    deviation = reduction.deviation
+    if deviation is not None:
+        deviation = deviation[window].astype(values.dtype, copy=False)
+    table = np.empty((len(QUANTITIES), min(_SLAB, size)))
     places = [_part(place, points) for place in reduction.places]
     for lead in range(leads):
         block = _Lead(values[:, lead], analysis[lead], reduction, still, deviation)
@@ -154,10 +157,14 @@ def reduce_scores(
             kept = None if block.known[slab].all() else np.flatnonzero(block.known[slab])
             chosen = slab if kept is None else first + kept
             piece, rank = block.scores(chosen, generator)
+            counts = rank >= 0
+            every = bool(counts.all())
             for name in reduction.fields:
                 if name in piece:
-                    found.fields[name][lead, chosen] = np.where(rank >= 0, piece[name], np.nan)
-            _sum_up(found, lead, piece, rank, [part.within(slab, kept) for part in places])
+                    field = piece[name] if every else np.where(counts, piece[name], np.nan)
+                    found.fields[name][lead, chosen] = field
+            parts = [part.within(slab, kept) for part in places]
+            _sum_up(found, lead, piece, rank, parts, table[:, : rank.size])
     return found
 
 
@@ -193,20 +200,24 @@ class _Lead:
         rows = self.values if self.present.all() else self.values[self.present]
         departure = rows[:, chosen] - self.analysis[chosen]
         deviations, count = member_deviations(departure)
-        variance = variance_of([deviations], count)
+        whole = bool((count == departure.shape[0]).all())
+        # Where no member lacks a value one count stands for all points.
+        number = count[:1] if whole else count
+        variance = variance_of([deviations], number)
         error = departure[0] - deviations[0]
-        gaps = np.flatnonzero(~np.isfinite(error))
-        first = np.argmax(np.isfinite(departure[:, gaps]), axis=0)
-        error[gaps] = departure[first, gaps] - deviations[first, gaps]
-        found = sides(departure)
+        if not whole:
+            gaps = np.flatnonzero(~np.isfinite(error))
+            first = np.argmax(np.isfinite(departure[:, gaps]), axis=0)
+            error[gaps] = departure[first, gaps] - deviations[first, gaps]
+        found = sides(departure, count)
         piece = {
             "error": error,
             "squared_error": error**2,
             "variance": variance,
-            "expected_squared_error": expected_squared_error(variance, count),
+            "expected_squared_error": expected_squared_error(variance, number),
             "crps": crps_of_departures(departure),
             "outside": outside(found),
-            "outside_expected": 2 / (count + 1.0),
+            "outside_expected": 2 / (number + 1.0),
         }
         self._add_references(piece, chosen)
         rank = ranks(found, self.values.shape[0], generator)
@@ -228,7 +239,9 @@ class _Lead:
             anomaly = truth - self.references[CLIMATOLOGY][chosen]
             piece |= {"anomaly": anomaly, "anomaly_squared": anomaly**2}
             if self.deviation is not None:
-                piece["climatology_crps"] = gaussian_crps(anomaly, self.deviation[chosen])
+                # In the members' own precision: of all scores of a point it takes the most time.
+                away = anomaly.astype(self.deviation.dtype, copy=False)
+                piece["climatology_crps"] = gaussian_crps(away, self.deviation[chosen])
             for name, error in forecasts.items():
                 forecast = anomaly + error
                 piece[f"{name}product"] = forecast * anomaly
@@ -271,18 +284,23 @@ def _sum_up(
     piece: Mapping[str, np.ndarray],
     rank: np.ndarray,
     parts: list[tuple[slice | np.ndarray, np.ndarray]],
+    table: np.ndarray,
 ) -> None:
+    """Add the weighted sums over each place; ``table`` (Q, P) is room for the quantities."""
     if rank.size == 0:
         return
     rows = [QUANTITIES.index(name) for name in piece]
-    table = np.stack([item.astype(float) for item in piece.values()])
-    whole = bool((rank >= 0).all() and np.isfinite(table).all())
+    table = table[: len(rows)]
+    for row, item in zip(table, piece.values(), strict=True):
+        row[...] = item
     for number, (columns, weight) in enumerate(parts):
         if weight.size == 0:
             continue
         here, values = rank[columns], table[:, columns]
-        if whole:
-            found.sums[rows, lead, number] += values @ weight
+        total = values @ weight
+        # A gap at any point makes its sum NaN.
+        if np.isfinite(total).all() and here.min() >= 0:
+            found.sums[rows, lead, number] += total
             found.weights[rows, lead, number] += weight.sum()
         else:
             weight = np.where(here >= 0, weight, 0.0)

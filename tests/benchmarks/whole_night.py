@@ -88,10 +88,10 @@ def smooth_noise(rng: np.random.Generator, rows: int, columns: int) -> np.ndarra
     return noise / noise.std()
 
 
-def describe(file, member, lead, latitude, longitude):
-    """Define dimensions and coordinates; return the variable to fill."""
+def describe(file, member, lead, latitude, longitude, start=0.0, storage=None):
+    """Define dimensions and coordinates; return the variable to fill, of one member or several."""
     for name, values, attributes in (
-        ("time", lead, {"standard_name": "time", "units": "hours since 2031-02-14 00:00"}),
+        ("time", start + lead, {"standard_name": "time", "units": "hours since 2031-02-14 00:00"}),
         ("lat", latitude, {"standard_name": "latitude", "units": "degrees_north"}),
         ("lon", longitude, {"standard_name": "longitude", "units": "degrees_east"}),
     ):
@@ -99,17 +99,20 @@ def describe(file, member, lead, latitude, longitude):
         axis = file.createVariable(name, "f8", (name,))
         axis.setncatts(attributes)
         axis[:] = values
-    start = file.createVariable("reference", "f8")
-    start.setncatts({"standard_name": "forecast_reference_time"})
-    start.units = "hours since 2031-02-14 00:00"
-    start[...] = 0.0
-    number = file.createVariable("realization", "i4")
+    reference = file.createVariable("reference", "f8")
+    reference.setncatts({"standard_name": "forecast_reference_time"})
+    reference.units = "hours since 2031-02-14 00:00"
+    reference[...] = start
+    several = ("member",) if np.ndim(member) else ()
+    if several:
+        file.createDimension("member", len(member))
+    number = file.createVariable("realization", "i4", several)
     number.standard_name = "realization"
     number[...] = member
-    shape = (1, latitude.size, longitude.size)
-    variable = file.createVariable(
-        "t2", "f4", ("time", "lat", "lon"), zlib=True, complevel=4, chunksizes=shape
-    )
+    dims = (*several, "time", "lat", "lon")
+    chunks = (1,) * (len(dims) - 2) + (latitude.size, longitude.size)
+    plain = {"zlib": True, "complevel": 4, "chunksizes": chunks}
+    variable = file.createVariable("t2", "f4", dims, **(plain if storage is None else storage))
     variable.setncatts({"units": "K", "coordinates": "reference realization"})
     return variable
 
@@ -165,15 +168,19 @@ def run_estimate(folder: Path, intervals: bool) -> tuple[float, float]:
                 intervals=str(intervals).lower(),
             )
         )
-        command = [sys.executable, "-m", "ensemble_horizon", "estimate", str(settings), "--quiet"]
-        begun = time.perf_counter()
-        process = subprocess.Popen(command)
-        peak = PeakMemory(process.pid)
-        status = process.wait()
-        seconds = time.perf_counter() - begun
-        if status != 0:
-            raise SystemExit(f"estimate ended with status {status}")
-        return seconds, peak.stop()
+        return watched("estimate", str(settings), "--quiet")
+
+
+def watched(*arguments: str) -> tuple[float, float]:
+    """Seconds and peak memory in GiB of a command of the package and all its children."""
+    begun = time.perf_counter()
+    process = subprocess.Popen([sys.executable, "-m", "ensemble_horizon", *arguments])
+    peak = PeakMemory(process.pid)
+    status = process.wait()
+    seconds = time.perf_counter() - begun
+    if status != 0:
+        raise SystemExit(f"{arguments[0]} ended with status {status}")
+    return seconds, peak.stop()
 
 
 class PeakMemory:

@@ -23,6 +23,8 @@ from ensemble_horizon.horizon.usual import Standing, Usual
 from ensemble_horizon.products import Ground, PlaceMark, write_products
 from ensemble_horizon.products.gains import Gain
 from ensemble_horizon.products.page import Briefing, VersionsTable, write_page
+from ensemble_horizon.products.page.error_rows import ErrorRow
+from ensemble_horizon.products.score_sentences import PastSkill
 from ensemble_horizon.products.stored import read_results
 from ensemble_horizon.vocabulary import Status
 
@@ -99,15 +101,35 @@ def night(tmp_path_factory: pytest.TempPathFactory) -> Page:
         ("wind_speed", places[0], "gale/spread"): Usual(30, 80.0, 60.0, 99.0, 51, Standing.usual),
         ("pressure", places[0], "sat 0.7"): Usual.unknown(3),
     }
+    errors = tuple(
+        ErrorRow("wind_speed", places[0], "analysis", "crps", lead, "hours", 30, 1.0, 1.1, 0.1,
+                 0.04, 0.16, True, "m s-1")
+        for lead in (0.0, 120.0, 240.0)
+    )  # fmt: skip
     gains = (_gain(places[0], 6.5, True), _gain(places[1], -2.0, False))
     return _page(
         tmp_path_factory.mktemp("night"),
         results,
         usual=usual,
         troubles=("Member 7 is missing: no file holds it.", "Member 3 ends early, at 120 h."),
-        skill=("10 m wind speed, North bank: skilled to 168 h over the last 30 starts.",),
+        skill=tuple(
+            PastSkill(
+                "wind_speed",
+                "10 m wind speed",
+                place,
+                "analysis",
+                30,
+                "120 h",
+                "0.85 (0.77 to 0.94)",
+                "too little",
+                "skill over climatology",
+                "beyond the run (> 240 h; at least 155 h)",
+                "132 h",
+            )
+            for place in places
+        ),
         notes=("Calibration in force.",),
-        versions=VersionsTable("old", "new", "30 common starts", gains),
+        versions=VersionsTable("old", "new", "30 common starts", gains, errors=errors),
         ground=Ground((PlaceMark.box(places[0], -8, 4, 52, 58), PlaceMark.site(places[1], 2, 55))),
         version="0.1.0",
     )
@@ -136,7 +158,22 @@ def awkward(tmp_path_factory: pytest.TempPathFactory) -> Page:
         title=f"Desk {TAG} {IMAGE} {'W' * 90}",
         members=f"19 of 20 {TAG}",
         troubles=(f"member {TAG} {'x' * 300}",),
-        skill=(IMAGE,),
+        skill=tuple(
+            PastSkill(
+                names["variable"],
+                names["long_name"],
+                place,
+                "observation",
+                9,
+                TAG,
+                f"1 {IMAGE}",
+                "too little",
+                TAG,
+                "beyond the run " + "W" * 60,
+                IMAGE,
+            )
+            for place in places
+        ),
         notes=(f"]]> --> {TAG}",),
         ground=Ground((PlaceMark.box(TAG, 3, 7, 51, 53), PlaceMark.site("W" * 80, 4, 52))),
     )

@@ -153,7 +153,7 @@ def agrees(figure, grid, index):
         assert told_limit is None
         expected = {
             Status.beyond_run: "beyond the run",
-            Status.at_start: "exceeded at the first lead",
+            Status.at_start: "reached at the first lead",
             Status.no_growth: "no growth",
             Status.no_data: "too little known",
         }

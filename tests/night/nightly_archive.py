@@ -18,7 +18,7 @@ def light_briefing(folder: Path, briefing: Briefing) -> list[Path]:
     """In place of page and sheet, which take their time: all that is told on them, as text."""
     told = (
         briefing.title, briefing.start, briefing.made, briefing.members, briefing.troubles,
-        briefing.notes, briefing.skill, briefing.version, dict(briefing.usual),
+        briefing.notes, briefing.skill, briefing.no_skill, briefing.version, dict(briefing.usual),
         [limit.text for limit in briefing.limits()],
     )  # fmt: skip
     files = [folder / "briefing.html", folder / "briefing.pdf"]

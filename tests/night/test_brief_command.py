@@ -5,6 +5,7 @@ from __future__ import annotations
 import dataclasses
 import re
 import shutil
+from datetime import UTC, datetime
 
 import numpy as np
 import pytest
@@ -14,6 +15,7 @@ from ensemble_horizon.errors import ProductError
 from ensemble_horizon.night.archive import file_night
 from ensemble_horizon.night.brief import assemble_briefing
 from ensemble_horizon.products.nights import night_of
+from ensemble_horizon.products.page import VersionsTable
 from ensemble_horizon.products.stored import read_results
 from ensemble_horizon.settings import read_settings
 
@@ -150,11 +152,13 @@ def test_what_is_usual_comes_from_the_archive(products):
     result = brief(products)
     assert result.exit_code == 0, result.stderr
     assert "A new name" in page(products) and "A new name" in sheet(products)
-    # Every past night was longer by 20 h, so tonight is at percentile 0.
+    # Every past night was longer by 20 h.
     assert "shorter than usual" in page(products)
+    assert "shorter than all 12 past nights" in page(products)
     (row,) = products.rows()
     usual = f"{float(row['horizon']) + 20:.0f}"
-    assert f"{usual} ({usual} to {usual}) 0, shorter" in sheet(products)
+    assert f"{usual} ({usual} to {usual}) " in sheet(products)
+    assert "shorter than all 12" in sheet(products)
     assert "set_aside" in result.stdout and "20310201T00.nc" in page(products)
     assert not broken.exists()
 
@@ -210,3 +214,52 @@ def test_names_with_tags(night):
     for tag in ("<script>alert", "<b>&", "<img src=x>"):
         assert tag not in page(night)
     assert "<script>alert(1)</script>" in sheet(night)
+
+
+def test_a_grid_point_far_from_its_site_is_told(night):
+    night.write()
+    latitudes = np.asarray(night_grid(night)["latitude"])
+    longitudes = np.asarray(night_grid(night)["longitude"])
+    half = (latitudes[1] - latitudes[0]) / 2
+    sites = (
+        f"[sites.Near]\nlatitude = {latitudes[0]}\nlongitude = {longitudes[0]}\n"
+        f"[sites.Far]\nlatitude = {latitudes[0] + half}\nlongitude = {longitudes[0]}\n"
+    )
+    night.settings(VARIABLES, products=MAPS, more=sites)
+    assert night.estimate().exit_code == 0
+    assert brief(night).exit_code == 0
+    # Along a meridian a degree is 2 pi 6371 km / 360.
+    distance = abs(half) * 2 * np.pi * 6371 / 360
+    assert distance > 25
+    found = re.findall(r"The grid point used for (\w+) lies (\d+) km away", page(night))
+    assert [name for name, _ in found] == ["Far"]
+    assert float(found[0][1]) == pytest.approx(distance, abs=1)
+    assert "No past start is verified for this briefing" in page(night)
+
+
+def night_grid(night):
+    import xarray as xr
+
+    with xr.open_dataset(sorted(night.folder.rglob("m00.nc"))[0]) as member:
+        return {name: member[name].values for name in ("latitude", "longitude")}
+
+
+@pytest.mark.parametrize(
+    ("a", "b", "version"),
+    [
+        ("/old/1/m0.nc", "HERE/1/m0.nc", "new"),
+        ("HERE/1/m0.nc", "/new/1/m0.nc", "old"),
+        ("HERE/1/m0.nc", "HERE/2/m0.nc", ""),
+        ("/old/m0.nc", "/new/m0.nc", ""),
+        ("", "", ""),
+    ],
+)
+def test_the_version_of_tonight_is_known_by_where_its_runs_lie(products, a, b, version):
+    settings = read_settings(products.config)
+    here = str(settings.run_files()).partition("{")[0].partition("*")[0].rpartition("/")[0]
+    inputs = (a.replace("HERE", here), b.replace("HERE", here))
+    told = assemble_briefing(
+        settings, read_results(products.products), made=datetime(2031, 2, 14, tzinfo=UTC),
+        usual={}, troubles=(), versions=VersionsTable("old", "new", "", (), inputs=inputs),
+    )  # fmt: skip
+    assert told.versions.tonight == version

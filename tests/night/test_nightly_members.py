@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+import logging
 import time
 from collections.abc import Callable
 
@@ -44,6 +45,14 @@ def nightly(tmp_path) -> Nightly:
     return made
 
 
+@pytest.fixture
+def told(monkeypatch, caplog):
+    """The log in full, also where a command has begun or silenced it before."""
+    monkeypatch.setattr(logging.getLogger("ensemble_horizon"), "propagate", True)
+    with caplog.at_level(logging.WARNING, "ensemble_horizon"):
+        yield caplog
+
+
 def chosen(nightly, wanted=None, minutes=0.0, clock=None, waited=lambda stamp: False):
     clock = clock or FakeClock()
     return choose_start(
@@ -63,6 +72,23 @@ def test_an_incomplete_start_is_passed_over_and_named(nightly):
     assert found.start == "2031-02-13T00:00"
     (text,) = found.troubles
     assert "2031-02-14T00:00 was passed over, as members 2 and 3 had not come whole" in text
+
+
+def test_all_starts_that_are_passed_over_are_named(nightly, told):
+    nightly.settings(runs="members = 4\nminimum_members = 2")
+    for day, members in ((14, (0,)), (15, (0, 1, 2)), (16, (2, 3))):
+        for number in members:
+            nightly.write_one(day, number)
+    found = chosen(nightly)
+    assert found.start == "2031-02-13T00:00"
+    assert found.troubles == (
+        "The start 2031-02-16T00:00 was passed over, as members 0 and 1 had not come whole.",
+        "The start 2031-02-15T00:00 was passed over, as member 3 had not come whole.",
+        "The start 2031-02-14T00:00 was passed over, as members 1, 2 and 3 had not come whole; "
+        "this is the newest complete start.",
+    )
+    names = ", ".join(f"2031-02-{day}T00:00" for day in (16, 15, 14))
+    assert f"start {names} passed over for 2031-02-13T00:00" in told.text
 
 
 def test_a_named_start_is_taken_with_what_is_there(nightly):
@@ -104,17 +130,18 @@ def test_a_late_member_is_waited_for(nightly):
     assert 600 < clock.passed < 700
 
 
-def test_the_deadline_ends_the_waiting(nightly, caplog):
+def test_the_deadline_ends_the_waiting(nightly, told):
     for number in range(3):
         nightly.write_one(14, number)
     clock = FakeClock({3600.0: lambda: nightly.write_one(14, 3)})
     found = chosen(nightly, minutes=30, clock=clock)
     assert clock.passed == pytest.approx(1800, abs=1)
     assert len(found.look.files) == 3
+    # The page may be made again without waiting, and so does not tell how long it was waited.
     assert found.troubles == (
-        "After 30 min of waiting, member 3 had not come whole; the night was made with what was "
-        "there.",
+        "Member 3 had not come whole; the night was made with what was there.",
     )
+    assert "start 2031-02-14T00:00: waited for 30 min" in told.text
 
 
 def test_the_date_may_be_set_back_while_it_waits(nightly, monkeypatch):
@@ -145,7 +172,7 @@ def test_a_file_that_grows_is_not_yet_there(nightly):
 
     found = chosen(nightly, minutes=2, clock=growing(*range(1, 200)))
     assert [file.parts.member for file in found.look.files] == [0, 1, 2]
-    assert "member 3 had not come whole" in found.troubles[0]
+    assert "Member 3 had not come whole" in found.troubles[0]
 
 
 def test_a_file_that_cannot_be_read_yet_is_not_yet_there(nightly):

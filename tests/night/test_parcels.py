@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from ensemble_horizon.night.engine import Engine
-from ensemble_horizon.night.parcels import pack, unpack
+from ensemble_horizon.night.engine.parcels import pack, unpack
 
 
 def fields(number):
@@ -72,5 +72,5 @@ def test_an_engine_leaves_nothing_behind_even_where_results_are_not_taken(tmp_pa
 
 def test_results_come_in_the_order_of_the_tasks():
     with Engine(2) as engine:
-        sizes = [part["text"] for part in engine.run_in_order(fields, list(range(9)))]
-    assert sizes == [f"number {number}" for number in range(9)]
+        found = [(place, part["text"]) for place, part in engine.run(fields, list(range(9)))]
+    assert found == [(number, f"number {number}") for number in range(9)]

@@ -3,6 +3,7 @@
 import csv
 import logging
 import shutil
+from decimal import Decimal
 from pathlib import Path
 
 import netCDF4
@@ -93,6 +94,14 @@ def chain(tmp_path):
 def long_chain(tmp_path):
     """As many starts as intervals need."""
     return Chain(tmp_path, starts=12)
+
+
+@pytest.fixture
+def log_text(monkeypatch, caplog):
+    """The log in full, also where a command has begun or silenced it before."""
+    monkeypatch.setattr(logging.getLogger("ensemble_horizon"), "propagate", True)
+    with caplog.at_level(logging.WARNING, "ensemble_horizon"):
+        yield caplog
 
 
 @pytest.fixture
@@ -309,7 +318,7 @@ def test_sums_of_other_places_are_not_mixed(chain):
     assert found.verified == tuple(chain.label(n) for n in range(2, 6))
     assert found.missing == tuple(chain.label(n) for n in range(2))
     (text,) = found.left_out
-    assert "t2: left out, because they were verified by other settings" in text
+    assert "t2: left out, because they were verified with other places, and cannot be again" in text
     assert chain.label(0) in text
     assert chain.written(found) == chain.verified(moved)
     # What only the words or the level of a limit depend on changes nothing.
@@ -322,8 +331,11 @@ def test_another_climatology_is_another_definition(chain):
     chain.night()
     fields = {"deviation": np.full((4, 5), DEVIATION), "mean": np.full((4, 5), MEAN + 1)}
     _write(chain.folder / "climatology.nc", {}, fields, "2031-01-01T00", "K")
+    chain.run_file(0).unlink()
     found = chain.night()
-    assert len(found.verified) == 6
+    assert len(found.verified) == 5
+    (text,) = found.left_out
+    assert "were verified with another climatology, and cannot be again" in text
     assert chain.written(found) == chain.verified()
 
 
@@ -420,31 +432,82 @@ def test_observations_alone(chain):
     found = chain.night(more=OBSERVED, analyses=False)
     assert found.verified == (chain.label(5),)
     assert chain.written(found) == chain.verified(OBSERVED, analyses=False)
-    assert "for Quay, by its observations." in found.sentences()[0]
+    assert "for Quay, by its observations." in told(found)[0]
 
 
 def test_without_truth_nothing_is_verified_and_the_reason_told(chain):
     chain.write()
     found = chain.night(analyses=False)
-    assert (found.results, found.starts, found.sentences()) == ((), (), ())
+    assert (found.results, found.starts, found.skill()) == ((), (), ())
     assert found.notes == (
         "Nothing is verified: the settings name neither analyses nor observations.",
     )
+    assert found.no_skill() == found.notes[0]
     assert write_rolling(chain.folder / "night", found, {}) == []
     assert not (chain.folder / "night").exists()
     assert not chain.filed.exists()
 
 
-def test_without_analyses_of_tonight_the_archive_still_counts(chain):
+def test_without_analyses_of_tonight_the_archive_still_counts(chain, log_text):
     chain.write()
     before = chain.written(chain.night(5))
     (chain.folder / "analyses.nc").unlink()
     found = chain.night()
     assert len(found.archived) == 5
     assert found.waiting == (chain.label(5),)
-    (note,) = found.notes
-    assert note.startswith("No past start is verified: ")
-    assert "analyses.nc" in note
+    (text,) = found.troubles
+    assert text.startswith(
+        "No further past start could be verified; the scores are of the 5 starts in the archive. "
+    )
+    assert "analyses.nc" in text
+    assert text in log_text.text
+    assert (found.notes, found.too_early) == ((), False)
+    assert chain.written(found) == before
+
+
+def test_without_analyses_and_archive_there_is_nothing_and_it_is_told(chain, log_text):
+    chain.write()
+    (chain.folder / "analyses.nc").unlink()
+    found = chain.night()
+    (text,) = found.troubles
+    assert text.startswith("No past start could be verified. ")
+    assert text in log_text.text
+    assert (found.results, found.too_early) == ((), False)
+
+
+def test_before_the_first_start_is_over_it_is_too_early(chain):
+    chain.write()
+    found = chain.night(0)
+    assert (found.results, found.troubles, found.too_early) == ((), (), True)
+    assert found.no_skill()
+
+
+def test_runs_analyses_and_observations_may_move(chain):
+    """Other names of files, the same content: past sums hold, also of runs that are gone."""
+    chain.write()
+    chain.observe()
+    before = chain.written(chain.night(more=OBSERVED))
+    (chain.folder / "truth").mkdir()
+    for name in ("analyses.nc", "mast.csv"):
+        (chain.folder / name).rename(chain.folder / "truth" / name)
+    for start in range(4):
+        chain.run_file(start).unlink()
+    (chain.folder / "runs").mkdir()
+    for start in (4, 5):
+        chain.run_file(start).rename(chain.folder / "runs" / chain.run_file(start).name)
+    chain.settings(OBSERVED)
+    path = chain.folder / "settings.toml"
+    text = path.read_text()
+    for old, new in (
+        ('"run_', '"runs/run_'), ('"analyses.nc"', '"truth/analyses.nc"'),
+        ('"mast.csv"', '"truth/mast.csv"'),
+    ):  # fmt: skip
+        assert old in text
+        text = text.replace(old, new)
+    path.write_text(text)
+    settings = read_settings(path)
+    found = rolling_scores(settings, FAR, chain.filed)
+    assert (len(found.archived), found.verified, found.left_out) == (6, (), ())
     assert chain.written(found) == before
 
 
@@ -505,18 +568,37 @@ def test_runs_whose_names_tell_no_start(chain):
     assert chain.written(found) == chain.verified()
 
 
+def told(found):
+    """What is known of all variables and places, in sentences."""
+    return [text for item in found.skill() for text in item.sentences()]
+
+
+def two_digits(text):
+    """To two significant digits, by the decimal module."""
+    value = Decimal(text)
+    return str(value.quantize(Decimal(1).scaleb(value.adjusted() - 1)))
+
+
 def test_sentences_say_what_the_tables_say(long_chain):
     long_chain.write()
     found = long_chain.night(more=REGION + "[verification]\nskill = 0.5\n")
     long_chain.written(found)
-    spread, skill = found.sentences()
+    (here,) = [item for item in found.skill() if item.place == "North"]
+    spread, skill = here.sentences()
+    assert found.no_skill() == ""
     with (long_chain.folder / "night" / "scores.csv").open(newline="") as file:
         rows = [row for row in csv.DictReader(file) if row["place"] == "North"]
     (row,) = [r for r in rows if r["score"] == "spread_error_ratio" and r["lead"] == "24"]
-    numbers = [f"{float(row[name]):.3g}" for name in ("value", "low", "high")]
+    numbers = [two_digits(row[name]) for name in ("value", "low", "high")]
+    low, high = float(row["low"]), float(row["high"])
+    parting = "the members part too little" if high < 1 else "the members part too much"
+    if low < 1 < high:
+        parting = "the members part about right"
+        if low < 0.8 or high > 1.25:
+            parting = "it cannot be told whether the members part too little or too much"
     assert spread == (
-        f"t2: over the last 12 verified starts the spread was {numbers[0]} ({numbers[1]} to "
-        f"{numbers[2]}) of the error of the mean at 24 h for North."
+        f"t2: over the last 12 verified starts {parting}: the spread was {numbers[0]} "
+        f"({numbers[1]} to {numbers[2]}) of the error of the mean at 24 h for North."
     )
     with (long_chain.folder / "night" / "skill_limits.csv").open(newline="") as file:
         limits = {row["score"]: row for row in csv.DictReader(file) if row["place"] == "North"}
@@ -524,8 +606,8 @@ def test_sentences_say_what_the_tables_say(long_chain):
     assert limit["status"] == "reached"
     ends = [f"{float(limit[name]):.0f}" for name in ("horizon", "low", "high")]
     assert skill == (
-        f"t2: skill over climatology above 0.5 ended at {ends[0]} h ({ends[1]} to {ends[2]}) "
-        "for North."
+        f"t2: skill over climatology above 0.5 ended at {ends[0]} h ({ends[1]} to {ends[2]}), "
+        f"significant until {float(limit['significant_until']):.0f} h, for North."
     )
 
 
@@ -533,6 +615,9 @@ def test_few_starts_are_told_as_such(chain, caplog):
     chain.write()
     with caplog.at_level(logging.WARNING):
         found = chain.night(1)
-    assert found.sentences()[0].startswith("t2: over the last verified start the spread was ")
-    assert "(too few starts for an interval)" in found.sentences()[0]
+    assert told(found)[0].startswith(
+        "t2: over the last verified start it cannot be told whether the members part too little or "
+        "too much: the spread was "
+    )
+    assert "(too few starts for an interval)" in told(found)[0]
     assert "few" not in caplog.text

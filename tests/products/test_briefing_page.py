@@ -8,7 +8,7 @@ import json
 import re
 import subprocess
 import sys
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import datetime
 from html.parser import HTMLParser
 from itertools import pairwise
@@ -19,7 +19,7 @@ import xarray as xr
 from synthetic_products import GRIDS, Result, make_curves, make_maps, regular
 
 from ensemble_horizon.errors import ArgumentError, InputError
-from ensemble_horizon.horizon.usual import Standing, Usual
+from ensemble_horizon.horizon.usual import NightHorizon, Standing, Usual, usual_of
 from ensemble_horizon.products import write_versions
 from ensemble_horizon.products.map_legend import STATUS_WORDS
 from ensemble_horizon.products.maps import map_content
@@ -31,8 +31,9 @@ from ensemble_horizon.products.page.map_figure import map_part
 from ensemble_horizon.products.page.policy import embedded_json
 from ensemble_horizon.products.page.readings import map_reading, raster_of
 from ensemble_horizon.products.page.rendering import packaged, page_text
-from ensemble_horizon.products.page.standing import percentile_words, usual_words
+from ensemble_horizon.products.page.standing import rank_words, standing_words, usual_words
 from ensemble_horizon.products.places import Ground, PlaceMark
+from ensemble_horizon.products.score_sentences import PastSkill
 from ensemble_horizon.products.view import map_view
 from ensemble_horizon.vocabulary import CAUTION, Status
 
@@ -103,6 +104,16 @@ def usual(standing=Standing.usual, **changes):
     return Usual(**{**values, **changes}, standing=standing)
 
 
+def past_skill(place, **changes):
+    values = {
+        "variable": "wind/<speed>", "long_name": "wind <i>speed</i>", "against": "analysis",
+        "starts": 13, "lead": "120 h", "ratio": "0.85 (0.77 to 0.94)", "parting": "too little",
+        "score": "skill over climatology", "end": "210 h (155 to beyond the run)",
+        "until": "132 h",
+    }  # fmt: skip
+    return PastSkill(**{**values, **changes}, place=place)
+
+
 def plain_results():
     return [Result(make_curves(places=("Bank",)))]
 
@@ -125,7 +136,7 @@ def make_briefing(results=None, **changes):
             (PlaceMark.box(AWKWARD, 3, 5, 51, 53), PlaceMark.site(LONG, 7.5, 52.0)), True
         ),
         "troubles": ("Member 7 <is> missing.",),
-        "skill": ("Spread was 0.9 & a bit of the error.",),
+        "skill": (past_skill("Bank <i>"),),
         "notes": ("A note with <tags>.",),
         "version": "0.1.0",
     }
@@ -261,7 +272,7 @@ def test_every_figure_has_words(page):
 
 def test_tables_have_captions_and_scopes(page):
     tables = page.all("table")
-    assert len(tables) == len(page.all("caption")) == 2
+    assert len(tables) == len(page.all("caption")) == 3
     assert all("scope" in heading.attributes for heading in page.all("th"))
     assert {heading.attributes["scope"] for heading in page.all("th")} == {
         "col",
@@ -271,7 +282,7 @@ def test_tables_have_captions_and_scopes(page):
     for box in page.all("div", class_="table-box"):
         assert box.attributes["tabindex"] == "0"
         assert box.attributes["aria-labelledby"]
-    assert len(page.all("tr")) == 2 + 5 * 3 + 5 * 2
+    assert len(page.all("tr")) == 2 + 5 * 3 + 5 * 2 + 2
 
 
 def test_head_facts_troubles_and_caution(page):
@@ -353,10 +364,10 @@ def test_what_the_headline_says():
 
     curves["horizon"][:], curves["low"][:], curves["high"][:] = 89.0, 85.0, 95.0
     chart = head(curves, {("wind_speed", "Bank", "gale"): usual(Standing.shorter, percentile=4.0)})
-    assert chart.headline == "First to go: gale, 10 m wind speed, Bank."
+    assert chart.headline == "First to go: gale (2.5 m s-1), 10 m wind speed, Bank."
     assert chart.detail == (
         "The forecast holds for 89 h (85 to 95), until Wed 8 Jan 17:00 UTC. That is shorter than "
-        "usual (percentile 4 of 30 nights)."
+        "usual (shorter than about 29 of 30 past nights)."
     )
     beyond = curves.assign(status=curves["status"] * 0 + int(Status.beyond_run))
     assert "No limit is reached within the run (240 h)" in head(beyond).headline
@@ -375,9 +386,47 @@ def test_words_of_what_is_usual():
     assert usual_words(Usual.unknown(3), "hours") == "–"
     assert usual_words(None, "hours") == "–"
     season = usual(season=True, percentile=NAN, percentile_bounds=(80.0, 100.0))
-    assert percentile_words(season) == "percentile 80 to 100 of 30 nights at this time of year"
-    assert percentile_words(season, short=True) == "percentile 80 to 100"
-    assert percentile_words(Usual.unknown(3)) == ""
+    assert rank_words(season) == "longer than at least 24 of 30 past nights of this time of year"
+    assert rank_words(season, short=True) == "longer than at least 24 of 30 past nights"
+    assert rank_words(Usual.unknown(3)) == ""
+    assert rank_words(usual(percentile=NAN, percentile_bounds=(20.0, 80.0))) == ""
+
+
+@pytest.mark.parametrize(
+    ("past", "tonight", "words"),
+    [
+        # Counted by hand among 24, 36, ... 156 h.
+        (range(24, 168, 12), 20.0, "shorter than all 12 past nights"),
+        (range(24, 168, 12), 30.0, "shorter than 11 of 12 past nights"),
+        (range(24, 168, 12), 36.0, "shorter than 10 of 12 past nights"),  # a tie counts for none
+        (range(24, 168, 12), 150.0, "longer than 11 of 12 past nights"),
+        (range(24, 168, 12), 200.0, "longer than all 12 past nights"),
+    ],
+)
+def test_tonight_is_counted_among_the_past_nights(past, tonight, words):
+    horizon = np.array(past, dtype=float)
+    flags = np.full(horizon.size, int(Status.reached))
+    night = NightHorizon(tonight, int(Status.reached), 240.0)
+    found = usual_of(horizon, flags, np.full(horizon.size, 240.0), first_lead=0.0, tonight=night)
+    assert rank_words(found) == words
+
+
+def test_words_at_the_edge_of_the_usual_and_where_it_is_not_known():
+    limit = make_briefing([Result(make_curves(places=("Bank",)))]).limits()[0]
+
+    def told(horizon, low, high, known):
+        return standing_words(known, replace(limit, horizon=horizon, low=low, high=high))
+
+    short = usual(Standing.shorter, low=131.2)
+    assert told(131.18, 105.0, 182.0, short) == "about the edge of the usual"
+    assert told(129.0, 105.0, 182.0, short) == "shorter than usual, within its interval"
+    assert told(129.0, 105.0, 130.0, short) == "shorter than usual"
+    assert told(129.0, NAN, NAN, short) == "shorter than usual"
+    far = usual(Standing.longer, high=120.0)
+    assert told(129.0, 119.0, INF, far) == "longer than usual, within its interval"
+    assert told(129.0, 100.0, 140.0, usual()) == "as usual"
+    assert told(129.0, 1.0, 2.0, Usual.unknown(5)) == "usual not known: 5 of the 10 nights needed"
+    assert standing_words(None, limit) == "usual not known"
 
 
 def test_no_time_of_day_in_calendars_that_the_wall_does_not_know():
@@ -531,6 +580,148 @@ def test_a_curve_with_gaps_is_drawn_in_pieces():
     nothing = curve_plot(curves.isel(start=0, place=0), limits, with_chance=False)
     assert nothing.spread.empty == "no curve: too little known"
     assert "no curve: too little known" in page_text(make_briefing([Result(curves)]))
+
+
+# Fair CRPS of b less that of a by lead: as far as the last, b errs more.
+WORSE = [(0.01, 0.02), (0.02, 0.03), (0.106, 0.08), (0.36, 0.2), (0.3, 0.7)]
+
+
+def test_a_version_that_errs_more_is_not_praised_for_longer_limits(tmp_path, provenance):
+    from test_versions_products import ROWS, make_differences, make_places
+    from test_versions_products import Result as Compared
+
+    longer = [ROWS[0]]
+    shares = (xr.Dataset(), xr.Dataset())
+    notes = {"Cautions": ["members that part too slowly gain hours"]}
+    differences = make_differences(places=1, rows=WORSE)
+    for folder, scores in (("scored", [differences]), ("bare", [])):
+        compared = [Compared(make_places(longer), None, shares)]
+        write_versions(
+            tmp_path / folder, compared, provenance, notes=notes, scores=scores, figures=False
+        )
+    table = read_versions(tmp_path / "scored")
+    # Of five leads two have an interval above nought; the middle is the third, the last the fifth.
+    assert table.balance() == (
+        "new holds longer in 1 of 1 row, old $x$ in 0, but to hold longer is not to err less: by "
+        "fair CRPS old $x$ errs less in 2 of 5 rows of variable, place and lead, new in none."
+    )
+    page = Page(page_text(make_briefing(plain_results(), versions=table)))
+    section = page.one("section", id="versions").text
+    assert "members that part too slowly gain hours" in section
+    assert "old $x$ errs less in 2 of 5 rows" in section
+    assert "Of which version tonight’s runs are is not known." in section
+    assert "tolerance 5 m s-1" in section
+    rows = page.one("table", id="errors").text
+    assert "+0.11 (+0.026 to +0.19) m s-1" in rows and "old $x$ errs less" in rows
+    assert "+0.3 (−0.4 to +1) m s-1" in rows and "not told apart" in rows
+    assert "48 h" in rows and "96 h" in rows and "72 h" not in rows
+    ours = make_briefing(plain_results(), versions=replace(table, tonight="old $x$"))
+    assert "Tonight’s runs are taken to be of old $x$" in page_text(ours)
+    bare = read_versions(tmp_path / "bare")
+    page = Page(page_text(make_briefing(plain_results(), versions=bare)))
+    assert "Which of them errs less is not known" in page.one("section", id="versions").text
+    assert page.all("table", id="errors") == []
+    (tmp_path / "scored" / "score_differences.csv").write_text("variable,place\nwind,bank\n")
+    with pytest.raises(InputError, match="no column against"):
+        read_versions(tmp_path / "scored")
+
+
+def test_past_skill_of_the_place_in_the_headline_comes_first():
+    name = "wind_speed"
+    skill = (
+        past_skill("Harbour", variable=name, parting="cannot be told", ratio="0.92 (0.54 to 1.3)",
+                   end="beyond the run (> 240 h; at least 155 h)"),
+        past_skill("Bank", variable="pressure", long_name="pressure"),
+        past_skill("Bank", variable=name, long_name="wind"),
+    )  # fmt: skip
+    page = Page(page_text(make_briefing(plain_results(), skill=skill)))
+    section = page.one("section", id="skill").text
+    first, second = section.index("wind: over"), section.index("pressure: over")
+    assert first < second < section.index("Past skill at the other places")
+    assert (
+        "wind: over the last 13 verified starts the members part too little: the spread was 0.85 "
+        "(0.77 to 0.94) of the error of the mean at 120 h for Bank."
+    ) in section
+    assert "ended at 210 h (155 to beyond the run), significant until 132 h, for Bank" in section
+    others = page.one("table", id="skill-elsewhere").text
+    for words in ("Harbour", "cannot be told", "0.92 (0.54 to 1.3)", "at least 155 h", "132 h"):
+        assert words in others
+    assert "Bank" not in others
+    away = page_text(make_briefing(plain_results(), skill=skill[:1]))
+    assert "Nothing is verified at Bank; other places follow." in away
+    none = make_briefing(plain_results(), skill=(), no_skill="No past start: no analyses named.")
+    assert "No past start: no analyses named." in page_text(none)
+
+
+@pytest.mark.parametrize(
+    ("kind", "name", "rule", "threshold", "units", "words"),
+    [
+        ("climatology_fraction", "climatology fraction 0.5", "climatology fraction 0.5", 4.99,
+         "m s-1", "climatology fraction 0.5 (4.99 m s-1)"),
+        ("climatology_fraction", "climatology fraction 0.5", "climatology fraction 0.5", 0.5,
+         "m s-1", "climatology fraction 0.5 (0.5 m s-1)"),
+        ("tolerance", "crane work", "tolerance 3", 3.0, "m s-1", "crane work (3 m s-1)"),
+        ("tolerance", "tolerance 3", "tolerance 3", 3.0, "m s-1", "tolerance 3 m s-1"),
+        ("chance", "chance 0.25 beyond 4", "chance 0.25 beyond 4", 0.25, "1",
+         "a quarter of members more than 4 m s-1 from the median"),
+        ("chance", "fog", "chance 0.5 beyond 4", 0.5, "1",
+         "fog (half of members more than 4 m s-1 from the median)"),
+        ("chance", "chance 0.1 beyond 4", "chance 0.1 beyond 4", 0.1, "1",
+         "10 % of members more than 4 m s-1 from the median"),
+    ],
+)  # fmt: skip
+def test_a_criterion_is_told_with_its_size_and_units(kind, name, rule, threshold, units, words):
+    curves = make_curves(places=("Bank",), criteria=("one",))
+    curves = curves.assign_coords(
+        criterion=[name], criterion_kind=("criterion", [kind]),
+        criterion_rule=("criterion", [rule]), threshold_units=("criterion", [units]),
+    )  # fmt: skip
+    curves["threshold"][:] = threshold
+    page = Page(page_text(make_briefing([Result(curves)])))
+    assert page.one("p", id=None, class_="lane-what").text == f"Bank 10 m wind speed: {words}"
+    assert words in page.one("p", class_="headline").text
+    row = " ".join(page.all("th", scope="row")[0].text.split())
+    assert row.replace("(", "").replace(")", "") == words.replace("(", "").replace(")", "")
+    assert any(words in item.text for item in page.all("li"))
+
+
+def test_the_words_of_a_limit_follow_the_hold():
+    curves = make_curves(places=("Bank",))
+    plain = page_text(make_briefing([Result(curves)]))
+    assert "is first reached, with its interval" in plain
+    assert "Where the curve first reaches it, a line falls" in plain
+    assert "for good" not in plain and "exceeded" not in plain
+    held = Result(curves.assign_attrs(hold=12.0))
+    assert "is first reached for at least 12 h," in page_text(make_briefing([held]))
+    other = Result(curves.assign_attrs(variable="x", long_name="x"))
+    assert "as the settings ask of the variable" in page_text(make_briefing([held, other]))
+
+
+def test_all_maps_of_the_page_have_one_scale():
+    names = [{"variable": name, "long_name": name} for name in ("wind", "pressure")]
+    late = make_maps(GRIDS["tiny"](), **names[1])
+    late = late.assign(horizon=late["horizon"] * 0.3)
+    results = (
+        Result(make_curves(places=("Bank",), **names[0]), make_maps(GRIDS["tiny"](), **names[0])),
+        Result(make_curves(places=("Bank",), **names[1]), late),
+    )
+    figures = map_part(results, Ground(())).figures
+    assert len(figures) == 4
+    assert len({figure.picture.scale.bounds for figure in figures}) == 1
+    bounds = figures[0].picture.scale.bounds
+    values = np.concatenate(
+        [one.maps["horizon"].values[one.maps["status"].values == 0] for one in results]
+    )
+    assert bounds[0] <= np.percentile(values, 1) and bounds[-1] >= np.percentile(values, 99)
+
+
+def test_names_of_variables_begin_alike():
+    results = [
+        Result(make_curves(variable=name, long_name=long_name, places=("Bank",)))
+        for name, long_name in (("u", "Eastward wind"), ("v", "northward wind"), ("p", "pH"))
+    ]
+    headings = [item.text for item in Page(page_text(make_briefing(results))).all("h3")]
+    assert headings[:3] == ["Eastward wind", "Northward wind", "pH"]
 
 
 def test_versions_are_read_back_and_shown(tmp_path, provenance):

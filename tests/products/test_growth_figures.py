@@ -41,7 +41,7 @@ def test_every_status_is_in_words():
     words = [text for place in range(5) for text in words_of(drawn(panel_of(curves, place)))]
     for expected in (
         "85 h (74 to 99)",
-        "exceeded at the first lead",
+        "reached at the first lead",
         "no growth, so no limit",
         "too little known",
     ):
@@ -145,7 +145,7 @@ def test_curves_without_criteria_are_refused(tmp_path):
     ("status", "expected"),
     [
         (Status.reached, "54 h (47 to 63)"),
-        (Status.at_start, "exceeded at the first lead (54 h)"),
+        (Status.at_start, "reached at the first lead (54 h)"),
         (Status.no_growth, "no growth, so no limit"),
         (Status.no_data, "too little known"),
     ],

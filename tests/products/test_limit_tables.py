@@ -108,7 +108,7 @@ def test_starts_pooled_and_of_other_calendars(tmp_path):
 def test_the_terminal_shows_the_shortest_first_and_the_caution_last():
     text = printed(limits_table([Result(make_curves())]), width=170)
     order = [
-        "exceeded at the first lead",
+        "reached at the first lead",
         "85 h (74 to 99)",
         "(192 to beyond the run)",
         "beyond the run (> 240 h; law projects",

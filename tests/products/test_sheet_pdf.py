@@ -4,18 +4,24 @@ from __future__ import annotations
 
 import itertools
 import re
+from dataclasses import replace
 from datetime import UTC, datetime
 
 import numpy as np
 import pytest
+import xarray as xr
 from pypdf import PdfReader
 from synthetic_products import GRIDS, Result, make_curves, make_maps
+from test_versions_products import ROWS, make_places
 
 from ensemble_horizon.errors import ProductError
 from ensemble_horizon.horizon.usual import Standing, Usual
+from ensemble_horizon.products import gains
 from ensemble_horizon.products.fitted_text import broken, drawable, shortened, text_width
-from ensemble_horizon.products.page import Briefing
+from ensemble_horizon.products.page import Briefing, VersionsTable
+from ensemble_horizon.products.page.error_rows import ErrorRow
 from ensemble_horizon.products.places import Ground, PlaceMark
+from ensemble_horizon.products.score_sentences import PastSkill
 from ensemble_horizon.products.sheet_pdf import draw_sheet, write_sheet
 from ensemble_horizon.vocabulary import CAUTION
 
@@ -78,7 +84,7 @@ def awkward_names():
         members=f"19 of 20 {'members ' * 30}",
         troubles=("W" * 300, "x " * 300),
         notes=("N" * 500,),
-        skill=("S " * 400,),
+        skill=(PastSkill("a", "S " * 100, "S " * 300, "analysis", 3, "1 h", "1", "too little"),),
         ground=Ground(
             (
                 PlaceMark.box(AWKWARD[1], 3, 7, 51, 53),
@@ -161,18 +167,19 @@ def test_what_stands_on_the_sheet(tmp_path):
     }
     result = Result(make_curves(), make_maps(GRIDS["tiny"]()))
     told = briefing(
-        result, usual=usual, troubles=("member 7 is missing",), skill=("Skilled to 168 h.",)
-    )
+        result, usual=usual, troubles=("member 7 is missing",),
+        no_skill="No past start is verified: none named.",
+    )  # fmt: skip
     words = words_of(write_sheet(tmp_path / "briefing.pdf", told))
     for expected in (
         "The desk at Quillmere",
         "Start 2031-01-05 00:00 UTC",
         "19 of 20 members",
         "member 7 is missing",
-        "Skilled to 168 h.",
+        "No past start is verified: none named.",
         "160 (110 to > 240)",
-        "4, shorter",
-        "not known",
+        "shorter than about 29 of 30",
+        "3 of the 10 nights",
         "made 2031-01-05 06:40 UTC",
         CAUTION,
     ):
@@ -180,7 +187,7 @@ def test_what_stands_on_the_sheet(tmp_path):
     # The limits of the synthetic curves, from the inversion of the logistic law at its threshold.
     first = make_curves().isel(place=0, start=0)
     assert f"{float(first.horizon[0]):.0f} h" in words
-    assert "exceeded at the first lead" in words
+    assert "reached at the first lead" in words
     assert "more on the page" not in words
 
 
@@ -191,6 +198,43 @@ def test_what_does_not_fit_is_counted(tmp_path):
     counts = [int(found) for found in re.findall(r"and (\d+) more on the page", words)]
     assert 12 * 8 * 3 - rows in counts and rows >= 5
     assert 9 - 5 in counts  # troubles
+
+
+def test_names_break_where_there_is_room_and_a_threshold_is_never_cut(tmp_path):
+    long = "a place with a name that is much too long for one line of a narrow column"
+    criteria = ("crane work at the far end of the quay, all winds, day and night",)
+    for count in (2, 60):
+        places = tuple(f"{long}, {number}" for number in range(count))
+        told = briefing(Result(make_curves(places=places, criteria=criteria)))
+        words = words_of(write_sheet(tmp_path / "briefing.pdf", told))
+        shown = count if count == 2 else words.count("2.5 m s-1") - 1
+        assert words.count("(2.5 m s-1)") >= shown > 1
+        # In several lines all of it stands there, in one it is cut.
+        assert (words.count("narrow column") >= 2) == (count == 2)
+
+
+def test_a_logarithmic_axis_is_told(tmp_path):
+    curves = make_curves(places=("Bank",), criteria=("gale",))
+    path = tmp_path / "briefing.pdf"
+    spread = curves["spread"].copy()
+    for factor, told in ((1.0, False), (1000.0, True)):
+        grown = np.linspace(1.0, factor, spread.sizes["lead"])
+        curves["spread"] = spread * xr.DataArray(grown, dims="lead")
+        words = words_of(write_sheet(path, briefing(Result(curves))))
+        assert ("equal steps up for equal ratios" in words) == told
+
+
+def test_versions_are_weighed_on_the_sheet(tmp_path):
+    errors = [
+        ErrorRow("w", "Bank", "analysis", "crps", lead, "hours", 30, 1.0, 1.1, 0.1, 0.04, 0.16,
+                 True, "m s-1")
+        for lead in (0.0, 120.0)
+    ]  # fmt: skip
+    rows = tuple(gains([make_places([ROWS[0]])]))
+    versions = VersionsTable("old", "new", "30 starts", rows, errors=tuple(errors))
+    told = replace(one_limit(), versions=versions)
+    words = words_of(write_sheet(tmp_path / "briefing.pdf", told))
+    assert "to hold longer is not to err less: by fair CRPS old errs less in 2 of 2 rows" in words
 
 
 def test_the_same_briefing_makes_the_same_bytes(tmp_path):

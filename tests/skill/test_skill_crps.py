@@ -141,3 +141,15 @@ def test_the_front_keeps_labels_stays_lazy_and_agrees_with_the_kernel():
     lazy = eh.crps(ensemble.chunk({"start": 1, "member": 3}), analysis.chunk({"start": 1}))
     assert isinstance(lazy.data, dask.array.Array)
     xr.testing.assert_allclose(lazy.compute(), eager)
+
+
+@pytest.mark.parametrize("kind", ["f4", "f8"])
+def test_the_gaussian_crps_keeps_the_precision_it_is_given(kind):
+    rng = np.random.default_rng(8)
+    deviation = rng.uniform(0.2, 4, 200)
+    departure = deviation * rng.normal(0, 2, 200)
+    found = gaussian_crps(departure.astype(kind), deviation.astype(kind))
+    assert found.dtype == kind
+    z = departure / deviation
+    wanted = z * (2 * stats.norm.cdf(z) - 1) + 2 * stats.norm.pdf(z) - 1 / np.sqrt(np.pi)
+    np.testing.assert_allclose(found, deviation * wanted, rtol=2e-6 if kind == "f4" else 1e-12)

@@ -29,6 +29,8 @@ from ensemble_horizon.night.chain.work import Work
 from ensemble_horizon.products.night_file import read_night_file
 from ensemble_horizon.products.nights import Night, night_of, start_of_name
 from ensemble_horizon.products.page import VersionsTable, read_versions
+from ensemble_horizon.products.page.versions_table import SCORES
+from ensemble_horizon.products.score_sentences import PastSkill
 from ensemble_horizon.products.stored import read_results
 
 PAGES = (PAGE, SHEET)
@@ -49,14 +51,16 @@ class Brief(Stage):
         if work.table.versions is None:
             return []
         folder = work.settings.path(work.table.versions)
-        return [str(folder / name) for name in ("versions.csv", "versions.nc")]
+        scores = [folder / SCORES] if (folder / SCORES).exists() else []
+        return [str(path) for path in (folder / "versions.csv", folder / "versions.nc", *scores)]
 
     def rests_on(self, work: Work) -> Any:
-        """The nights before."""
+        """The nights before, and how tonight was chosen."""
         folder = work.archive / NIGHTS
         paths = sorted(folder.iterdir()) if folder.is_dir() else []
         nights = [path for path in paths if start_of_name(path.name) is not None]
-        return lasting(marks_of(path for path in nights if path.stem < work.tonight.stamp))
+        before = lasting(marks_of(path for path in nights if path.stem < work.tonight.stamp))
+        return [before, list(work.tonight.troubles)]
 
     def run(self, work: Work, folder: Path) -> dict[str, Any]:
         """Gather what is told of tonight, and write page and sheet."""
@@ -71,8 +75,14 @@ class Brief(Stage):
             results,
             made=work.made(),
             usual=usual.usual,
-            troubles=[*survey["troubles"], *estimate["troubles"]],
-            skill=verify.get("skill", []),
+            troubles=[
+                *work.tonight.troubles,
+                *survey["troubles"],
+                *estimate["troubles"],
+                *verify.get("troubles", []),
+            ],
+            skill=[PastSkill(**item) for item in verify.get("past_skill", [])],
+            no_skill=verify.get("no_skill", "") or _not_verified(work),
             notes=[*_calibrated(work), *verify.get("notes", []), *notes],
             versions=versions,
         )
@@ -158,6 +168,12 @@ def _versions(work: Work) -> tuple[VersionsTable | None, list[str]]:
         return None, [
             f"The comparison of versions cannot be shown: {error.culprit}, found {error.found}."
         ]
+
+
+def _not_verified(work: Work) -> str:
+    """Why the past was not looked at, where that stage had nothing to do."""
+    reason = Verify().skipped(work)
+    return f"No past start is verified: {reason}." if reason else ""
 
 
 def _calibrated(work: Work) -> list[str]:

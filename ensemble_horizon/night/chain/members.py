@@ -58,6 +58,20 @@ def stamp_of(start: str) -> str:
     return f"{date.replace('-', '')}T{digits[:2] if digits[2:] in ('', '00') else digits}"
 
 
+def asked_for(start: str | None) -> str | None:
+    """A start that was asked for, as labels are written; None where it is no date.
+
+    Examples
+    --------
+    >>> asked_for("2031-02-14 06Z"), asked_for("2031-02-14"), asked_for("tonight")
+    ('2031-02-14T06:00', '2031-02-14', None)
+    """
+    if start is None or not _START.fullmatch(start):
+        return None
+    text = start.replace(" ", "T").removesuffix("Z").removesuffix("T")
+    return f"{text}:00" if len(text) == len("2031-02-14T06") else text
+
+
 def choose_start(
     settings: Settings,
     wanted: str | None = None,
@@ -114,7 +128,7 @@ def _now(starts: Starts) -> Tonight:
             return _passing_over(looks, look)
         log.warning("start %s: %s not there, or not whole", look.start, look.lacking())
         looks.append(look)
-    return _with_what_is_there(looks[0], "")
+    return _with_what_is_there(looks[0])
 
 
 def _wait(starts: Starts, minutes: float, clock: Clock, waited: Callable[[str], bool]) -> Tonight:
@@ -129,7 +143,9 @@ def _wait(starts: Starts, minutes: float, clock: Clock, waited: Callable[[str], 
                 return Tonight(look)
         left = deadline - clock.now()
         if look is not None and (left <= 0 or waited(stamp_of(look.start))):
-            return _with_what_is_there(look, f"After {minutes:g} min of waiting, ")
+            if left <= 0 and not look.complete:
+                log.warning("start %s: waited for %g min", look.start, minutes)
+            return _with_what_is_there(look)
         if left <= 0:
             raise _no_files(starts)
         _tell(starts, before, look)
@@ -161,16 +177,17 @@ def _passing_over(passed: list[Look], look: Look) -> Tonight:
         return Tonight(look)
     log.warning(
         "start %s passed over for %s; to go on with what is there, give --start or --wait",
-        passed[0].start, look.start,
+        ", ".join(other.start for other in passed), look.start,
     )  # fmt: skip
-    text = (
-        f"The start {passed[0].start} was passed over, as {passed[0].lacking()} had not come "
-        "whole; this is the newest complete start."
-    )
-    return Tonight(look, (text,))
+    texts = [
+        f"The start {other.start} was passed over, as {other.lacking()} had not come whole."
+        for other in passed
+    ]
+    texts[-1] = f"{texts[-1].removesuffix('.')}; this is the newest complete start."
+    return Tonight(look, tuple(texts))
 
 
-def _with_what_is_there(look: Look, after: str) -> Tonight:
+def _with_what_is_there(look: Look) -> Tonight:
     if look.report is None:
         raise InputError(
             f"start {look.start}",
@@ -180,7 +197,7 @@ def _with_what_is_there(look: Look, after: str) -> Tonight:
         )
     if look.complete:
         return Tonight(look)
-    text = f"{after}{look.lacking()} had not come whole; the night was made with what was there."
+    text = f"{look.lacking()} had not come whole; the night was made with what was there."
     text = text[0].upper() + text[1:]
     log.warning("start %s: %s", look.start, text)
     return Tonight(look, (text,))

@@ -16,6 +16,7 @@ from ensemble_horizon.night.chain import publishing
 from ensemble_horizon.night.chain.attempt import Attempt
 from ensemble_horizon.night.chain.closing import PAGES, Brief, archived, with_usual
 from ensemble_horizon.night.chain.fingerprint import (
+    Mark,
     Marks,
     changed_files,
     fingerprint,
@@ -24,6 +25,7 @@ from ensemble_horizon.night.chain.fingerprint import (
 )
 from ensemble_horizon.night.chain.lock import IfBusy, locked
 from ensemble_horizon.night.chain.members import Clock, choose_start
+from ensemble_horizon.night.chain.owner import claim, require_own
 from ensemble_horizon.night.chain.report import NightReport, utc_text
 from ensemble_horizon.night.chain.stages import EstimateStage, Stage, Survey, Verify
 from ensemble_horizon.night.chain.state import (
@@ -35,8 +37,14 @@ from ensemble_horizon.night.chain.state import (
     read_state,
     write_sealed,
 )
-from ensemble_horizon.night.chain.work import Work, night_table, settings_of_night
+from ensemble_horizon.night.chain.work import (
+    Work,
+    night_table,
+    reading_errors,
+    settings_of_night,
+)
 from ensemble_horizon.night.estimate import Progress, silent
+from ensemble_horizon.night.products_folder import refuse_estimate
 from ensemble_horizon.products.writing import disk_errors, folder_written_whole
 from ensemble_horizon.settings import Settings
 
@@ -59,11 +67,14 @@ class Options:
         How long to wait for late members; by default what the settings say.
     if_busy : "wait" or "leave"
         What to do where another run is at work in the same folder.
+    adopt_archive : bool
+        Whether to go on with an archive whose record names other runs.
     """
 
     start: str | None = None
     wait_minutes: float | None = None
     if_busy: IfBusy = "leave"
+    adopt_archive: bool = False
 
 
 class _InputChangedError(Exception):
@@ -87,18 +98,24 @@ def run_night(
     Raises
     ------
     SettingsError
-        if there is no table ``[night]``, or the start is none.
+        if there is no table ``[night]``, the start is none, or the archive is that of other runs.
     InputError
         if the runs cannot be used, or keep changing.
     ProductError
-        if another run is at work, or something cannot be written.
+        if another run is at work, or something cannot be written, or the folder of products is
+        that of an estimate.
     """
     table = night_table(settings)
     report.plan([*(stage.name for stage in STAGES), ARCHIVE])
     products, archive = settings.path(settings.products.folder), settings.path(table.archive)
+    publishing.refuse_file("products.folder", products)
+    publishing.refuse_file("night.archive", archive)
+    refuse_estimate(products)
     with contextlib.ExitStack() as locks:
         for folder in dict.fromkeys((products, archive)):
             locks.enter_context(locked(folder, options.if_busy, utc_text(report.begun)))
+        if not options.adopt_archive:
+            require_own(settings, archive)
         report.notes += publishing.mend(products)
         publishing.mend_archive(archive)
         minutes = table.wait_minutes if options.wait_minutes is None else options.wait_minutes
@@ -106,6 +123,7 @@ def run_night(
             settings, options.start, minutes, clock,
             waited=lambda stamp: Attempt(products, stamp).waited,
         )  # fmt: skip
+        report.notes += claim(settings, archive)  # not before: a template may be misspelt
         attempt = Attempt(products, tonight.stamp, tonight.start, minutes > 0)
         own = settings_of_night(settings, tonight.start)
         work = Work(own, tonight, lambda: attempt.made, progress)
@@ -122,6 +140,7 @@ class _Night:
         self.folder = products / self.stamp
         self.desk = publishing.work_folder(products, self.stamp)
         self.state = read_state(self.folder)
+        self._seen: dict[str, Mark | None] = {}
         report.start, report.folder = work.tonight.start, self.folder
         report.published = self.state is not None
 
@@ -131,7 +150,7 @@ class _Night:
         log.info("night %s in %s", self.work.tonight.start, self.folder)
         try:
             self._all_stages()
-        except EnsembleHorizonError:
+        except BaseException:
             publishing.remove_idle_work(self.products, self.stamp)
             raise
         finally:
@@ -144,6 +163,7 @@ class _Night:
         """The stages, from the first one again where files changed under their hands."""
         for attempt in range(_ATTEMPTS):
             self.work.records.clear()
+            self._seen.clear()
             try:
                 for stage in STAGES:
                     self._stage(stage)
@@ -166,12 +186,19 @@ class _Night:
         begun = monotonic()
         try:
             marks = marks_of(stage.inputs(self.work))
+            self._require_seen(marks)
             if not self._kept(stage, self._fingerprint(stage, marks)):
                 self._do(stage, marks, begun)
         except EnsembleHorizonError as known:
             error = self._named(known)
             self.report.failed(stage.name, monotonic() - begun, str(error))
             raise error from known
+        except _InputChangedError:
+            raise
+        except BaseException as other:
+            reason = "stopped" if isinstance(other, KeyboardInterrupt) else repr(other)
+            self.report.failed(stage.name, monotonic() - begun, reason)
+            raise
 
     def _kept(self, stage: Stage, wanted: str) -> bool:
         """Whether the stage stands as it would be made now, published or on the desk."""
@@ -180,7 +207,9 @@ class _Night:
         for record, place in held:
             if record is not None and record.fingerprint == wanted and record.holds_in(place):
                 self._put(stage, record, place)
-                self.report.kept(stage.name, record.seconds, list(record.files))
+                if not self._idle(stage, record):
+                    reason = record.found.get("reason")
+                    self.report.kept(stage.name, record.seconds, list(record.files), reason)
                 return True
         return False
 
@@ -193,7 +222,8 @@ class _Night:
                 shutil.rmtree(place)
         try:
             with folder_written_whole(place) as folder:
-                found = stage.run(self.work, folder)
+                with reading_errors(self.products):
+                    found = stage.run(self.work, folder)
                 self._require_unchanged(marks)
                 seconds = round(monotonic() - begun, 3)
                 record = StageRecord(
@@ -205,7 +235,16 @@ class _Night:
             self._require_unchanged(marks)
             raise
         self._put(stage, record, place)
-        self.report.done(stage.name, record.seconds, list(record.files))
+        if not self._idle(stage, record):
+            reason = record.found.get("reason")
+            self.report.done(stage.name, record.seconds, list(record.files), reason)
+
+    def _idle(self, stage: Stage, record: StageRecord) -> bool:
+        """Whether a stage looked and found nothing to do, which is told as one that was skipped."""
+        reason = record.found.get("nothing_to_do")
+        if reason is not None:
+            self.report.skipped(stage.name, reason)
+        return reason is not None
 
     def _named(self, error: EnsembleHorizonError) -> EnsembleHorizonError:
         """The error with the folder of the night for that of its work, which nobody knows of."""
@@ -220,6 +259,12 @@ class _Night:
         changed = changed_files(marks, marks_of(marks))
         if changed:
             raise _InputChangedError(changed[0])
+
+    def _require_seen(self, marks: Marks) -> None:
+        """All stages rest on the same files, not an earlier one on those of a minute ago."""
+        for path, mark in marks.items():
+            if self._seen.setdefault(path, mark) != mark:
+                raise _InputChangedError(path)
 
     def _fingerprint(self, stage: Stage, marks: Marks) -> str:
         upstream = [self.work.records.get(name) for name in stage.after]
@@ -280,7 +325,9 @@ class _Night:
                 "used": used[0] if used else len(survey["members"]),
                 "expected": len(survey["expected"]),
                 "missing": survey["missing"],
+                "left_out": found[EstimateStage.name].get("members_left_out", []),
             }
+        report.troubles += self.work.tonight.troubles
         for name in found:
             report.faults += found[name].get("faults", [])
             report.troubles += found[name].get("troubles", [])

@@ -18,7 +18,7 @@ import shutil
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 
-from ensemble_horizon.errors import ProductError
+from ensemble_horizon.errors import ProductError, SettingsError
 from ensemble_horizon.night.chain.state import (
     STAGE_FILE,
     STATE_FILE,
@@ -121,6 +121,26 @@ def publish(products: Path, stamp: str, state: NightState, places: Mapping[str, 
             raise
         flush_to_disk(products)
         shutil.rmtree(aside, ignore_errors=True)
+
+
+def refuse_file(key: str, folder: Path) -> None:
+    """Refuse a folder of the settings where a file stands in its place, or in that of a parent.
+
+    Raises
+    ------
+    SettingsError
+        naming the key.
+    """
+    for place in (folder, *folder.absolute().parents):
+        if place.exists():
+            if place.is_dir():
+                return
+            raise SettingsError(
+                key,
+                expected=f"a folder, or a place for one, at {folder}",
+                found=f"the file {place}",
+                remedy="move that file away, or name another folder",
+            )
 
 
 def refuse_strange(target: Path) -> None:

@@ -11,19 +11,24 @@ of the run is the text ``"beyond_run"``. Times are ISO 8601 in UTC, durations in
 ``exit_status``  that of the command: 0 done, 1 a fault of ours, 2 settings, usage, or
                  products that cannot be written, 3 the input cannot be used
 ``begun``        when the run began; ``ended``, ``seconds``
-``start``        the start of the forecast, null where none was chosen
+``start``        the start of the forecast; where none was chosen, the one that was
+                 asked for, or null
 ``folder``       of the night; ``published``: whether its products stand there, those
                  of before where this run failed
 ``stages``       in order, each with ``name``, ``state`` ("done", "kept" from an
                  earlier run, "skipped", "failed", "not reached"), ``seconds`` (of its
                  making, also where it was kept), ``files``, ``reason`` (where skipped
-                 or failed)
-``members``      ``used`` and ``expected`` (numbers), ``missing`` (labels)
+                 or failed, or where it was done and fell short)
+``members``      ``used`` and ``expected`` (numbers), ``missing`` (labels of those that
+                 are not there or not whole), ``left_out`` (of those that are there,
+                 left out for their values from one variable at least)
 ``faults``       what was wrong with the input: ``kind``, ``effect``, ``message`` and,
                  where they apply, ``file``, ``member``, ``start``, ``lead``,
                  ``variable``
 ``limits``       ``variable``, ``place``, ``criterion``, ``status``, ``horizon``,
-                 ``low``, ``high``, ``units``, ``usual`` (null, or ``nights``,
+                 ``low``, ``high``, ``units`` (``horizon`` is "beyond_run" where that
+                 is the status, and null in the others without a number),
+                 ``usual`` (null, or ``nights``,
                  ``median``, ``low``, ``high``, ``percentile``, ``standing``,
                  ``season``)
 ``troubles``     sentences on the input; ``notes``: sentences on the rest
@@ -85,14 +90,18 @@ class NightReport:
         """Name the stages, none of them reached."""
         self.stages = {name: StageLine(name) for name in names}
 
-    def done(self, name: str, seconds: float, files: Sequence[str]) -> None:
-        """A stage was done now."""
-        self.stages[name] = StageLine(name, DONE, seconds, files)
+    def done(
+        self, name: str, seconds: float, files: Sequence[str], reason: str | None = None
+    ) -> None:
+        """A stage was done now; ``reason`` tells why it fell short, if it did."""
+        self.stages[name] = StageLine(name, DONE, seconds, files, reason)
         log.info("stage %s done %.2f s", name, seconds)
 
-    def kept(self, name: str, seconds: float | None, files: Sequence[str]) -> None:
+    def kept(
+        self, name: str, seconds: float | None, files: Sequence[str], reason: str | None = None
+    ) -> None:
         """A stage was done by an earlier run, and still holds."""
-        self.stages[name] = StageLine(name, KEPT, seconds, files)
+        self.stages[name] = StageLine(name, KEPT, seconds, files, reason)
         log.info("stage %s kept", name)
 
     def skipped(self, name: str, reason: str) -> None:
@@ -180,7 +189,7 @@ def _error(error: BaseException) -> dict[str, Any]:
     if isinstance(error, EnsembleHorizonError):
         parts = {key: getattr(error, key) for key in ("culprit", "expected", "found", "remedy")}
         return {"kind": type(error).__name__, **parts}
-    if isinstance(error, KeyboardInterrupt):
+    if isinstance(error, KeyboardInterrupt):  # an interrupt, or a request to end
         return {
             "kind": "Stopped", "culprit": "the run", "expected": "it to finish",
             "found": "that it was stopped", "remedy": "run it again; it goes on where it was",

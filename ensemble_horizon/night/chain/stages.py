@@ -3,8 +3,11 @@
 from __future__ import annotations
 
 import contextlib
+import math
+import re
 from abc import ABC, abstractmethod
 from collections.abc import Iterable, Sequence
+from dataclasses import asdict
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any, ClassVar
@@ -23,11 +26,15 @@ from ensemble_horizon.products.limits import Limit, limits
 from ensemble_horizon.runs.faults import Effect, Fault
 from ensemble_horizon.runs.files import find_files
 from ensemble_horizon.runs.verdict import in_order
+from ensemble_horizon.settings import Settings
+from ensemble_horizon.vocabulary import Status
 
 _HEADER_KEYS = (
     "runs.members", "runs.control", "runs.minimum_members", "runs.incomplete", "runs.lagged",
     "variables.*.source", "variables.*.speed", "variables.*.position", "variables.*.level",
 )  # fmt: skip
+_ERROR_NUMBER = re.compile(r"\[Errno -?\d+\] *")
+_PATH = re.compile(r"(?<![\w.])(?:/[^/\s:'\",]+)+/([^/\s:'\",]+)")
 
 
 class Stage(ABC):
@@ -67,7 +74,7 @@ class Survey(Stage):
     """Headers of tonight's files: who is there, who is not, and what is wrong."""
 
     name = "survey"
-    keys = _HEADER_KEYS
+    keys = (*_HEADER_KEYS, "variables.*.label")
 
     def inputs(self, work: Work) -> list[str]:
         """Tonight's files."""
@@ -90,7 +97,7 @@ class Survey(Stage):
             "expected": everyone,
             "missing": [label for label in everyone if label not in members],
             "faults": [fault.as_dict() for fault in report.faults],
-            "troubles": [*work.tonight.troubles, *sentences(report.faults)],
+            "troubles": sentences(report.faults, work.settings),
         }
 
 
@@ -123,7 +130,8 @@ class EstimateStage(Stage):
         return {
             "used": _used(found),
             "faults": [fault.as_dict() for fault in told],
-            "troubles": sentences(told),
+            "troubles": sentences(told, settings),
+            "members_left_out": _left_out(settings, told),
             "limits": [plain_limit(limit) for limit in limits(found.results)],
         }
 
@@ -172,9 +180,16 @@ class Verify(Stage):
             ground=map_ground(settings),
             draw=drawn_by(settings.engine.workers, progress),
         )  # fmt: skip
+        told: dict[str, Any] = {"troubles": list(found.troubles)}
+        if found.troubles:
+            told["reason"] = found.troubles[0]
+        if found.too_early:
+            told["nothing_to_do"] = "no start has become verifiable yet"
         return {
+            **told,
             "starts": list(found.starts),
-            "skill": list(found.sentences()) if found.results else [],
+            "past_skill": [asdict(item) for item in found.skill()],
+            "no_skill": found.no_skill(),
             "notes": list(found.notes),
             "left_out": list(found.left_out),
         }
@@ -191,30 +206,56 @@ def about_stage(work: Work, stage: Stage, inputs: Sequence[str]) -> dict[str, An
     }
 
 
-def sentences(faults: Iterable[Fault]) -> list[str]:
-    """Faults in sentences for the reader of a briefing; notes left out."""
+def sentences(faults: Iterable[Fault], settings: Settings) -> list[str]:
+    """Faults in sentences for the reader of a briefing; notes left out.
+
+    Files by their names alone, variables by their labels; the report has paths and keys.
+    """
     found = []
     for fault in faults:
         if fault.effect is Effect.note:
             continue
-        where = f"File {fault.file}" if fault.member is None else f"Member {fault.member}"
-        what = f"{where}, {fault.variable}" if fault.variable is not None else where
-        found.append(f"{what}: {fault.message}.")
+        file = "" if fault.file is None else Path(fault.file).name
+        what = f"File {file}" if fault.member is None else f"Member {fault.member}"
+        if fault.variable is not None:
+            table = settings.variables.get(fault.variable)
+            what += f", {(table and table.label) or fault.variable}"
+        message = fault.message if fault.file is None else fault.message.replace(fault.file, file)
+        message = _PATH.sub(r"\1", _ERROR_NUMBER.sub("", message)).rstrip(".")
+        found.append(f"{what}: {message}{_outcome(fault, settings.runs.incomplete)}.")
     return list(dict.fromkeys(found))
+
+
+def _outcome(fault: Fault, incomplete: str) -> str:
+    """What was done about a fault."""
+    if fault.kind == "missing-member":
+        return ""
+    if fault.effect is Effect.incomplete and incomplete == "use" and fault.member is not None:
+        return "; what there is of it is used"
+    return "; left out"
 
 
 def plain_limit(limit: Limit) -> dict[str, Any]:
     """A limit as plain values."""
+    beyond = limit.status is Status.beyond_run and math.isnan(limit.horizon)
     return {
         "variable": limit.variable,
         "place": limit.place,
         "criterion": limit.criterion,
         "status": limit.status.name,
-        "horizon": number(limit.horizon),
+        "horizon": "beyond_run" if beyond else number(limit.horizon),
         "low": number(limit.low),
         "high": number(limit.high),
         "units": limit.horizon_units,
     }
+
+
+def _left_out(settings: Settings, faults: Iterable[Fault]) -> list[int | str]:
+    """Members that were left out for their values, from one variable at least."""
+    policy = settings.runs.incomplete
+    effects = {Effect.wrong, Effect.incomplete} if policy == "drop" else {Effect.wrong}
+    named = {fault.member for fault in faults if fault.effect in effects}
+    return in_order({label for label in named if label is not None})
 
 
 def _used(found: Estimate) -> list[int]:

@@ -2,19 +2,24 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import contextlib
+import errno
+import os
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from datetime import datetime
 from pathlib import Path
 from typing import Any
 
-from ensemble_horizon.errors import SettingsError
+from ensemble_horizon.errors import EnsembleHorizonError, InputError, SettingsError
 from ensemble_horizon.night.chain.fingerprint import part_of
 from ensemble_horizon.night.chain.members import Tonight
 from ensemble_horizon.night.chain.state import StageRecord
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.settings.tables import NightTable
+
+_WRITING = (errno.ENOSPC, errno.EDQUOT, errno.EROFS)  # nothing that is only read meets these
 
 
 @dataclass
@@ -57,6 +62,41 @@ class Work:
     def part(self, *keys: str) -> dict[str, Any]:
         """The part of the settings that some keys name."""
         return part_of(self.settings.model_dump(mode="json"), keys)
+
+
+@contextlib.contextmanager
+def reading_errors(products: Path) -> Iterator[None]:
+    """Tell what the disk refuses to read apart from what it refuses to write below ``products``.
+
+    Raises
+    ------
+    InputError
+        naming the file that could not be read.
+    EnsembleHorizonError
+        where the system refused something that is no file.
+    """
+    try:
+        yield
+    except OSError as error:
+        file = error.filename if isinstance(error.filename, str | os.PathLike) else None
+        inside = file is not None and Path(file).absolute().is_relative_to(products.absolute())
+        if error.errno in _WRITING or inside:
+            raise
+        words = error.strerror or type(error).__name__
+        if file is None:
+            raise EnsembleHorizonError(
+                "the system",
+                expected="what a running program needs",
+                found=f"that it was refused ({words.lower()})",
+                remedy="look at its limits (memory, open files) and run again; it goes on where "
+                "it was",
+            ) from error
+        raise InputError(
+            str(file),
+            expected="a file that can be read",
+            found=words.lower(),
+            remedy="look at the file, its permissions and its disk, and run again",
+        ) from error
 
 
 def night_table(settings: Settings) -> NightTable:

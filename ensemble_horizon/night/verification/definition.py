@@ -16,17 +16,29 @@ from ensemble_horizon.runs import Catalogue
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.skill.quantities import QUANTITIES
 
+# What a fingerprint is made of, and what it is called where it differs.
+_PARTS = {
+    "format": "by another version of the program",
+    "variable": "with another source, level, plausible range or other units of the variable",
+    "members": "with other members or other rules for them",
+    "places": "with other places",
+    "analyses": "with another name in the analyses, or without analyses",
+    "observations": "with other observations",
+    "climatology": "with another climatology",
+}
 _OF_VARIABLE = {"speed", "position", "units", "plausible", "level"}
 # Degrees and kilometres to this many decimals: coordinates in single precision differ by less.
 _DECIMALS = 3
+_LENGTH = 32  # characters of the digest of each part
 
 
 def settings_fingerprint(settings: Settings, name: str) -> str:
-    """SHA-256 of all settings that the sums of a variable depend on.
+    """Digests of all settings that the sums of a variable depend on, as one text.
 
-    The runs and their members, the variable and its units, the places, the analyses, observations
-    and climatology (the content of its files, too), and the format of the sums. Criteria, labels
-    and what a score must stay above make no difference to them.
+    The members and the rules for them, the variable and its units, the places, the names in the
+    analyses and observations, the climatology (the content of its files, too), and the format of
+    the sums. Criteria, labels and what a score must stay above make no difference to them, nor do
+    the places of files: runs, analyses and observations may move.
 
     Raises
     ------
@@ -39,13 +51,28 @@ def settings_fingerprint(settings: Settings, name: str) -> str:
     content = {
         "format": [FORMAT, QUANTITIES],
         "variable": [name, table.sources(name), table.model_dump(include=_OF_VARIABLE)],
-        "runs": settings.runs.model_dump(exclude={"starts"}),
+        "members": settings.runs.model_dump(exclude={"starts", "files"}),
         "places": [[dataclasses.asdict(item) for item in kind] for kind in settings.places()],
-        "analyses": None if analyses is None else [analyses.files, analyses.names.get(name)],
-        "observations": None if observed is None else observed.model_dump(),
+        "analyses": None if analyses is None else [analyses.names.get(name)],
+        "observations": None if observed is None else observed.model_dump(exclude={"file"}),
         "climatology": _climatology(settings, name),
     }
-    return _digest(content)
+    return " ".join(f"{part}:{_digest(content[part])[:_LENGTH]}" for part in _PARTS)
+
+
+def what_differs(one: str, other: str) -> str:
+    """In what two fingerprints of settings differ, in words after "verified".
+
+    Examples
+    --------
+    >>> what_differs("places:0a climatology:1b", "places:0a climatology:2c")
+    'with another climatology'
+    >>> what_differs("places:0a climatology:1b", "something older")
+    'by other settings'
+    """
+    before, now = (dict(part.partition(":")[::2] for part in text.split()) for text in (one, other))
+    found = [words for part, words in _PARTS.items() if before.get(part) != now.get(part)]
+    return " and ".join(found) if set(before) == set(now) and found else "by other settings"
 
 
 def ground_fingerprint(runs: Catalogue, parts: tuple[str, ...]) -> str:

@@ -29,11 +29,13 @@ def mapped_quantities(absent: set[str]) -> tuple[str, ...]:
 
 def kept_quantities(fields: tuple[str, ...]) -> tuple[str, ...]:
     """What the interval of the skill needs of every start: two quantities, or none."""
-    for name in SKILLS:
-        inputs = _inputs(name)
-        if set(inputs) <= set(fields):
-            return inputs
-    return ()
+    name = skill_of(fields)
+    return () if name is None else _inputs(name)
+
+
+def skill_of(fields: tuple[str, ...]) -> str | None:
+    """The first skill that some quantities give."""
+    return next((name for name in SKILLS if set(_inputs(name)) <= set(fields)), None)
 
 
 @dataclass
@@ -95,8 +97,11 @@ class SkillTask:
 
 
 def skill_interval(engine: Engine, leads: int, size: int, confidence: float) -> np.ndarray:
-    """Value, low and high (3, L, P) float32 of the skill whose inputs lie in the scratch file."""
-    found = np.empty((3, leads, size), dtype=np.float32)
+    """Mean score, and value, low and high of its skill, (4, L, P) float32, from the scratch file.
+
+    The skill is that of the starts that have both inputs, the mean that of all with the first.
+    """
+    found = np.empty((4, leads, size), dtype=np.float32)
     tasks = [SkillTask(lead, confidence) for lead in range(leads)]
     for number, part in engine.run(_skill_at_lead, tasks):
         found[:, number] = part
@@ -105,12 +110,15 @@ def skill_interval(engine: Engine, leads: int, size: int, confidence: float) -> 
 
 def _skill_at_lead(task: SkillTask) -> np.ndarray:
     scratch = shared().scratch
-    found = np.empty((3, scratch.size), dtype=np.float32)
+    found = np.empty((4, scratch.size), dtype=np.float32)
     for first in range(0, scratch.size, _POINTS):
         points = slice(first, min(first + _POINTS, scratch.size))
         inputs = np.stack([scratch.read(number, task.lead, points) for number in range(2)])
-        part = statistic_interval(STATISTICS["skill"], inputs.astype(float), task.confidence)
-        found[:, points] = np.stack(part[:3])
+        inputs = inputs.astype(float)
+        known = np.isfinite(inputs[0])
+        with np.errstate(invalid="ignore"):
+            found[0, points] = np.where(known, inputs[0], 0.0).sum(axis=0) / known.sum(axis=0)
+        found[1:, points] = statistic_interval(STATISTICS["skill"], inputs, task.confidence)[:3]
     return found
 
 

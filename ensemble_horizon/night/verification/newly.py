@@ -18,6 +18,7 @@ from ensemble_horizon.night.verification.results import VerifiedResult
 from ensemble_horizon.night.verification.verifying import verify_input
 from ensemble_horizon.products.score_sums import PlaceSums, StartSums, VariableSums
 from ensemble_horizon.runs import Catalogue
+from ensemble_horizon.runs.handles import stamp_of
 from ensemble_horizon.runs.units import converter
 from ensemble_horizon.serial.starts import start_names
 from ensemble_horizon.settings import Settings
@@ -67,7 +68,7 @@ class Verifier:
     Attributes
     ----------
     fingerprints : by variable, of the settings
-    notes : what keeps all starts from being verified, in sentences
+    trouble : what keeps all starts from being verified; empty where nothing does
     """
 
     def __init__(self, settings: Settings, runs: PastRuns) -> None:
@@ -75,20 +76,20 @@ class Verifier:
         self.fingerprints = {
             name: settings_fingerprint(settings, name) for name in settings.variables
         }
-        self.notes: list[str] = []
+        self.trouble = runs.trouble
         self._failed: dict[str, list[np.datetime64]] = {}
         self._grounds: dict[str, tuple[np.datetime64, str]] = {}
         self._length: np.timedelta64 | None = None
         self._opened: dict[np.datetime64, Input] = {}
+        self._stamps: dict[str, tuple[int, ...]] = {}
         self._held: dict[str, Catalogue] | None = None
         self._truth: Truth | None = None
-        if runs.trouble:
-            self.notes.append(f"No past start is verified: {runs.trouble}")
+        if self.trouble:
             return
         try:
             self._truth = Truth(settings)
         except InputError as error:
-            self.notes.append(f"No past start is verified: {error}")
+            self.trouble = str(error)
 
     def learn(self, found: StartSums) -> None:
         """Take the length of the shortest run, and grid and units of the newest, from sums."""
@@ -121,7 +122,7 @@ class Verifier:
         if start + shortest > self._truth.newest:
             return False
         try:
-            self._opened[start] = self._runs.open(start)
+            self._opened[start] = self._open(start)
         except InputError:
             return True
         last = last_valid(self._opened[start].catalogue)
@@ -144,11 +145,16 @@ class Verifier:
         """
         try:
             truth = self._held_for(todo)
-            found = self._opened.pop(start, None) or self._runs.open(start)
+            found = self._opened.pop(start, None) or self._open(start)
         except InputError as error:
             self._fail(error, start)
             return None
         new = {item.name: item for item in self._sums(start, found, self.lacking(held), truth)}
+        try:
+            self._require_unchanged([found.catalogue, *truth.values()])
+        except InputError as error:
+            self._fail(error, start)
+            return None
         if not new:
             return None
         old = {item.name: item for item in (held.variables if held is not None else ())}
@@ -163,6 +169,26 @@ class Verifier:
             for reason, starts in self._failed.items()
         ]
 
+    def _open(self, start: np.datetime64) -> Input:
+        found = self._runs.open(start)
+        self._mark([found.catalogue])
+        return found
+
+    def _mark(self, catalogues: Iterable[Catalogue]) -> None:
+        """Note by what files whose headers were read are known again."""
+        self._stamps |= {path: stamp_of(path) for path in _paths(catalogues)}
+
+    def _require_unchanged(self, catalogues: Iterable[Catalogue]) -> None:
+        """What is filed stays for good, and so must not be of a file and its successor."""
+        for path in _paths(catalogues):
+            if stamp_of(path) != self._stamps[path]:
+                raise InputError(
+                    path,
+                    expected="a file that stays as it is while it is read",
+                    found="that it changed",
+                    remedy="run again when it is written; the start is verified then",
+                )
+
     def _fail(self, error: InputError, start: np.datetime64) -> None:
         log.warning("past start %s: %s", _names([start])[0], error)
         self._failed.setdefault(str(error), []).append(start)
@@ -172,6 +198,7 @@ class Verifier:
             assert self._truth is not None
             ends = [last_valid(found.catalogue) for found in self._opened.values()]
             self._held = self._truth.held(min(todo), max(ends, default=self._truth.newest))
+            self._mark(self._held.values())
         return self._held
 
     def _sums(
@@ -233,6 +260,15 @@ def _variable_sums(
         frame.variable, frame.long_name, frame.units, result.factor, frame.lead, frame.lead_units,
         settings, ground, against, gaps,
     )  # fmt: skip
+
+
+def _paths(catalogues: Iterable[Catalogue]) -> set[str]:
+    """Files that hold something of the starts of catalogues."""
+    found = set()
+    for runs in catalogues:
+        numbers = {int(n) for table in runs.tables for n in np.unique(table.source) if n >= 0}
+        found |= {runs.sources[number].path for number in numbers}
+    return found
 
 
 def _length(item: VariableSums) -> np.timedelta64:

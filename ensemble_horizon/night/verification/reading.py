@@ -3,10 +3,15 @@
 A task reads all members of one start over a block of leads, and the analyses at its valid times,
 and gives back sums. Fields go to a file (`Scratch`) or come back for running means; nothing of the
 size of the ensemble leaves the process that read it.
+
+Starts that follow each other are held against the same analyses at other leads, so that a process
+keeps those that it read last.
 """
 
 from __future__ import annotations
 
+import threading
+from collections.abc import Callable, Hashable
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -24,6 +29,9 @@ from ensemble_horizon.skill.reduction import (
     reduce_scores,
 )
 from ensemble_horizon.spread.reduction import located
+
+# Tasks of one process may run in several threads, on a cluster.
+_LOCK = threading.Lock()
 
 
 @dataclass(frozen=True)
@@ -43,7 +51,7 @@ class VerifiedVariable:
     at_sites : ScoreReduction
         Of the observed sites, which are a grid of their own.
     kept : tuple of str
-        Fields that go to the scratch file, start by start.
+        Fields that go to the scratch file, start by start, and nowhere else.
     """
 
     name: str
@@ -56,6 +64,27 @@ class VerifiedVariable:
     kept: tuple[str, ...] = ()
 
 
+@dataclass
+class Recent:
+    """Arrays used last, the longest unused going first."""
+
+    room: int = 24 * 2**20  # bytes
+    _kept: dict[Hashable, np.ndarray] = field(default_factory=dict)
+
+    def get(self, key: Hashable, make: Callable[[], np.ndarray]) -> np.ndarray:
+        """The array of a key, made where it is not at hand; not to be written to."""
+        found = self._kept.get(key)
+        if found is None:
+            found = make()
+        with _LOCK:
+            if self._kept.pop(key, None) is None:
+                self.room -= found.nbytes
+            self._kept[key] = found
+            while self.room < 0:
+                self.room += self._kept.pop(next(iter(self._kept))).nbytes
+        return found
+
+
 @dataclass(frozen=True)
 class VerifyingContext:
     """What every task needs: sent to each worker once."""
@@ -63,6 +92,7 @@ class VerifyingContext:
     catalogue: Catalogue
     variables: tuple[VerifiedVariable, ...]
     scratch: Scratch | None = None
+    recent: Recent = field(default_factory=Recent)
 
 
 @dataclass
@@ -121,8 +151,8 @@ def _reduce(found: Verified, values: np.ndarray, context: VerifyingContext, bloc
     points = window_points(context.catalogue.grid.shape, block.window)
     moment = _moment(context.catalogue, block)
     if variable.analyses is not None:
-        truth = _analyses(variable.analyses, block, values)
-        still = _persistence(variable.analyses, block, values.dtype)
+        truth = _analyses(variable.analyses, block, values, context.recent)
+        still = _persistence(variable.analyses, block, values.dtype, context.recent)
         found.sums = reduce_scores(values, truth, variable.reduction, points, still, moment)
         _put_aside(found.sums, context.scratch, variable, block, points)
     if variable.observed is not None:
@@ -139,28 +169,36 @@ def magnitude(parts: list[np.ndarray]) -> np.ndarray:
     return parts[0] if len(parts) == 1 else np.hypot(parts[0], parts[1], out=parts[0])
 
 
-def _analyses(analyses: Analyses, block: Block, values: np.ndarray) -> np.ndarray:
+def _analyses(analyses: Analyses, block: Block, values: np.ndarray, recent: Recent) -> np.ndarray:
     truth = np.full(values.shape[1:], np.nan, dtype=values.dtype)
     leads = slice(*block.leads)
     for row, position in enumerate(analyses.position[block.start, leads]):
         if position >= 0:
-            truth[row] = _one_analysis(analyses, int(position), block)
+            truth[row] = _one_analysis(analyses, int(position), block, recent)
     return truth
 
 
-def _persistence(analyses: Analyses, block: Block, dtype: np.dtype) -> np.ndarray | None:
+def _persistence(
+    analyses: Analyses, block: Block, dtype: np.dtype, recent: Recent
+) -> np.ndarray | None:
     position = int(analyses.at_start[block.start])
-    return None if position < 0 else _one_analysis(analyses, position, block).astype(dtype)
+    if position < 0:
+        return None
+    return _one_analysis(analyses, position, block, recent).astype(dtype, copy=False)
 
 
-def _one_analysis(analyses: Analyses, position: int, block: Block) -> np.ndarray:
+def _one_analysis(analyses: Analyses, position: int, block: Block, recent: Recent) -> np.ndarray:
     """One analysis over the window of a block, flattened, in the units of the runs."""
-    window = tuple(slice(*bounds) for bounds in block.window)
-    parts = []
-    for name, (scale, offset) in zip(analyses.parts, analyses.scales, strict=True):
-        part = analyses.catalogue.read(name, position, window=window)[0, 0]
-        parts.append(part if (scale, offset) == (1.0, 0.0) else part * scale + offset)
-    return magnitude(parts).ravel()
+
+    def read() -> np.ndarray:
+        window = tuple(slice(*bounds) for bounds in block.window)
+        parts = []
+        for name, (scale, offset) in zip(analyses.parts, analyses.scales, strict=True):
+            part = analyses.catalogue.read(name, position, window=window)[0, 0]
+            parts.append(part if (scale, offset) == (1.0, 0.0) else part * scale + offset)
+        return magnitude(parts).ravel()
+
+    return recent.get((block.variable, position, block.window), read)
 
 
 def _at_sites(
@@ -202,4 +240,5 @@ def _put_aside(
     if scratch is None:
         return
     for number, name in enumerate(variable.kept):
-        scratch.write(number, block.start, block.leads[0], sums.fields[name], points)
+        rows = sums.fields.pop(name)
+        scratch.write(number, block.start, block.leads[0], rows, points)

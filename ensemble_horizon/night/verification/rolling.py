@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from ensemble_horizon.night.estimate import Progress, silent
+from ensemble_horizon.night.verification.definition import what_differs
 from ensemble_horizon.night.verification.newly import Verifier, verifiable_settings
 from ensemble_horizon.night.verification.past import PastRuns
 from ensemble_horizon.night.verification.pooling import common_leads, pooled
@@ -20,7 +21,7 @@ from ensemble_horizon.products import Drawing, Ground, draw_in_turn
 from ensemble_horizon.products.nights import date_of
 from ensemble_horizon.products.places import BARE
 from ensemble_horizon.products.score_folder import write_scores
-from ensemble_horizon.products.score_sentences import skill_sentences
+from ensemble_horizon.products.score_sentences import PastSkill, past_skill
 from ensemble_horizon.products.score_sums import StartSums, VariableSums
 from ensemble_horizon.serial.starts import start_names
 from ensemble_horizon.settings import Settings
@@ -46,6 +47,8 @@ class RollingScores:
     inputs : files of sums that the scores rest on
     left_out : valid times without truth, and starts that do not count, in words
     notes : what else a reader should know, in sentences: of the archive and of the settings
+    troubles : what kept starts from being verified at all, in sentences
+    too_early : whether there is nothing to verify yet
     """
 
     results: tuple[VerifiedResult, ...] = ()
@@ -57,10 +60,25 @@ class RollingScores:
     inputs: tuple[str, ...] = ()
     left_out: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
+    troubles: tuple[str, ...] = ()
+    too_early: bool = False
 
-    def sentences(self) -> tuple[str, ...]:
-        """One or two facts for each variable, in plain sentences."""
-        return tuple(text for result in self.results for text in skill_sentences(result))
+    def skill(self) -> tuple[PastSkill, ...]:
+        """What is known of each variable and place, in words."""
+        return tuple(item for result in self.results for item in past_skill(result))
+
+    def no_skill(self) -> str:
+        """Why no past start is verified; empty where one is."""
+        if self.results:
+            return ""
+        if self.troubles or self.notes:
+            return " ".join(self.troubles or self.notes)
+        if self.waiting:
+            waiting = f"{len(self.waiting)} past starts wait"
+            if len(self.waiting) == 1:
+                waiting = f"the start {self.waiting[0]} waits"
+            return f"No past start is verified: {waiting} for what their last valid time came to."
+        return "No past start is verified: there is none before tonight."
 
 
 def rolling_scores(
@@ -190,8 +208,24 @@ class _Window:
             _labels(self.waiting),
             tuple(inputs),
             (*self._gaps(used), *self.left_out, *self.verifier.failures()),
-            (*self.notes, *self.verifier.notes, *self.shelf.notes),
+            (*self.notes, *self.shelf.notes),
+            self._troubles(len(starts)),
+            not (self.window or self.verifier.trouble or self.shelf.notes),
         )
+
+    def _troubles(self, scored: int) -> tuple[str, ...]:
+        """What kept all starts from being verified, and what the scores rest on then."""
+        if not self.verifier.trouble:
+            return ()
+        rest = f"{scored} starts" if scored > 1 else "only start"
+        told = (
+            f"No further past start could be verified; the scores are of the {rest} in the archive."
+            if scored
+            else "No past start could be verified."
+        )
+        text = f"{told} {self.verifier.trouble}"
+        log.warning("%s", text)
+        return (text,)
 
     def _choose(self) -> list[np.datetime64]:
         """Fill the window, newest first; return the starts that are to be verified."""
@@ -242,16 +276,16 @@ class _Window:
         used: dict[str, dict[np.datetime64, VariableSums]] = {}
         for name in self.settings.variables:
             sound, other = self._of_equal_settings(name)
-            if other:
-                self._leave_out(name, other, "were verified by other settings, and cannot be again")
+            for why, starts in other.items():
+                self._leave_out(name, starts, f"were verified {why}, and cannot be again")
             if not sound:
                 continue
             newest = sound[max(sound)]
             used[name] = {s: item for s, item in sound.items() if item.ground == newest.ground}
-            other = [start for start in sound if start not in used[name]]
-            if other:
+            strange = [start for start in sound if start not in used[name]]
+            if strange:
                 label = _labels([max(sound)])[0]
-                self._leave_out(name, other, f"have another grid or other units than {label}")
+                self._leave_out(name, strange, f"have another grid or other units than {label}")
         if not used:
             return {}, []
         lead = common_leads(item for rows in used.values() for item in rows.values())
@@ -263,15 +297,17 @@ class _Window:
 
     def _of_equal_settings(
         self, name: str
-    ) -> tuple[dict[np.datetime64, VariableSums], list[np.datetime64]]:
-        """Sums of a variable by start, and the starts whose sums are of other settings."""
-        sound, other = {}, []
+    ) -> tuple[dict[np.datetime64, VariableSums], dict[str, list[np.datetime64]]]:
+        """Sums of a variable by start, and starts whose sums are of other settings by what."""
+        sound: dict[np.datetime64, VariableSums] = {}
+        other: dict[str, list[np.datetime64]] = {}
+        wanted = self.verifier.fingerprints[name]
         for start in self.window:
             item = self.known[start].variable(name) if start in self.known else None
-            if item is not None and item.settings == self.verifier.fingerprints[name]:
+            if item is not None and item.settings == wanted:
                 sound[start] = item
             elif item is not None:
-                other.append(start)
+                other.setdefault(what_differs(item.settings, wanted), []).append(start)
         return sound, other
 
     def _leave_out(self, name: str, starts: Sequence[np.datetime64], why: str) -> None:

@@ -70,16 +70,23 @@ class Scratch:
 
 
 @contextmanager
-def scratch_file(fields: int, leads: int, starts: int, size: int) -> Iterator[Scratch]:
-    """A scratch file in the system's temporary folder, removed at the end whatever happens.
+def scratch_file(
+    fields: int, leads: int, starts: int, size: int, folder: Path | None = None
+) -> Iterator[Scratch]:
+    """A scratch file, removed at the end whatever happens.
+
+    Parameters
+    ----------
+    folder : Path, optional
+        Where it is made; by default in the system's temporary folder.
 
     Raises
     ------
     ProductError
         if there is no room for it; the variable TMPDIR names another folder.
     """
-    with tempfile.TemporaryDirectory(prefix="ensemble-horizon-") as folder:
-        path = Path(folder) / "fields"
+    with tempfile.TemporaryDirectory(prefix=".ensemble-horizon-", dir=folder) as own:
+        path = Path(own) / "fields"
         with disk_errors(path), path.open("wb") as file:
             file.truncate(fields * leads * starts * size * _BYTES)
         yield Scratch(path, leads, starts, size)

@@ -6,12 +6,13 @@ import logging
 from collections.abc import Mapping
 from contextlib import ExitStack
 from dataclasses import dataclass, field, replace
+from pathlib import Path
 
 import numpy as np
 import xarray as xr
 
 from ensemble_horizon.errors import InputError
-from ensemble_horizon.night.engine import Engine, workers_for
+from ensemble_horizon.night.engine import Engine, cluster_of, workers_for
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.night.input import Input, open_input
 from ensemble_horizon.night.mapping import map_plan
@@ -29,10 +30,12 @@ from ensemble_horizon.night.verification.climate import (
 )
 from ensemble_horizon.night.verification.gaps import Gap
 from ensemble_horizon.night.verification.maps import (
+    MAPPED,
     kept_quantities,
     map_falls,
     mapped_quantities,
     skill_interval,
+    skill_of,
 )
 from ensemble_horizon.night.verification.reading import (
     VerifiedVariable,
@@ -44,7 +47,7 @@ from ensemble_horizon.night.verification.results import (
     maps_dataset,
     result_of_places,
 )
-from ensemble_horizon.night.verification.scores import SKILLS, limit_levels
+from ensemble_horizon.night.verification.scores import limit_levels
 from ensemble_horizon.night.verification.scratch import Scratch, scratch_file
 from ensemble_horizon.night.verification.sources import (
     Observed,
@@ -144,22 +147,33 @@ def verify_input(
     kept = max(len(item.kept) for item in sources)
     bytes_read = 4 * size * len(catalogue.members) * catalogue.leads.size
     bytes_read *= catalogue.starts.size * len(sources)
+    opened = [item.analyses.catalogue for item in sources if item.analyses is not None]
     with ExitStack() as stack:
         scratch: Scratch | None = None
         if kept:
             wanted = (kept, catalogue.leads.size, catalogue.starts.size, size)
-            scratch = stack.enter_context(scratch_file(*wanted))
+            scratch = stack.enter_context(scratch_file(*wanted, folder=_shared_folder(settings)))
         context = VerifyingContext(catalogue, sources, scratch)
         workers = workers_for(settings.engine.workers, bytes_read)
-        engine = stack.enter_context(Engine(workers, context))
+        paths = [path for item in (catalogue, *opened) for path in item.paths]
+        folder = None if scratch is None else scratch.path.parent
+        cluster = cluster_of(settings.engine, settings.base, paths, folder)
+        engine = stack.enter_context(Engine(workers, context, cluster))
         results = [
             job.variable(engine, number, variable, sources[number], places)
             for number, variable in enumerate(variables)
         ]
-    opened = [item.analyses.catalogue for item in sources if item.analyses is not None]
-    paths = tuple(dict.fromkeys(path for item in opened for path in item.paths))
+    against = tuple(dict.fromkeys(path for item in opened for path in item.paths))
     faults = [*found.faults, *job.faults]
-    return Verification(results, catalogue, paths, gaps, faults, job.left_out)
+    return Verification(results, catalogue, against, gaps, faults, job.left_out)
+
+
+def _shared_folder(settings: Settings) -> Path | None:
+    """Where workers elsewhere find a scratch file: beside the products; None for those here."""
+    if settings.engine.scheduler is None:
+        return None
+    products = settings.path(settings.products.folder)
+    return next(folder for folder in products.parents if folder.is_dir())
 
 
 def _source(
@@ -274,10 +288,11 @@ class _Job:
             return alone
         scores = maps.scores(variable.factor)
         interval: dict[str, tuple[np.ndarray, np.ndarray]] = {}
-        if source.kept:
-            name = next(name for name in SKILLS if name in scores)
-            # Its value, too, from the starts that have both inputs.
-            scores[name], *ends = skill_interval(engine, lead.size, maps.size, confidence)
+        name = skill_of(source.kept)
+        if name is not None:
+            mean, value, *ends = skill_interval(engine, lead.size, maps.size, confidence)
+            scores |= {"crps": mean * np.float32(variable.factor), name: value}
+            scores = {known: scores[known] for known in MAPPED if known in scores}
             interval[name] = (ends[0], ends[1])
         falls = map_falls(lead, scores, levels, interval)
         data = maps_dataset(frame, self.catalogue.grid, scores, falls, interval)

@@ -3,6 +3,8 @@
 =====================  ==========================================================
 ``briefing``           the record that page and sheet are made from
 ``versions_table``     how two versions compare, from the folder of a comparison
+``error_rows``         which of them errs less
+``naming``             names of variables that can be told apart
 ``standing``           tonight against what is usual, in words
 ``clock``              leads as times of day and as ticks of an axis
 ``lanes``              the shortest limits as lanes over one lead axis

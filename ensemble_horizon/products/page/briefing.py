@@ -11,6 +11,7 @@ from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.products.limits import Limit, VariableResult, limits
 from ensemble_horizon.products.page.versions_table import VersionsTable
 from ensemble_horizon.products.places import BARE, Ground
+from ensemble_horizon.products.score_sentences import PastSkill
 from ensemble_horizon.products.tables import shortest_first
 from ensemble_horizon.vocabulary import START
 
@@ -44,8 +45,12 @@ class Briefing:
         Regions, sites and coasts of the maps.
     versions : VersionsTable, optional
         How two versions compare.
-    skill, notes : tuple of str
-        Plain sentences on past skill, and on what else a reader should know.
+    skill : tuple of PastSkill
+        Past skill by variable and place.
+    no_skill : str
+        Why there is none, one plain sentence.
+    notes : tuple of str
+        Plain sentences on what else a reader should know.
     version : str
         Version of the program.
 
@@ -65,7 +70,8 @@ class Briefing:
     surveyed: bool = True
     ground: Ground = BARE
     versions: VersionsTable | None = None
-    skill: tuple[str, ...] = ()
+    skill: tuple[PastSkill, ...] = ()
+    no_skill: str = ""
     notes: tuple[str, ...] = ()
     version: str = ""
 

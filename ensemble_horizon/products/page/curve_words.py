@@ -106,7 +106,7 @@ def _group(curves: xr.Dataset, found: list[Limit], number: int) -> CurveGroup:
 
 
 def _key(position: int, limit: Limit, words: str = "") -> CriterionKey:
-    return CriterionKey(letter_of(position), colour_of(position), limit.criterion, words)
+    return CriterionKey(letter_of(position), colour_of(position), criterion_text(limit), words)
 
 
 def _shared_key(position: int, places: list[list[Limit]]) -> CriterionKey:
@@ -136,5 +136,5 @@ def _words(curves: xr.Dataset, limits: list[Limit], units: str) -> str:
         )
     else:
         parts.append("No curve: too little known.")
-    told = "; ".join(f"{limit.criterion}: {limit.text}" for limit in limits)
+    told = "; ".join(f"{criterion_text(limit)}: {limit.text}" for limit in limits)
     return f"{' '.join(parts)} Limits: {told}."

@@ -1,4 +1,4 @@
-"""The shortest limits as lanes over one lead axis: each a line paid out from the start.
+"""The shortest limits as lanes over one lead axis, each a bar from the start of the forecast.
 
 Whole from the start to the lower end of the interval, hatched across the interval, a diamond at the
 limit; behind it the box of what is usual, with its median.
@@ -15,17 +15,17 @@ from ensemble_horizon.products.limits import Limit
 from ensemble_horizon.products.page.briefing import Briefing
 from ensemble_horizon.products.page.clock import Clock, Tick
 from ensemble_horizon.products.page.standing import (
-    percentile_words,
+    rank_words,
     standing_name,
     standing_words,
     usual_words,
 )
+from ensemble_horizon.products.tables import criterion_text
 from ensemble_horizon.products.wording import (
     duration,
     horizon_text,
     interval,
     lead_units,
-    with_units,
 )
 from ensemble_horizon.vocabulary import Status
 
@@ -60,7 +60,7 @@ class Lane:
     criterion: str
     standing: str
     standing_words: str
-    percentile: str
+    rank: str
     usual: str
     whole: Bar | None
     doubtful: Bar | None
@@ -97,8 +97,8 @@ def lane_chart(briefing: Briefing, clock: Clock) -> LaneChart:
         them = "it is" if left == 1 else "they are"
         what = "further limit" if left == 1 else "further limits"
         rest = f"{left} {what} of {total} not shown here; {them} in the table below."
-    usual = briefing.usual_of(shown[0]) if shown else None
-    detail = f"{_detail(shown, clock)} {_standing_sentence(usual)}".strip()
+    standing = _standing_sentence(briefing.usual_of(shown[0]), shown[0]) if shown else ""
+    detail = f"{_detail(shown, clock)} {standing}".strip()
     return LaneChart(
         lanes, clock.ticks(last), _headline(shown, total), detail, rest, lead_units(clock.units)
     )
@@ -110,7 +110,7 @@ def _headline(shown: list[Limit], total: int) -> str:
     if not shown:
         return "No limit can be stated tonight: too little is known, or nothing grows."
     first = shown[0]
-    what = f"{_criterion(first)}, {first.long_name}, {first.place}"
+    what = f"{criterion_text(first)}, {first.long_name}, {first.place}"
     if first.status == Status.beyond_run:
         end = duration(first.last_lead, first.horizon_units)
         return f"No limit is reached within the run ({end}), at any place, by any criterion."
@@ -126,17 +126,12 @@ def _detail(shown: list[Limit], clock: Clock) -> str:
     return f"The forecast holds for {shown[0].text}{f', until {moment}' if moment else ''}."
 
 
-def _criterion(limit: Limit) -> str:
-    """Return the name of a criterion, with units where it ends in a number."""
-    return with_units(limit.criterion, limit.threshold_units)
-
-
-def _standing_sentence(usual: Usual | None) -> str:
+def _standing_sentence(usual: Usual | None, limit: Limit) -> str:
     if usual is None or standing_name(usual) == "unknown":
         return ""
-    percentile = percentile_words(usual)
-    behind = f" ({percentile})" if percentile else ""
-    return f"That is {standing_words(usual)}{behind}."
+    rank = rank_words(usual)
+    behind = f" ({rank})" if rank else ""
+    return f"That is {standing_words(usual, limit)}{behind}."
 
 
 def _lane(limit: Limit, usual: Usual | None, clock: Clock, last: float) -> Lane:
@@ -166,7 +161,7 @@ def _lane(limit: Limit, usual: Usual | None, clock: Clock, last: float) -> Lane:
             spread += f", perhaps from {duration(limit.low, units)}"
     else:
         whole, doubtful, mark, end = None, None, 0.0, "start"
-        value, spread = "at once", "exceeded at the first lead"
+        value, spread = "at once", "reached at the first lead"
     box, median, opened = None, None, False
     if usual is not None and not np.isnan(usual.median):
         box, median = bar(usual.low, usual.high), share(usual.median)
@@ -178,10 +173,10 @@ def _lane(limit: Limit, usual: Usual | None, clock: Clock, last: float) -> Lane:
         until=clock.at(limit.horizon, zone="") if reached else "",
         place=limit.place,
         variable=limit.long_name,
-        criterion=_criterion(limit),
-        standing=standing_name(usual),
-        standing_words=standing_words(usual),
-        percentile=percentile_words(usual, short=True),
+        criterion=criterion_text(limit),
+        standing=standing_name(usual, limit),
+        standing_words=standing_words(usual, limit),
+        rank=rank_words(usual, short=True),
         usual=usual_words(usual, units),
         whole=whole,
         doubtful=doubtful,
@@ -206,4 +201,4 @@ def _lane_words(limit: Limit, usual: Usual | None) -> str:
     )
     known = usual_words(usual, limit.horizon_units)
     behind = f"; usual {known}" if known != "–" else "; usual not known"
-    return f"{limit.place}, {limit.long_name}, {limit.criterion}: {text}{behind}"
+    return f"{limit.place}, {limit.long_name}, {criterion_text(limit)}: {text}{behind}"

@@ -10,19 +10,19 @@ from ensemble_horizon.products.limits import Limit
 from ensemble_horizon.products.page.briefing import Briefing
 from ensemble_horizon.products.page.clock import Clock
 from ensemble_horizon.products.page.standing import (
-    percentile_words,
+    rank_words,
     standing_name,
     standing_words,
     usual_words,
 )
-from ensemble_horizon.products.tables import criterion_text
+from ensemble_horizon.products.tables import criterion_parts
 from ensemble_horizon.products.wording import duration
 from ensemble_horizon.vocabulary import Status
 
 STATUS_WORDS = {
     Status.reached: "within the run",
     Status.beyond_run: "beyond the run",
-    Status.at_start: "exceeded at the first lead",
+    Status.at_start: "reached at the first lead",
     Status.no_growth: "no growth, so no limit",
     Status.no_data: "too little known",
 }
@@ -39,7 +39,7 @@ class LimitRow:
     usual: str
     standing: str
     standing_words: str
-    percentile: str
+    rank: str
     status: str
     status_name: str
     doubling: str
@@ -77,15 +77,16 @@ def limit_tables(briefing: Briefing, clock: Clock) -> Iterator[VariableTable]:
 
 def _row(briefing: Briefing, limit: Limit, clock: Clock) -> LimitRow:
     usual = briefing.usual_of(limit)
+    criterion, threshold = criterion_parts(limit)
     return LimitRow(
-        criterion=limit.criterion,
-        threshold=criterion_text(limit).removeprefix(limit.criterion).strip(" ()"),
+        criterion=criterion,
+        threshold=threshold,
         limit=limit.text,
         until=clock.at(limit.horizon) if limit.status == Status.reached else "",
         usual=usual_words(usual, limit.horizon_units),
-        standing=standing_name(usual),
-        standing_words=standing_words(usual),
-        percentile=percentile_words(usual),
+        standing=standing_name(usual, limit),
+        standing_words=standing_words(usual, limit),
+        rank=rank_words(usual),
         status=STATUS_WORDS[limit.status],
         status_name=limit.status.name,
         doubling=duration(limit.doubling_time, limit.horizon_units),

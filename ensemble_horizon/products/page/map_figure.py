@@ -11,9 +11,10 @@ from itertools import groupby
 import numpy as np
 import xarray as xr
 
+from ensemble_horizon.products.hour_scale import HourScale
 from ensemble_horizon.products.limits import VariableResult
 from ensemble_horizon.products.map_legend import MapField, legend_entries, map_notes, status_shares
-from ensemble_horizon.products.maps import map_content
+from ensemble_horizon.products.maps import map_content, map_criterion, shared_scales
 from ensemble_horizon.products.page.map_picture import (
     Label,
     MapPicture,
@@ -64,7 +65,7 @@ class MapFigure:
     variable: str
     long_name: str
     criterion: str
-    subtitle: str
+    criterion_words: str
     picture: MapPicture
     source: str
     outlines: tuple[Outline, ...]
@@ -99,9 +100,13 @@ class MapPart:
 
 
 def map_part(results: tuple[VariableResult, ...], ground: Ground) -> MapPart:
-    """Return the maps of all variables and criteria; a grid that maps share is told once."""
+    """Return the maps of all variables and criteria; a grid that maps share is told once.
+
+    Maps of the same lead units share a scale: the same colour is the same lead all over the page.
+    """
     figures: list[MapFigure] = []
     grids: dict[str, str] = {}
+    scales = shared_scales(_all_contents(results))
     for result in results:
         if result.maps is None:
             continue
@@ -112,8 +117,17 @@ def map_part(results: tuple[VariableResult, ...], ground: Ground) -> MapPart:
         grid = f"grid-{hashlib.sha256(told.encode()).hexdigest()[:8]}"
         grids[grid] = told
         for one in _criteria(maps, result):
-            figures.append(_figure(len(figures) + 1, one, view, raster, grid, ground))
+            scale = scales[lead_units(map_content(one).units)]
+            figures.append(_figure(len(figures) + 1, one, view, raster, grid, ground, scale))
     return MapPart(tuple(figures), tuple(grids.items()))
+
+
+def _all_contents(results: tuple[VariableResult, ...]) -> Iterator[MapField]:
+    for result in results:
+        if result.maps is not None:
+            maps = result.maps.isel({START: 0})
+            for column in range(maps.sizes[CRITERION]):
+                yield map_content(maps.isel({CRITERION: column}).compute())
 
 
 def _criteria(maps: xr.Dataset, result: VariableResult) -> Iterator[xr.Dataset]:
@@ -125,10 +139,16 @@ def _criteria(maps: xr.Dataset, result: VariableResult) -> Iterator[xr.Dataset]:
 
 
 def _figure(
-    number: int, one: xr.Dataset, view: MapView, raster: Raster, grid: str, ground: Ground
+    number: int,
+    one: xr.Dataset,
+    view: MapView,
+    raster: Raster,
+    grid: str,
+    ground: Ground,
+    scale: HourScale,
 ) -> MapFigure:
     content = map_content(one)
-    picture = map_picture(view, content, ground)
+    picture = map_picture(view, content, ground, scale)
     size = (picture.width, picture.height)
     shares = status_shares(view, content, *size)
     entries = legend_entries(content, shares)
@@ -139,7 +159,7 @@ def _figure(
         variable=str(one.attrs.get("variable", "variable")),
         long_name=long_name,
         criterion=str(one[CRITERION].values),
-        subtitle=content.subtitle,
+        criterion_words=map_criterion(one),
         picture=picture,
         source=data_uri(picture.png),
         outlines=tuple(_outlines(view, ground, picture)),
@@ -183,7 +203,7 @@ def _words(
 ) -> str:
     """Say in words what the picture shows: shares of area, the middle, the shortest and where."""
     parts = [
-        f"Map of the limit of {long_name}, {one[CRITERION].values}.",
+        f"Map of the limit of {long_name}, {map_criterion(one)}.",
         f"Share of the area: {'; '.join(entries)}.",
     ]
     values = np.where(content.status == Status.reached, content.horizon, np.nan)

@@ -10,7 +10,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.image import imsave
 
-from ensemble_horizon.products.hour_scale import HourScale, hour_scale, ramp, status_colours
+from ensemble_horizon.products.hour_scale import HourScale, ramp, status_colours
 from ensemble_horizon.products.isolines import label_places
 from ensemble_horizon.products.map_ground import draw_graticule, draw_ground
 from ensemble_horizon.products.map_legend import MapField
@@ -48,14 +48,13 @@ class MapPicture:
     parallels: tuple[Label, ...]
 
 
-def map_picture(view: MapView, content: MapField, ground: Ground) -> MapPicture:
+def map_picture(view: MapView, content: MapField, ground: Ground, scale: HourScale) -> MapPicture:
     """Draw a map to the rim of its picture: colours, hatches, coasts, lines of equal lead time."""
     size = view.pixel_size(_WIDEST, _HIGHEST)
     width, height = size
     sheet = Sheet(width, height)
     axes = sheet.axes(0, 0, width, height)
     values = np.where(content.status == Status.reached, content.horizon, np.nan)
-    scale = hour_scale(values, content.units)
     paint_map(axes, view, values, content.status, scale, size)
     draw_ground(axes, view, Ground((), ground.coastline), width)
     lines = draw_contours(axes, view, values, scale, size)

@@ -2,25 +2,27 @@
 
 from __future__ import annotations
 
-from collections import Counter
-from dataclasses import replace
+from collections.abc import Sequence
 from importlib import resources
-from typing import Any, NamedTuple
+from typing import Any
 
-import xarray as xr
 from jinja2 import Environment, FunctionLoader, StrictUndefined
 from markupsafe import Markup
 
 from ensemble_horizon.products.gains import summary_words, telling_first
+from ensemble_horizon.products.limits import Limit
 from ensemble_horizon.products.page.briefing import Briefing
 from ensemble_horizon.products.page.clock import clock_of, moment_words
 from ensemble_horizon.products.page.curve_plot import LEFT, RIGHT, WIDTH
 from ensemble_horizon.products.page.curve_words import curve_groups
+from ensemble_horizon.products.page.error_rows import middle_and_last, outcome
 from ensemble_horizon.products.page.lanes import lane_chart
 from ensemble_horizon.products.page.limit_rows import limit_tables
 from ensemble_horizon.products.page.map_figure import map_part
+from ensemble_horizon.products.page.naming import told_apart
 from ensemble_horizon.products.page.policy import content_policy
-from ensemble_horizon.products.wording import duration
+from ensemble_horizon.products.score_sentences import of_place_first, two_digits
+from ensemble_horizon.products.wording import crossing_words, duration
 from ensemble_horizon.vocabulary import CAUTION
 
 _PACKAGE = "ensemble_horizon.products.page"
@@ -38,30 +40,8 @@ def page_text(briefing: Briefing) -> str:
         keep_trailing_newline=True,
     )
     environment.filters["duration"] = duration
+    environment.filters["two_digits"] = two_digits
     return environment.get_template(_TEMPLATE).render(_content(told_apart(briefing)))
-
-
-def told_apart(briefing: Briefing) -> Briefing:
-    """Return the briefing with the name of the settings behind each long name that two share."""
-    curves = [result.curves for result in briefing.results]
-    shared = Counter(str(item.attrs.get("long_name", "")) for item in curves)
-    if max(shared.values()) == 1:
-        return briefing
-    named = []
-    for result in briefing.results:
-        long_name = str(result.curves.attrs.get("long_name", ""))
-        if shared[long_name] > 1:
-            words = f"{long_name} ({result.curves.attrs.get('variable', 'variable')})".strip()
-            maps = None if result.maps is None else result.maps.assign_attrs(long_name=words)
-            named.append(_Named(result.curves.assign_attrs(long_name=words), maps))
-        else:
-            named.append(_Named(result.curves, result.maps))
-    return replace(briefing, results=tuple(named))
-
-
-class _Named(NamedTuple):
-    curves: xr.Dataset
-    maps: xr.Dataset | None
 
 
 def packaged(name: str) -> str:
@@ -78,6 +58,10 @@ def _content(briefing: Briefing) -> dict[str, Any]:
     versions = briefing.versions
     names = {limit.variable: limit.long_name for limit in limits}
     start = moment_words(clock.start) if clock.start else briefing.start
+    first = next(iter(briefing.shortest_first()), None)
+    here, there = of_place_first(
+        briefing.skill, first.place if first else "", first.variable if first else ""
+    )
     return {
         "briefing": briefing,
         "start": start,
@@ -96,6 +80,24 @@ def _content(briefing: Briefing) -> dict[str, Any]:
         "versions": versions,
         "gains": telling_first(versions.rows) if versions else [],
         "gains_words": summary_words(versions.rows) if versions else "",
+        "errors": middle_and_last(versions.errors) if versions else [],
+        "errors_words": outcome(versions.errors, versions.version_a, versions.version_b)
+        if versions
+        else "",
+        "skill_here": here,
+        "skill_there": there,
+        "headline_place": first.place if first else "",
+        "meaning": _meaning(limits)[0],
+        "crossings": f"W{_meaning(limits)[1][1:]}",
         "names": names,
         "caution": CAUTION,
     }
+
+
+def _meaning(limits: Sequence[Limit]) -> tuple[str, str]:
+    """Say what a limit is, and where a curve has it; for how long where all variables agree."""
+    holds = {(limit.hold, limit.horizon_units) for limit in limits}
+    if len(holds) > 1:
+        lasting = "for as long as the settings ask of the variable"
+        return f"is first reached {lasting}", f"where the curve first reaches it {lasting}"
+    return crossing_words(*next(iter(holds), (0.0, "hours")))
