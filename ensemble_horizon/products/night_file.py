@@ -13,7 +13,7 @@ import numpy as np
 from ensemble_horizon.errors import ArgumentError, InputError, ProductError
 from ensemble_horizon.products.netcdf import encoded_starts, global_attributes, open_new, put
 from ensemble_horizon.products.nights import Measure, Night, NightLimit
-from ensemble_horizon.products.sealed import seal, unsealed
+from ensemble_horizon.products.sealed import seal, sealed_bytes, unsealed
 from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.vocabulary import LIMIT, START, STATUS_ATTRIBUTES, Status
 
@@ -100,16 +100,7 @@ def read_night_file(path: str | os.PathLike[str]) -> Night:
     InputError
         If it cannot be read, or is not whole and unchanged: its digest is checked.
     """
-    try:
-        content = Path(path).read_bytes()
-    except OSError as error:
-        raise InputError(
-            str(path),
-            expected="a file that can be read",
-            found=error.strerror or type(error).__name__,
-            remedy="give permission to read it, or name another file",
-        ) from error
-    return night_from(content, str(path))
+    return night_from(sealed_bytes(path), str(path))
 
 
 def night_from(content: bytes, name: str) -> Night:

@@ -14,7 +14,7 @@ import numpy as np
 
 from ensemble_horizon.errors import InputError, ProductError
 from ensemble_horizon.products.netcdf import open_new, put, valid_name, version_of
-from ensemble_horizon.products.sealed import seal, unsealed
+from ensemble_horizon.products.sealed import seal, sealed_bytes, unsealed
 from ensemble_horizon.products.writing import written_whole
 from ensemble_horizon.serial.starts import start_names
 from ensemble_horizon.skill.quantities import QUANTITIES
@@ -165,16 +165,7 @@ def read_score_sums(path: str | os.PathLike[str]) -> StartSums:
     OtherFormatError
         If another version of the program wrote it.
     """
-    try:
-        content = Path(path).read_bytes()
-    except OSError as error:
-        raise InputError(
-            str(path),
-            expected="a file that can be read",
-            found=error.strerror or type(error).__name__,
-            remedy="give permission to read it, or name another file",
-        ) from error
-    return sums_from(content, str(path))
+    return sums_from(sealed_bytes(path), str(path))
 
 
 def sums_from(content: bytes, name: str) -> StartSums:

@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import hashlib
+import os
 from pathlib import Path
+
+from ensemble_horizon.errors import InputError
 
 SET_ASIDE = "set_aside"
 _SEAL = b"\nsha256 "
@@ -15,6 +18,25 @@ def seal(path: Path) -> None:
     line = _line(path.read_bytes())
     with path.open("ab") as tail:
         tail.write(line)
+
+
+def sealed_bytes(path: str | os.PathLike[str]) -> bytes:
+    """All bytes of a file, its seal included.
+
+    Raises
+    ------
+    InputError
+        If it cannot be read.
+    """
+    try:
+        return Path(path).read_bytes()
+    except OSError as error:
+        raise InputError(
+            str(path),
+            expected="a file that can be read",
+            found=error.strerror or type(error).__name__,
+            remedy="give permission to read it, or name another file",
+        ) from error
 
 
 def unsealed(content: bytes) -> bytes | None:
