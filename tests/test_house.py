@@ -133,7 +133,7 @@ def test_plotting_libraries_load_late():
     import subprocess
     import sys
 
-    code = "import sys, ensemble_horizon, ensemble_horizon.night.briefing as b; "
+    code = "import sys, ensemble_horizon, ensemble_horizon.night.writing as b; "
     code += "print('matplotlib' in sys.modules)"
     found = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert found.stdout.strip() == "False"

@@ -9,8 +9,8 @@ from rich.table import Table
 from rich.text import Text
 
 from ensemble_horizon.cli.session import common_options, console, progress
-from ensemble_horizon.night.briefing import estimate_and_write
 from ensemble_horizon.night.plan import Plan, VariablePlan, plan_estimate
+from ensemble_horizon.night.writing import estimate_and_write
 from ensemble_horizon.products import limits_table
 from ensemble_horizon.settings import read_settings
 

@@ -16,7 +16,6 @@ import xarray as xr
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.horizon.usual import Usual
 from ensemble_horizon.night.archive import NightUsual, UsualOptions, usual_of_night
-from ensemble_horizon.night.briefing import map_ground
 from ensemble_horizon.night.chain.owner import require_own
 from ensemble_horizon.night.provenance import (
     calibration_words,
@@ -25,6 +24,7 @@ from ensemble_horizon.night.provenance import (
     time_of_making,
 )
 from ensemble_horizon.night.results import VariableResult
+from ensemble_horizon.night.writing import map_ground
 from ensemble_horizon.products.folder import moved_together
 from ensemble_horizon.products.limits import VariableResult as AnyResult
 from ensemble_horizon.products.limits import start_labels

@@ -87,7 +87,7 @@ def test_files_are_closed_at_the_end(on, tmp_path):
 
 
 def test_the_libraries_of_a_cluster_load_when_one_is_named():
-    code = "import sys, ensemble_horizon.cli.estimate, ensemble_horizon.night.briefing; "
+    code = "import sys, ensemble_horizon.cli.estimate, ensemble_horizon.night.writing; "
     code += "print('distributed' in sys.modules, 'dask' in sys.modules)"
     found = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert found.stdout.split() == ["False", "False"]

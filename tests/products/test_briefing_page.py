@@ -864,8 +864,8 @@ def test_status_is_told_in_words_wherever_it_is_shown(page):
 def test_the_example_night_with_six_maps_is_below_a_megabyte_and_a_half(tmp_path):
     from pathlib import Path
 
-    from ensemble_horizon.night.briefing import map_ground
     from ensemble_horizon.night.estimate import estimate
+    from ensemble_horizon.night.writing import map_ground
     from ensemble_horizon.settings import read_settings
 
     settings = read_settings(Path(__file__).parents[2] / "configs" / "example.toml")

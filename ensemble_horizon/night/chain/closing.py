@@ -15,7 +15,6 @@ from ensemble_horizon.errors import InputError
 from ensemble_horizon.horizon.usual import Usual
 from ensemble_horizon.night.archive import NIGHTS, UsualOptions, file_night, usual_of_night
 from ensemble_horizon.night.brief import PAGE, SHEET, assemble_briefing, write_briefing
-from ensemble_horizon.night.briefing import calibration_note
 from ensemble_horizon.night.chain.fingerprint import lasting, marks_of
 from ensemble_horizon.night.chain.report import number
 from ensemble_horizon.night.chain.stages import (
@@ -26,6 +25,7 @@ from ensemble_horizon.night.chain.stages import (
     about_stage,
 )
 from ensemble_horizon.night.chain.work import Work
+from ensemble_horizon.night.writing import calibration_note
 from ensemble_horizon.products.night_file import read_night_file
 from ensemble_horizon.products.nights import Night, night_of, start_of_name
 from ensemble_horizon.products.page import VersionsTable, read_versions

@@ -13,7 +13,6 @@ from pathlib import Path
 from typing import Any, ClassVar
 
 from ensemble_horizon.errors import InputError
-from ensemble_horizon.night.briefing import drawn_by, map_ground, write_estimate
 from ensemble_horizon.night.chain.fingerprint import canonical
 from ensemble_horizon.night.chain.report import number
 from ensemble_horizon.night.chain.state import write_plain
@@ -22,6 +21,7 @@ from ensemble_horizon.night.estimate import Estimate, estimate_input
 from ensemble_horizon.night.input import open_input
 from ensemble_horizon.night.mapping import map_plan
 from ensemble_horizon.night.verification.rolling import rolling_scores, write_rolling
+from ensemble_horizon.night.writing import drawn_by, map_ground, write_estimate
 from ensemble_horizon.products.limits import Limit, limits
 from ensemble_horizon.runs.faults import Effect, Fault
 from ensemble_horizon.runs.files import find_files

@@ -11,7 +11,6 @@ import numpy as np
 import xarray as xr
 
 from ensemble_horizon.errors import ProductError
-from ensemble_horizon.night.briefing import drawn_by, map_ground
 from ensemble_horizon.night.comparison.common import CommonGround, common_ground
 from ensemble_horizon.night.comparison.factors import (
     SharedNoise,
@@ -26,6 +25,7 @@ from ensemble_horizon.night.comparison.scores import score_differences
 from ensemble_horizon.night.estimate import Progress, estimate_input, silent
 from ensemble_horizon.night.results import VariableResult, without_pooled
 from ensemble_horizon.night.waiting import shares_of
+from ensemble_horizon.night.writing import drawn_by, map_ground
 from ensemble_horizon.products import write_versions
 from ensemble_horizon.settings import Settings
 from ensemble_horizon.versions import compare_horizons, false_discovery

@@ -5,10 +5,10 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-from ensemble_horizon.night.briefing import drawn_by, map_ground, provenance
 from ensemble_horizon.night.estimate import Progress, silent
 from ensemble_horizon.night.verification.calibrating import calibrations
 from ensemble_horizon.night.verification.verifying import Verification, verify
+from ensemble_horizon.night.writing import drawn_by, map_ground, provenance
 from ensemble_horizon.products.calibration_file import write_calibration_file
 from ensemble_horizon.products.score_folder import write_scores
 from ensemble_horizon.settings import Settings
