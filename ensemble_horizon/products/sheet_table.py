@@ -176,12 +176,12 @@ def fitted_criterion(limit: Limit, room: float, size: float, *, most: int = 1) -
     lines = broken(criterion_text(limit), room, size, most=most)
     if not lines or not lines[-1].endswith("…"):
         return lines
+    chance = limit.criterion_kind == "chance" and bool(limit.rule)
+    # A chance told in words takes room: its short form has both of its numbers.
+    short = f"{limit.rule} {limit.units}" if chance else threshold
     if not threshold:
-        # A chance told in words: the short form, which has both of its numbers.
-        chance = limit.criterion_kind == "chance" and bool(limit.rule)
-        short = f"{limit.rule} {limit.units}" if chance else criterion_text(limit)
-        return broken(short, room, size, most=most)
-    behind = f"({threshold})"
+        return broken(short or criterion_text(limit), room, size, most=most)
+    behind = f"({short})"
     if most > 1:
         return [*broken(name, room, size, most=most - 1), shortened(behind, room, size)]
     left = room - text_width(f" {drawable(behind)}", size)
