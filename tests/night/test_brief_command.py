@@ -142,6 +142,7 @@ def archived(night, count, shift):
             tonight, start=start, limits=tuple(limits)), {"version": "0"})  # fmt: skip
 
 
+@pytest.mark.slow
 def test_what_is_usual_comes_from_the_archive(products):
     archived(products, 12, 20)
     broken = products.folder / "archive" / "nights" / "20310201T00.nc"

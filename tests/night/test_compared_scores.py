@@ -121,6 +121,7 @@ def test_the_netcdf_product_has_what_the_table_has(archive, compared):
         )
 
 
+@pytest.mark.slow
 def test_the_netcdf_product_with_scores_complies_with_cf(archive, compared):
     from test_compliant_products import complaints
 
@@ -166,6 +167,7 @@ def without_members(archive, count, folder):
     return text.replace("members = 6", f"members = {count}")
 
 
+@pytest.mark.slow
 def test_squared_errors_are_those_of_as_many_members(archive):
     text = without_members(archive, 3, "C").replace("minimum_members = 5", "minimum_members = 2")
     printed, rows = compare_with(archive, "three", text)
@@ -186,6 +188,7 @@ def test_squared_errors_are_those_of_as_many_members(archive):
     np.testing.assert_allclose(found, expected, rtol=1e-5)
 
 
+@pytest.mark.slow
 def test_gaps_of_the_analyses_are_listed(archive):
     with xr.open_dataset(archive / "analyses.nc", decode_times=False) as data:
         time = next(dim for dim in data.x.dims if "since" in data[dim].attrs.get("units", ""))
@@ -198,6 +201,7 @@ def test_gaps_of_the_analyses_are_listed(archive):
     assert {row["starts"] for row in last} == {"11"}
 
 
+@pytest.mark.slow
 def test_calibrated_versions_have_the_noise_of_their_factors(archive):
     plain = {}
     for version in "AB":

@@ -404,6 +404,7 @@ def test_resamples_give_a_second_opinion_beside_the_intervals(archive):
     assert "second opinion" in text
 
 
+@pytest.mark.slow
 def test_products_of_estimate_and_verify_share_a_folder(archive):
     archive.write()
     config = archive.settings(REGION, products='maps = "none"\nfigures = true')
@@ -426,6 +427,7 @@ def test_what_is_verified_must_be_named(archive, refusal):
     refusal(result, 2, "observations.wind: no variable", "analyses.names.t3: no variable")
 
 
+@pytest.mark.slow
 def test_products_keep_the_conventions(archive):
     """Judged by the open CF compliance checker."""
     suite_of = pytest.importorskip("compliance_checker.suite")

@@ -191,6 +191,7 @@ def test_what_stands_on_the_sheet(tmp_path):
     assert "more on the page" not in words
 
 
+@pytest.mark.slow
 def test_what_does_not_fit_is_counted(tmp_path):
     told = many_limits()
     words = words_of(write_sheet(tmp_path / "briefing.pdf", told))
@@ -200,6 +201,7 @@ def test_what_does_not_fit_is_counted(tmp_path):
     assert 9 - 5 in counts  # troubles
 
 
+@pytest.mark.slow
 def test_names_break_where_there_is_room_and_a_threshold_is_never_cut(tmp_path):
     long = "a place with a name that is much too long for one line of a narrow column"
     criteria = ("crane work at the far end of the quay, all winds, day and night",)
