@@ -227,8 +227,7 @@ class _Job:
         if variable.name in self.factors:
             fields = self.factors[variable.name].fields(fields, self.layout)
         with _timed(f"mapping {variable.name}"):
-            found = map_fields(engine, self.catalogue.leads, fields, variable, self.layout, options)
-        return {name: found[name] for name in self.plan.fields or found}
+            return map_fields(engine, self.catalogue.leads, fields, variable, self.layout, options)
 
     def _result(
         self,

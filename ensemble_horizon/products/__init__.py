@@ -21,6 +21,7 @@ No statistics are done here. Plotting libraries load when a figure is drawn, not
 ``map_legend``     what stands around a map
 ``map_ground``     what every map stands on
 ``maps``           horizon maps
+``panel_grid``     panels in rows and columns on a sheet
 ``curve_panel``    one panel of growth curves
 ``curve_figures``  growth curves, place by place
 ``drawing``        the figures, one record each

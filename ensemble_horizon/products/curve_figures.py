@@ -13,7 +13,8 @@ from matplotlib.patches import Rectangle
 from ensemble_horizon.errors import ArgumentError
 from ensemble_horizon.products.curve_panel import BAND, LAW_INK, Panel, colour_of, draw_panel
 from ensemble_horizon.products.limits import Limit, curve_limits
-from ensemble_horizon.products.sheet import INK, SOFT_INK, Sheet, line_height, wrapped
+from ensemble_horizon.products.panel_grid import PanelGrid
+from ensemble_horizon.products.sheet import INK, Sheet, wrapped
 from ensemble_horizon.products.tables import criterion_text
 from ensemble_horizon.products.wording import interval_name, lead_units
 from ensemble_horizon.vocabulary import CAUTION, CRITERION, LEAD, PLACE, START, Status
@@ -81,10 +82,9 @@ def draw_growth_curves(
 
 def _draw_sheet(panels: Sequence[Panel], path: Path) -> Path:
     columns = 1 if len(panels) == 1 else 2 if len(panels) <= 4 else 3
-    rows = -(-len(panels) // columns)
-    first = panels[0].limits[0]
-    width = _MARGIN + columns * (panels[0].width + _GAP) - _GAP + 34
-    room = width - 40
+    size = (panels[0].width, panels[0].height)
+    grid = PanelGrid(len(panels), columns, *size, margin=_MARGIN, gap=_GAP, space=12)
+    first, room = panels[0].limits[0], grid.room
     title = wrapped(f"How fast the members part: {first.long_name}", room, 13.5, most=2, bold=True)
     units = str(panels[0].curves.attrs.get("units", "1"))
     unit = "" if units == "1" else f"   ·   spread in {units}"
@@ -94,20 +94,10 @@ def _draw_sheet(panels: Sequence[Panel], path: Path) -> Path:
     entries = _entries(panels)
     legend = _set_out(entries, room)
     notes = wrapped(_strip_note(panels), room, 7.5) + wrapped(CAUTION, room, 7.5)
-    head = 16 + len(title) * line_height(13.5) + len(subtitle) * line_height(9.5) + 10
-    upper = head + len(legend) * 22 + 14
-    each = panels[0].height
-    foot = upper + rows * each + (rows - 1) * 12 + 8
-    sheet = Sheet(int(width), int(foot + len(notes) * line_height(7.5) + 14))
-    sheet.text(20, 16, "\n".join(title), size=13.5, weight="bold")
-    lower = 18 + len(title) * line_height(13.5)
-    sheet.text(20, lower, "\n".join(subtitle), size=9.5, colour=SOFT_INK)
+    sheet, head, upper = grid.sheet(title, subtitle, len(legend), notes)
     _legend(sheet, legend, head)
-    for position, panel in enumerate(panels):
-        row, column = divmod(position, columns)
-        left = _MARGIN + column * (panel.width + _GAP)
-        draw_panel(sheet, panel, left, upper + row * (each + 12))
-    sheet.text(20, foot, "\n".join(notes), size=7.5, colour=SOFT_INK)
+    for panel, corner in zip(panels, grid.corners(upper), strict=True):
+        draw_panel(sheet, panel, *corner)
     return sheet.save(path, software=SOFTWARE)
 
 

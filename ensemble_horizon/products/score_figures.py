@@ -12,6 +12,7 @@ from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
 from matplotlib.ticker import MaxNLocator
 
+from ensemble_horizon.products.panel_grid import PanelGrid
 from ensemble_horizon.products.score_panel import INKS, ScorePanel, draw_score_panel, plural
 from ensemble_horizon.products.scores import ScoredVariable, skill_limits
 from ensemble_horizon.products.sheet import FAINT, INK, SOFT_INK, Sheet, line_height, wrapped
@@ -133,9 +134,9 @@ def _rank_bars(axes: Axes, share: np.ndarray, highest: float, *, labels: bool) -
 
 def _score_sheet(data: xr.Dataset, panels: Sequence[ScorePanel], path: Path) -> Path:
     columns = min(len(panels), 3)
-    rows = -(-len(panels) // columns)
-    width = _MARGIN + columns * (panels[0].width + _GAP) - _GAP + 34
-    room = width - 40
+    size = (panels[0].width, panels[0].height)
+    grid = PanelGrid(len(panels), columns, *size, margin=_MARGIN, gap=_GAP, space=14)
+    room = grid.room
     title = wrapped(f"How good the forecast was: {data.attrs['long_name']}", room, 13.5, bold=True)
     units = str(data.attrs["units"])
     unit = "" if units == "1" else f"   ·   errors in {units}"
@@ -151,20 +152,10 @@ def _score_sheet(data: xr.Dataset, panels: Sequence[ScorePanel], path: Path) -> 
         "(M + 1)/M. Dots: where a score falls to its level. "
     )
     notes = wrapped(note + CAUTION, room, 7.5)
-    head = 16 + len(title) * line_height(13.5) + len(subtitle) * line_height(9.5) + 10
-    upper = head + len(legend) * 22 + 14
-    each = panels[0].height
-    foot = upper + rows * each + (rows - 1) * 14 + 8
-    sheet = Sheet(int(width), int(foot + len(notes) * line_height(7.5) + 14))
-    sheet.text(20, 16, "\n".join(title), size=13.5, weight="bold")
-    lower = 18 + len(title) * line_height(13.5)
-    sheet.text(20, lower, "\n".join(subtitle), size=9.5, colour=SOFT_INK)
+    sheet, head, upper = grid.sheet(title, subtitle, len(legend), notes)
     _legend(sheet, legend, head)
-    for position, panel in enumerate(panels):
-        row, column = divmod(position, columns)
-        left = _MARGIN + column * (panel.width + _GAP)
-        draw_score_panel(sheet, panel, left, upper + row * (each + 14))
-    sheet.text(20, foot, "\n".join(notes), size=7.5, colour=SOFT_INK)
+    for panel, corner in zip(panels, grid.corners(upper), strict=True):
+        draw_score_panel(sheet, panel, *corner)
     return sheet.save(path, software=SOFTWARE)
 
 

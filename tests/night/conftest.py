@@ -202,3 +202,16 @@ def _write_member() -> Callable[..., Path]:
 @pytest.fixture(name="refusal")
 def _refusal() -> Callable[..., str]:
     return refusal
+
+
+@pytest.fixture
+def nightly(tmp_path, monkeypatch):
+    """Runs of two starts for the nightly chain, with a page that is made at once."""
+    from nightly_archive import MADE, Nightly, light_briefing
+
+    monkeypatch.setenv("SOURCE_DATE_EPOCH", MADE)
+    monkeypatch.setattr("ensemble_horizon.night.chain.closing.write_briefing", light_briefing)
+    made = Nightly(tmp_path)
+    made.write(13, 14)
+    made.settings()
+    return made

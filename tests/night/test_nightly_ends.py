@@ -10,7 +10,7 @@ import subprocess
 import sys
 
 import pytest
-from nightly_archive import MADE, Nightly, contents, light_briefing
+from nightly_archive import Nightly, contents, light_briefing
 from test_nightly_report import check
 from verification_archive import Archive
 
@@ -32,16 +32,6 @@ if sys.argv[1] == "estimate":
     stages.write_estimate = work
 main(sys.argv[2:])
 """
-
-
-@pytest.fixture
-def nightly(tmp_path, monkeypatch) -> Nightly:
-    monkeypatch.setenv("SOURCE_DATE_EPOCH", MADE)
-    monkeypatch.setattr("ensemble_horizon.night.chain.closing.write_briefing", light_briefing)
-    made = Nightly(tmp_path)
-    made.write(13, 14)
-    made.settings()
-    return made
 
 
 @pytest.fixture

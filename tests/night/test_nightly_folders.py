@@ -10,7 +10,7 @@ import sys
 from pathlib import Path
 
 import pytest
-from nightly_archive import MADE, Nightly, contents, light_briefing
+from nightly_archive import contents
 
 from ensemble_horizon.errors import ProductError
 from ensemble_horizon.night.chain.lock import LOCK_FILE, locked
@@ -30,16 +30,6 @@ with locked(Path(sys.argv[1]), sys.argv[2], "2031-02-14T06:00:00Z"):
     print("held", flush=True)
     sys.stdin.readline()
 """
-
-
-@pytest.fixture
-def nightly(tmp_path, monkeypatch) -> Nightly:
-    monkeypatch.setenv("SOURCE_DATE_EPOCH", MADE)
-    monkeypatch.setattr("ensemble_horizon.night.chain.closing.write_briefing", light_briefing)
-    made = Nightly(tmp_path)
-    made.write(13, 14)
-    made.settings()
-    return made
 
 
 def said(process: subprocess.Popen[str]) -> str:

@@ -6,7 +6,7 @@ import json
 import math
 
 import pytest
-from nightly_archive import MADE, Nightly, light_briefing
+from nightly_archive import light_briefing
 from verification_archive import Archive
 
 from ensemble_horizon.night.chain.report import number
@@ -23,16 +23,6 @@ LIMIT = {"variable", "place", "criterion", "status", "horizon", "low", "high", "
 USUAL = {"nights", "median", "low", "high", "percentile", "standing", "season"}
 ERROR = {"kind", "culprit", "expected", "found", "remedy"}
 STATES = {"done", "kept", "skipped", "failed", "not reached"}
-
-
-@pytest.fixture
-def nightly(tmp_path, monkeypatch) -> Nightly:
-    monkeypatch.setenv("SOURCE_DATE_EPOCH", MADE)
-    monkeypatch.setattr("ensemble_horizon.night.chain.closing.write_briefing", light_briefing)
-    made = Nightly(tmp_path)
-    made.write(13, 14)
-    made.settings()
-    return made
 
 
 def check(report: dict) -> dict:

@@ -10,7 +10,7 @@ import numpy as np
 
 from ensemble_horizon.errors import InputError
 from ensemble_horizon.night.engine import Engine
-from ensemble_horizon.night.reading import Block, plan_blocks, window_points
+from ensemble_horizon.night.reading import Block, block_budget, plan_blocks, window_points
 from ensemble_horizon.night.variables import Variable
 from ensemble_horizon.night.verification.faults import Judged, judge, no_members
 from ensemble_horizon.night.verification.maps import MapSums
@@ -140,7 +140,7 @@ class Starts:
 
     def _blocks(self, *starts: int) -> Iterator[Block]:
         """Blocks of some starts, or of all."""
-        budget = self._settings.engine.block_memory_mib * 2**20 // 3
+        budget = block_budget(self._settings.engine)
         for start in starts or range(self._catalogue.starts.size):
             yield from plan_blocks(self._catalogue, self._source.parts, self._number, start, budget)
 
